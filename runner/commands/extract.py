@@ -1,0 +1,64 @@
+"""`kneemap extract` and `kneemap report`: from a record to numbers, and from numbers to a page."""
+
+import json as json_module
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Any
+
+from runner.errors import Fault, InputError
+
+
+def extract_run(path: Path, *, json: bool) -> None:
+    """Extract a run, keep the result beside its record, and print it."""
+    result = extract_and_keep(path)
+    if json:
+        print(json_module.dumps(result, indent=2, ensure_ascii=False))
+    else:
+        print_result(result)
+        print(f"\nResult: {record_folder(path) / 'result.json'}")
+
+
+def report_run(path: Path) -> None:
+    """Write the report of a run; extract first where that has not been done."""
+    from runner.record import open_run
+    from runner.report import write_report
+
+    if open_run(path).result is None:
+        extract_and_keep(path)
+    print(f"Report: {write_report(record_folder(path))}")
+
+
+def extract_and_keep(path: Path) -> dict[str, Any]:
+    """Extract the run at ``path``, write the tables into its record and the result beside it; the result comes back."""
+    from runner.extraction import extract
+    from runner.record import open_run, write_extraction
+
+    run = open_run(path)
+    if len(run.points["point"]) == 0:
+        raise InputError([Fault(str(path), "the run holds no points yet; 'kneemap resume' goes on with it")])
+    extraction = extract(run)
+    write_extraction(record_folder(path), extraction.tables, extraction.result)
+    return extraction.result
+
+
+def record_folder(path: Path) -> Path:
+    """The folder that holds a record, named by itself or by its record.h5."""
+    return path if path.is_dir() else path.parent
+
+
+def print_result(result: Mapping[str, Any]) -> None:
+    """The result in a few lines: one table a part and method, then what is doubtful."""
+    from rich.console import Console
+
+    from runner.commands.tables import isat_table
+
+    console = Console()
+    for part in result["parts"]:
+        for method, numbers in part["methods"].items():
+            console.print(isat_table(part["label"], method, numbers, coverage=result["coverage"]))
+        flags = part.get("flags", [])
+        for flag in flags[:12]:
+            where = "" if flag.get("point") is None else f"point {flag['point']}: "
+            console.print(f"  {where}{flag['flag']}: {flag['text']}", markup=False, highlight=False)
+        if len(flags) > 12:
+            console.print(f"  … and {len(flags) - 12} more flags, in the report", markup=False)
