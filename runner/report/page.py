@@ -1,0 +1,321 @@
+"""The page: everything gathered, drawn, written into tables, and set into one template.
+
+`write_report` is the only function of this room that touches the disk, apart from saving pictures: it writes into the
+folder ``report/`` of the run, and replaces what an earlier report left there under the same names. The page holds its
+pictures and its style; it asks the network for nothing. Nothing on it depends on the time at which it was made, so the same
+run gives the same page.
+"""
+
+import math
+from collections.abc import Iterator, Mapping
+from datetime import UTC, datetime
+from pathlib import Path
+from typing import Any
+
+import jinja2
+import numpy as np
+
+from runner.record import Run, open_run
+from runner.report import look
+from runner.report.captures import draw_captures
+from runner.report.curves import draw_curves, draw_surface
+from runner.report.digits import NOTHING, celsius, duration, fixed, quantity, short
+from runner.report.facts import INDUCTANCE, METHOD_TITLES, Facts, MethodFacts, PartFacts, gather
+from runner.report.knee import draw_knees, draw_overview, draw_resistance
+from runner.report.night import MOST_NUMBERS, Mark, draw_night, marks
+from runner.report.picture import Pasted, Picture, save
+from runner.report.tables import Table, budget_table, flag_rows, knee_table, temperature_table
+from runner.report.words import headline, headline_drop, margin_text, plan_in_words, read_plan
+
+CAUTIONS = (
+    "Limits in software are no safety device. Interlock and emergency stop belong in hardware, and the rules of the "
+    "place and its qualified people come first.",
+    "The capacitor bank stores energy and stays charged after the supply is off: discharge it and measure that it is "
+    "discharged before touching anything.",
+    "Interrupting amperes in an inductor makes sparks and high voltage: open no connection under current.",
+    "The part, the shunt and everything in the chamber can burn the skin, and cold metal does too.",
+    "Large currents and magnets act at a distance: keep people with pacemakers or other implants away.",
+)
+_METHOD_WORDS = {
+    "pulse": "Pulse method: a charged capacitor bank is switched onto the part, and the voltage across it and the current "
+    "through it are digitized. The flux linkage λ is the integral of the voltage less the winding's own drop; the "
+    "differential inductance is its slope, L_d = dλ/di. No constant voltage is assumed.",
+    "bias": "Bias method: a direct current flows through the part and a meter measures its inductance for a small signal "
+    "on top: the incremental (reversible) inductance.",
+}
+_MEANINGS = {
+    "pulse": "The slope of flux linkage against current, L_d = dλ/di, while the current rises from zero.",
+    "bias": "The inductance for a small signal on top of a direct current. In a core with hysteresis it is lower than the "
+    "differential inductance of the pulse method; the two are never merged.",
+}
+_FINISHED = "finished"
+
+
+def write_report(folder: Path) -> Path:
+    """Write the report of a run.
+
+    Args:
+        folder: the run's folder; extraction may be missing, the run may be unfinished.
+
+    Returns:
+        The page, ``report/index.html`` in the folder; beside it a PNG and a CSV for each picture.
+
+    Raises:
+        InputError: ``folder`` is not a run.
+    """
+    run = open_run(folder)
+    into = Path(folder) / "report"
+    into.mkdir(exist_ok=True)
+    page = into / "index.html"
+    with look.settings():
+        text = _render(_context(run, into))
+    page.write_text(text, encoding="utf-8", newline="\n")
+    return page
+
+
+def _context(run: Run, into: Path) -> dict[str, Any]:
+    plan = read_plan(run.plan_bytes)
+    facts = gather(run, {})
+    told = marks(run)
+
+    def paste(picture: Picture | None) -> Pasted | None:
+        return save(picture, into) if picture else None
+
+    return {
+        "css": _template_text("page.css"),
+        "title": run.title,
+        "under": _under(run),
+        "troubles": list(_troubles(run, facts)),
+        "parts": [_part(run, facts, part, paste) for part in facts.parts],
+        "together": _together(facts, paste),
+        "tested": list(plan_in_words(plan)),
+        "methods": [_METHOD_WORDS[name] for name in _METHOD_WORDS if name in plan or _has(facts, name)],
+        "cautions": CAUTIONS,
+        "run_in_time": _run_in_time(run),
+        "night": paste(draw_night(run, told)),
+        "legs": _leg_rows(run),
+        "marks": [_mark_row(run, mark) for mark in told[:MOST_NUMBERS]],
+        "marks_left": max(0, len(told) - MOST_NUMBERS),
+        "instruments": [(i.role.replace("_", " "), i.vendor, i.model, i.serial, i.firmware) for i in run.instruments],
+        "calibration": _calibration(run),
+        "versions": list(_versions(run)),
+        "files": [
+            (name, data.decode("utf-8", errors="replace"))
+            for name, data in ((run.plan_name, run.plan_bytes), (run.bench_name, run.bench_bytes))
+            if data
+        ],
+    }
+
+
+def _part(run: Run, facts: Facts, part: PartFacts, paste: Any) -> dict[str, Any]:
+    known = _places(run)
+    return {
+        "slug": part.slug,
+        "label": part.label,
+        "description": part.description,
+        "headline": headline(facts, part),
+        "sentences": [str(text) for text in part.extras.get("sentences") or []],
+        "methods": [_method(facts, part, method, paste) for method in part.methods],
+        "saturation": paste(draw_knees(facts, part)),
+        "resistance": paste(draw_resistance(facts, part)),
+        "resistance_tables": [
+            temperature_table(facts, f"Winding resistance, {method.name} method", method.resistance, "ohm")
+            for method in part.methods
+            if method.resistance
+        ],
+        "captures": paste(draw_captures(run, part, _knee_by_leg(run, part))),
+        "cross_check": [str(row.get("text", "")) for row in part.extras.get("cross_check") or []],
+        "flags": flag_rows(part, known),
+    }
+
+
+def _method(facts: Facts, part: PartFacts, method: MethodFacts, paste: Any) -> dict[str, Any]:
+    inductance = INDUCTANCE[method.name]
+    initial = temperature_table(facts, f"Initial {inductance}", method.initial, "H") if method.initial else None
+    budgets = [budget_table(entry) for entry in method.extras.get("budget") or []]
+    return {
+        "title": METHOD_TITLES[method.name],
+        "inductance": inductance,
+        "meaning": _MEANINGS[method.name],
+        "knees": knee_table(facts, part, method) if method.knees else None,
+        "curves": paste(draw_curves(facts, part, method)),
+        "surface": paste(draw_surface(part, method)),
+        "initial": initial,
+        "budgets": [budget for budget in budgets if budget],
+        "extras": [],
+    }
+
+
+def _together(facts: Facts, paste: Any) -> dict[str, Any] | None:
+    if len(facts.parts) < 2:
+        return None
+    drops = [drop for part in facts.parts for m in part.methods[:1] if (drop := headline_drop(m)) is not None]
+    if not drops:
+        return None
+    drop = max(set(drops), key=drops.count)
+    rows = []
+    for part in facts.parts:
+        method = next((m for m in part.methods if m.knees_at(drop)), None)
+        knees = method.knees_at(drop) if method else ()
+        reached = [knee for knee in knees if knee.is_reached]
+        if method is None or not reached:
+            rows.append(((part.label,), (NOTHING,), ("not reached" if knees else NOTHING,), (NOTHING,)))
+            continue
+        worst = min(reached, key=lambda knee: knee.estimate.value)
+        rows.append(
+            (
+                (part.label, f"{method.name} method"),
+                (fixed(worst.temperature_degC, 1),),
+                (quantity(worst.estimate.value, "A"),),
+                (margin_text(worst, part.rated_current) or NOTHING,),
+            )
+        )
+    table = Table(
+        f"Lowest saturation current of each part, {100 * drop:.3g} % drop",
+        ("Part", "Temperature (°C)", "Saturation current", "Margin to the rated current"),
+        tuple(rows),
+    )
+    return {"table": table, "picture": paste(draw_overview(facts, drop))}
+
+
+def _has(facts: Facts, method: str) -> bool:
+    return any(part.method(method) for part in facts.parts)
+
+
+def _under(run: Run) -> str:
+    when = datetime.fromtimestamp(run.start, UTC).strftime("%Y-%m-%d %H:%M UTC")
+    what = "Captures taken by hand" if run.kind == "captures" else "Measured"
+    return f"{what}, started {when}. Run {run.run_id}."
+
+
+def _troubles(run: Run, facts: Facts) -> Iterator[tuple[str, str]]:
+    count = len(run.points["point"])
+    if run.state != _FINISHED:
+        yield (
+            "This run is not complete.",
+            f"Its state is '{run.state}'; {count} points are recorded. What follows covers these only.",
+        )
+    if count == 0:
+        yield ("No points.", "Nothing was measured, or nothing that can be used.")
+    elif not facts.is_extracted:
+        yield ("Not extracted yet.", "There are points but no result; 'kneemap extract' makes it.")
+
+
+def _run_in_time(run: Run) -> str:
+    count = len(run.points["point"])
+    flagged = int(np.count_nonzero(run.points["quality"]))
+    text = f"{count} points" + (f", {flagged} of them flagged" if flagged else ", none flagged")
+    if run.end is not None and math.isfinite(run.end):
+        text += f", in {duration(run.end - run.start)}"
+    if len(run.sessions) > 1:
+        text += f", in {len(run.sessions)} sessions"
+    return text + "."
+
+
+def _leg_rows(run: Run) -> list[tuple[str, ...]]:
+    points = run.points
+    rows = []
+    for leg in run.legs:
+        mine = np.asarray(points["leg"]) == leg.index
+        body = np.asarray(points["body_temperature"], dtype=np.float64)[mine]
+        body = body[np.isfinite(body)]
+        rows.append(
+            (
+                fixed(leg.setpoint_degC, 1),
+                fixed(float(body.mean()), 1) if body.size else NOTHING,
+                duration(leg.start - run.start),
+                duration(leg.end - leg.start),
+                str(int(mine.sum())),
+                str(int(np.count_nonzero(np.asarray(points["quality"])[mine]))),
+            )
+        )
+    return rows
+
+
+def _mark_row(run: Run, mark: Mark) -> dict[str, str]:
+    text = mark.text + (f" (and {mark.count - 1} more alike)" if mark.count > 1 else "")
+    if mark.point >= 0:
+        text = f"Point {mark.point}: {text}"
+    return {
+        "number": str(mark.number),
+        "after": duration(mark.time - run.start),
+        "leg": mark.leg,
+        "level": mark.level,
+        "kind": mark.kind.replace("_", " "),
+        "text": text,
+    }
+
+
+def _knee_by_leg(run: Run, part: PartFacts) -> dict[int, float]:
+    """Saturation current of the pulse method at the headline's drop, by the leg whose temperature is nearest."""
+    method = part.method("pulse")
+    drop = headline_drop(method) if method else None
+    if method is None or drop is None:
+        return {}
+    knees = [knee for knee in method.knees_at(drop) if knee.is_reached]
+    if not knees:
+        return {}
+    nearest = {
+        leg.index: min(knees, key=lambda knee: abs(knee.temperature_degC - leg.setpoint_degC)) for leg in run.legs
+    }
+    return {leg: knee.estimate.value for leg, knee in nearest.items()}
+
+
+def _places(run: Run) -> dict[int, str]:
+    """Where a point stands in the plan, in words, by point number."""
+    points = run.all_points
+    places = {}
+    for row, point in enumerate(points["point"]):
+        width, bias = float(points["pulse_width_setpoint"][row]), float(points["bias_current_setpoint"][row])
+        what = short(width, "s") if math.isfinite(width) else short(bias, "A") if math.isfinite(bias) else ""
+        places[int(point)] = f"{celsius(float(points['temperature_setpoint'][row]), 0)}, {what}".strip(", ")
+    return places
+
+
+def _calibration(run: Run) -> list[tuple[str, ...]]:
+    rows = []
+    for instrument in run.instruments:
+        for name, constant in instrument.calibration.items():
+            unit = "" if constant.units == "1" else constant.units
+            rows.append(
+                (
+                    instrument.role.replace("_", " "),
+                    name.replace("_", " "),
+                    _constant(constant.value, unit),
+                    _constant(constant.uncertainty, unit) if constant.uncertainty else NOTHING,
+                    constant.date or NOTHING,
+                    constant.certificate or NOTHING,
+                )
+            )
+    return rows
+
+
+def _constant(value: float, unit: str) -> str:
+    # An SI prefix cannot stand before "K" differences in ppm or a plain ratio: those are written out.
+    return short(value, unit, 6) if unit in {"ohm", "s", "H", "V", "A", "F"} else f"{value:.6g} {unit}".strip()
+
+
+def _versions(run: Run) -> Iterator[tuple[str, str]]:
+    for number, session in enumerate(run.sessions, start=1):
+        when = datetime.fromtimestamp(session.t, UTC).strftime("%Y-%m-%d %H:%M UTC")
+        versions: Mapping[str, str] = session.versions
+        software = ", ".join([session.software, *(f"{name} {version}" for name, version in versions.items())])
+        yield f"Session {number}", f"{when}: {software}"
+    if run.extraction is not None:
+        yield "Extraction", f"{run.extraction.program} {run.extraction.version}, {run.extraction.date}"
+
+
+def _render(context: Mapping[str, Any]) -> str:
+    environment = jinja2.Environment(
+        loader=jinja2.FunctionLoader(_template_text),
+        autoescape=True,
+        undefined=jinja2.StrictUndefined,
+        trim_blocks=False,
+    )
+    return environment.get_template("page.html.j2").render(context)
+
+
+def _template_text(name: str) -> str:
+    return (Path(__file__).parent / "templates" / name).read_text(encoding="utf-8")
+
+
