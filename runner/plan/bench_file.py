@@ -1,0 +1,435 @@
+"""The models of a bench file: which instruments, where, what they can do, and how well they are known.
+
+A calibration constant that is left out is not known: it is absent from `calibration`, never a zero with no uncertainty.
+"""
+
+import datetime
+from collections.abc import Mapping
+from typing import Annotated, Any, Literal, Self, TypeVar
+
+from pydantic import (
+    Field,
+    GetCoreSchemaHandler,
+    ValidationInfo,
+    create_model,
+    field_validator,
+    model_validator,
+)
+from pydantic_core import CoreSchema, PydanticCustomError, core_schema
+
+from runner.plan.plan_file import cold_first
+from runner.plan.quantity import (
+    CAPACITANCE,
+    CURRENT,
+    CURRENT_RATE,
+    DIFFERENCE,
+    DRIFT,
+    DURATION,
+    FACTOR,
+    FRACTION,
+    INDUCTANCE,
+    RESISTANCE,
+    TEMPCO,
+    TEMPERATURE,
+    TIME,
+    VOLTAGE,
+    Kind,
+    Quantity,
+    read_quantity,
+)
+from runner.plan.shapes import FileModel, Whole, Words, Written, fault
+from runner.plan.simulation_file import Simulation
+
+ROLES = (
+    "supply",
+    "pulser",
+    "digitizer",
+    "lcr",
+    "bias_source",
+    "chamber",
+    "thermometer",
+    "ohmmeter",
+    "multiplexer",
+)
+PATHS = ("pulse", "bias", "resistance")
+
+Relay = Annotated[Whole, Field(ge=0, le=99_999)]
+Temperature = Annotated[float, Quantity(TEMPERATURE, above=-273.15)]
+Timeout = Annotated[float, Quantity(DURATION, above=0, most=600, help="Longest wait for a reply.")]
+Range = Annotated[float, Quantity(VOLTAGE, above=0)]
+
+
+class Constant(FileModel):
+    """A calibration constant; `uncertainty` is one standard uncertainty (k = 1), in the unit of the value."""
+
+    value: float
+    uncertainty: float
+    date: datetime.date | None = None
+    certificate: str | None = None
+
+
+class Uncertainty:
+    """Annotation: a standard uncertainty, written in the unit of its value or as a share of it."""
+
+    def __init__(self, kind: Kind, of: str = "value") -> None:
+        self.kind = kind
+        self.of = of
+
+    def read(self, written: Any, info: ValidationInfo) -> float:
+        value = info.data.get(self.of)
+        try:
+            if isinstance(written, str) and written.strip().endswith("%"):
+                share = read_quantity(written, FRACTION)
+                if value == 0:
+                    raise ValueError(
+                        f"{written!r} of a value of zero says nothing; write it as '{self.kind.example}'"
+                    )
+                result = share * abs(value) if value is not None else share
+            else:
+                result = read_quantity(written, self.kind)
+            if result < 0:
+                raise ValueError(f"{written!r} is negative; a standard uncertainty is zero or more")
+        except ValueError as error:
+            raise PydanticCustomError("quantity", "{said}", {"said": str(error)}) from error
+        return result
+
+    def __get_pydantic_core_schema__(self, source: Any, handler: GetCoreSchemaHandler) -> CoreSchema:
+        return core_schema.with_info_plain_validator_function(self.read)
+
+    def __get_pydantic_json_schema__(self, schema: CoreSchema, handler: Any) -> dict[str, Any]:
+        said = f"One standard uncertainty (k = 1), as a share of the value or such as {self.kind.example}."
+        return {"type": ["string", "number"], "description": said, "examples": ["0.1 %"]}
+
+
+def constant(kind: Kind, least: float | None = None, above: float | None = None) -> Any:
+    """A calibration constant of a kind, written with its unit."""
+    shape = create_model(
+        f"ConstantOf_{kind.name.replace(' ', '_')}",
+        __base__=FileModel,
+        __doc__=f"A calibration constant: {kind.name} with its standard uncertainty (k = 1) and date.",
+        value=(Annotated[float, Quantity(kind, least=least, above=above)], Field()),
+        uncertainty=(Annotated[float, Uncertainty(kind)], Field(examples=["0.1 %"])),
+        date=(datetime.date | None, None),
+        certificate=(str | None, None),
+    )
+    return Annotated[Constant, Written(shape, _as_constant)]
+
+
+def _as_constant(written: Any) -> Constant:
+    return Constant.model_construct(
+        value=written.value,
+        uncertainty=written.uncertainty,
+        date=written.date,
+        certificate=written.certificate,
+    )
+
+
+def _given(written: FileModel) -> dict[str, Constant]:
+    """The constants that were written, by name."""
+    return {
+        name: getattr(written, name)
+        for name in type(written).model_fields
+        if getattr(written, name) is not None
+    }
+
+
+def _calibration(name: str, **constants: Any) -> Any:
+    fields: dict[str, Any] = {key: (constant | None, None) for key, constant in constants.items()}
+    shape = create_model(f"{name}Calibration", __base__=FileModel, **fields)
+    return Annotated[dict[str, Constant], Written(shape, _given), Field(default_factory=dict)]
+
+
+GAIN = constant(FACTOR, above=0)
+NONE = _calibration("No")
+
+
+class Instrument(FileModel):
+    """One instrument of the bench.
+
+    Attributes:
+        resource: VISA resource name; only a simulated bench may leave it out.
+        dialect: file with the messages of this kind of instrument.
+        timeout: longest wait for a reply [s].
+        calibration: constants by name; what was not given is absent.
+    """
+
+    resource: Words | None = Field(default=None, examples=["TCPIP::192.0.2.10::5025::SOCKET"])
+    dialect: Words = Field(examples=["dialects/scpi_supply.yaml"])
+    timeout: Timeout = 5.0
+    calibration: NONE  # type: ignore[valid-type]
+
+
+class SupplyMaximum(FileModel):
+    """What the supply can give at most."""
+
+    voltage: Annotated[float, Quantity(VOLTAGE, above=0)]
+    current: Annotated[float, Quantity(CURRENT, above=0)]
+
+
+class Supply(Instrument):
+    """The rail: it feeds the capacitor bank."""
+
+    maximum: SupplyMaximum = Field(examples=[{"voltage": "30 V", "current": "2 A"}])
+
+
+class PulserMaximum(FileModel):
+    """The longest pulse the pulser can give."""
+
+    width: Annotated[float, Quantity(TIME, above=0)]
+
+
+class Pulser(Instrument):
+    """Makes the gate pulse; its trigger also arms the digitizer."""
+
+    maximum: PulserMaximum = Field(examples=[{"width": "1 ms"}])
+    polarities: Literal["forward", "both"] = Field(
+        default="forward", description="'both' where the fixture can reverse the pulse."
+    )
+
+
+class Ranges(FileModel):
+    """Full scale of each channel, at the instrument's input; a range of 10 V reaches from -10 V to +10 V."""
+
+    voltage: Annotated[tuple[Range, ...], Field(min_length=1)] = Field(examples=[["10 V", "20 V", "50 V"]])
+    shunt: Annotated[tuple[Range, ...], Field(min_length=1)] = Field(
+        examples=[["50 mV", "100 mV", "200 mV", "500 mV"]]
+    )
+
+    @field_validator("voltage", "shunt")
+    @classmethod
+    def _smallest_first(cls, ranges: tuple[float, ...]) -> tuple[float, ...]:
+        return tuple(sorted(set(ranges)))
+
+
+class Digitizer(Instrument):
+    """Two channels: the voltage across the part, and the voltage across the shunt."""
+
+    samples: Annotated[Whole, Field(ge=16, le=10_000_000, description="Of each channel in a capture.")] = 2000
+    pretrigger: Annotated[
+        float, Quantity(FRACTION, above=0, below=1, help="Share of the samples before the trigger.")
+    ] = 0.1
+    intervals: Annotated[
+        tuple[Annotated[float, Quantity(TIME, above=0)], ...],
+        Field(min_length=1, description="Sampling intervals it can."),
+    ] = Field(examples=[["5 ns", "10 ns", "20 ns", "50 ns"]])
+    ranges: Ranges = Field(examples=[{"voltage": ["10 V", "20 V"], "shunt": ["100 mV", "200 mV"]}])
+    calibration: _calibration(  # type: ignore[valid-type]
+        "Digitizer", voltage_gain=GAIN, shunt_gain=GAIN, skew=constant(TIME)
+    )
+
+    @field_validator("intervals")
+    @classmethod
+    def _shortest_first(cls, intervals: tuple[float, ...]) -> tuple[float, ...]:
+        return tuple(sorted(set(intervals)))
+
+
+class Lcr(Instrument):
+    """Measures the small-signal inductance on top of the bias."""
+
+    calibration: _calibration(  # type: ignore[valid-type]
+        "Lcr",
+        inductance_gain=GAIN,
+        fixture_inductance=constant(INDUCTANCE),
+        fixture_resistance=constant(RESISTANCE),
+        open_capacitance=constant(CAPACITANCE),
+    )
+
+
+class BiasMaximum(FileModel):
+    """What the bias source can give at most."""
+
+    current: Annotated[float, Quantity(CURRENT, above=0)]
+    voltage: Annotated[float | None, Quantity(VOLTAGE, above=0)] = None
+
+
+class BiasSource(Instrument):
+    """Direct current through the part."""
+
+    maximum: BiasMaximum = Field(examples=[{"current": "20 A"}])
+    ramp: Annotated[float, Quantity(CURRENT_RATE, above=0, help="How fast the current is changed.")] = 5.0
+    calibration: _calibration("BiasSource", current_gain=GAIN)  # type: ignore[valid-type]
+
+
+class Chamber(Instrument):
+    """The temperature chamber."""
+
+    range_degC: tuple[Temperature, Temperature] = Field(alias="range", examples=[["-60 degC", "150 degC"]])
+    ramp: Annotated[float, Quantity(DRIFT, above=0, help="How fast the air changes at most.")] = Field(
+        examples=["3 K/min"]
+    )
+    safe_degC: Annotated[float, Quantity(TEMPERATURE, above=-273.15, help="Set-point of the safe state.")] = (
+        Field(default=25.0, alias="safe")
+    )
+
+    @field_validator("range_degC")
+    @classmethod
+    def _cold_first(cls, range_degC: tuple[float, float]) -> tuple[float, float]:
+        return cold_first(range_degC)
+
+    @model_validator(mode="after")
+    def _safe_is_reachable(self) -> Self:
+        if not self.range_degC[0] <= self.safe_degC <= self.range_degC[1]:
+            raise fault(f"'safe' ({self.safe_degC:g} degC) is outside 'range'; write a temperature inside it")
+        return self
+
+
+class Thermometer(Instrument):
+    """Reads the body sensor of each part; its channel is the part's channel."""
+
+    calibration: _calibration("Thermometer", offset=constant(DIFFERENCE))  # type: ignore[valid-type]
+
+
+class Ohmmeter(Instrument):
+    """Measures winding resistance with four wires."""
+
+    calibration: _calibration(  # type: ignore[valid-type]
+        "Ohmmeter", gain=GAIN, lead_resistance=constant(RESISTANCE)
+    )
+
+
+class MultiplexerPaths(FileModel):
+    """Relay of each path; a bench that switches only parts leaves the others out."""
+
+    pulse: Relay | None = None
+    bias: Relay | None = None
+    resistance: Relay | None = None
+
+
+class Multiplexer(Instrument):
+    """Selects the part, and what is connected to it."""
+
+    parts: Annotated[dict[Annotated[Whole, Field(ge=1)], Relay], Field(min_length=1)] = Field(
+        examples=[{1: 101, 2: 102}], description="Relay of each part, by channel."
+    )
+    paths: MultiplexerPaths = Field(
+        default=MultiplexerPaths(), examples=[{"pulse": 201, "bias": 202, "resistance": 203}]
+    )
+    settle: Annotated[float, Quantity(TIME, least=0, help="After a relay has moved.")] = 0.05
+
+    @model_validator(mode="after")
+    def _relays_differ(self) -> Self:
+        relays = [*self.parts.values(), *(relay for _, relay in self.paths if relay is not None)]
+        twice = sorted({relay for relay in relays if relays.count(relay) > 1})
+        if twice:
+            raise fault(f"relay {twice[0]} is used twice; give each part and path a relay of its own")
+        return self
+
+
+class Bank(FileModel):
+    """The capacitor bank that feeds the pulses."""
+
+    capacitance: Annotated[float, Quantity(CAPACITANCE, above=0)]
+    resistance: Annotated[float, Quantity(RESISTANCE, least=0, help="Series resistance.")] = 0.0
+    bleed: Annotated[float, Quantity(DURATION, above=0, help="Time constant of the bleeder, R times C.")] = (
+        Field(examples=["20 s"])
+    )
+
+
+class Shunt(FileModel):
+    """The current shunt, with what is known of it."""
+
+    resistance: constant(RESISTANCE, above=0)  # type: ignore[valid-type]
+    tempco: constant(TEMPCO) | None = None  # type: ignore[valid-type]
+    series_inductance: constant(INDUCTANCE, least=0) | None = None  # type: ignore[valid-type]
+    temperature_degC: Annotated[
+        float, Quantity(TEMPERATURE, above=-273.15, help="At which the resistance holds.")
+    ] = Field(default=25.0, alias="temperature")
+
+
+class Switch(FileModel):
+    """The switch that connects bank and part."""
+
+    on_resistance: Annotated[float, Quantity(RESISTANCE, least=0)] = 0.0
+
+
+class Fixture(FileModel):
+    """What stands between the instruments and the part."""
+
+    bank: Bank | None = Field(
+        default=None, examples=[{"capacitance": "7 mF", "resistance": "5 mohm", "bleed": "20 s"}]
+    )
+    shunt: Shunt | None = None
+    switch: Switch = Switch()
+    part_time_constants: Annotated[
+        tuple[Annotated[float, Quantity(DURATION, above=0)], ...],
+        Field(
+            min_length=1,
+            max_length=2,
+            description="A guess of how the part follows the air, for the forecast.",
+        ),
+    ] = Field(default=(240.0, 900.0), examples=[["4 min", "15 min"]])
+
+
+class Instruments(FileModel):
+    """The instruments by role."""
+
+    supply: Supply | None = None
+    pulser: Pulser | None = None
+    digitizer: Digitizer | None = None
+    lcr: Lcr | None = None
+    bias_source: BiasSource | None = None
+    chamber: Chamber | None = None
+    thermometer: Thermometer | None = None
+    ohmmeter: Ohmmeter | None = None
+    multiplexer: Multiplexer | None = None
+
+
+def _by_role(written: Instruments) -> dict[str, Instrument]:
+    return {role: getattr(written, role) for role in ROLES if getattr(written, role) is not None}
+
+
+Role = TypeVar("Role", bound=Instrument)
+
+
+class Bench(FileModel):
+    """A bench: which instruments, where, with which calibration.
+
+    Attributes:
+        instruments: those that are there, by role; `supply`, `chamber` and so on give the same with their own types.
+        simulation: settings of the mock bench in SI, or None on a real one.
+    """
+
+    name: Words = Field(examples=["Bench by the window"])
+    instruments: Annotated[Mapping[str, Instrument], Written(Instruments, _by_role)] = Field(examples=[{}])
+    fixture: Fixture = Fixture()
+    simulation: Simulation | None = None
+
+    @property
+    def supply(self) -> Supply | None:
+        return self._role("supply", Supply)
+
+    @property
+    def pulser(self) -> Pulser | None:
+        return self._role("pulser", Pulser)
+
+    @property
+    def digitizer(self) -> Digitizer | None:
+        return self._role("digitizer", Digitizer)
+
+    @property
+    def lcr(self) -> Lcr | None:
+        return self._role("lcr", Lcr)
+
+    @property
+    def bias_source(self) -> BiasSource | None:
+        return self._role("bias_source", BiasSource)
+
+    @property
+    def chamber(self) -> Chamber | None:
+        return self._role("chamber", Chamber)
+
+    @property
+    def thermometer(self) -> Thermometer | None:
+        return self._role("thermometer", Thermometer)
+
+    @property
+    def ohmmeter(self) -> Ohmmeter | None:
+        return self._role("ohmmeter", Ohmmeter)
+
+    @property
+    def multiplexer(self) -> Multiplexer | None:
+        return self._role("multiplexer", Multiplexer)
+
+    def _role(self, name: str, kind: type[Role]) -> Role | None:
+        found = self.instruments.get(name)
+        return found if isinstance(found, kind) else None

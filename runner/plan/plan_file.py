@@ -1,0 +1,439 @@
+"""The models of a plan file: what to measure, on which parts, within which limits.
+
+Keys are spelled as users write them (aliases); attributes carry the unit where it is not SI. What a single value may be
+is checked here, what values mean to each other and to the bench in `checks.py`.
+"""
+
+from itertools import pairwise
+from typing import Annotated, Any, Literal, Self
+
+from pydantic import Field, field_validator, model_validator
+
+from runner.plan.quantity import (
+    AMPERE_TURNS,
+    AREA,
+    CURRENT,
+    DIFFERENCE,
+    DRIFT,
+    DURATION,
+    ENERGY,
+    FRACTION,
+    FREQUENCY,
+    INDUCTANCE,
+    LENGTH,
+    POWER,
+    RESISTANCE,
+    TEMPERATURE,
+    TIME,
+    VOLTAGE,
+    Quantity,
+)
+from runner.plan.shapes import FileModel, Whole, Words, Written, fault, one_of
+
+Width = Annotated[float, Quantity(TIME, above=0)]
+Time = Annotated[float, Quantity(TIME, least=0)]
+Duration = Annotated[float, Quantity(DURATION, above=0)]
+Voltage = Annotated[float, Quantity(VOLTAGE, above=0)]
+Current = Annotated[float, Quantity(CURRENT, above=0)]
+BiasCurrent = Annotated[float, Quantity(CURRENT, least=0)]
+Resistance = Annotated[float, Quantity(RESISTANCE, above=0)]
+Inductance = Annotated[float, Quantity(INDUCTANCE, above=0)]
+Energy = Annotated[float, Quantity(ENERGY, above=0)]
+Power = Annotated[float, Quantity(POWER, above=0)]
+Temperature = Annotated[float, Quantity(TEMPERATURE, above=-273.15)]
+Share = Annotated[float, Quantity(FRACTION, above=0, below=1)]
+Count = Annotated[Whole, Field(ge=2, le=10_000)]
+Budget = Annotated[Whole, Field(ge=4, le=1000)]
+
+COPPER_ALPHA_20 = 3.93e-3  # 1/K at 20 degC, annealed copper (IEC 60028)
+
+
+class Core(FileModel):
+    """What is known of the core; B(H) needs it."""
+
+    turns: Annotated[Whole, Field(ge=1, le=100_000)] = Field(examples=[15])
+    area: Annotated[float, Quantity(AREA, above=0, help="Effective cross-section.")]
+    path: Annotated[float, Quantity(LENGTH, above=0, help="Effective magnetic path length.")]
+
+
+class PartLimits(FileModel):
+    """Limits of one part that are lower than those of the plan."""
+
+    current: Current | None = None
+    body_degC: Temperature | None = Field(default=None, alias="body")
+    pulse_energy: Energy | None = None
+
+
+class Part(FileModel):
+    """An inductor under test."""
+
+    label: Words = Field(examples=["DRUM-22-A"])
+    channel: Annotated[
+        Whole, Field(ge=1, description="Multiplexer channel; 1, 2, ... in order when left out.")
+    ] = 1
+    inductance: Annotated[float, Quantity(INDUCTANCE, above=0, help="Nominal inductance.")]
+    rated_current: Annotated[float, Quantity(CURRENT, above=0, help="Rated saturation current.")]
+    resistance: Annotated[float, Quantity(RESISTANCE, above=0, help="Winding resistance at 20 degC.")]
+    core: Core | None = None
+    limits: PartLimits | None = None
+
+    def resistance_at(self, temperature_degC: float) -> float:
+        """Winding resistance by the linear copper law [ohm] (IEC 60028)."""
+        return self.resistance * (1 + COPPER_ALPHA_20 * (temperature_degC - 20.0))
+
+
+def number_parts(written: Any) -> Any:
+    """Give parts without a channel the number of their place in the list."""
+    if not isinstance(written, list):
+        return written
+    return [
+        {"channel": index, **part} if isinstance(part, dict) else part
+        for index, part in enumerate(written, 1)
+    ]
+
+
+class Soak(FileModel):
+    """When the part counts as settled at a temperature."""
+
+    within: Annotated[
+        float, Quantity(DIFFERENCE, above=0, help="Largest rest of the drift that is still to come.")
+    ] = 1.0
+    drift: Annotated[float, Quantity(DRIFT, above=0, help="Largest drift of the part.")] = 0.2 / 60
+    hold: Annotated[float, Quantity(DURATION, least=0, help="How long both must hold.")] = 300.0
+    give_up: Annotated[
+        float, Quantity(DURATION, above=0, help="Measure anyway, with a flag, after this time.")
+    ] = 7200.0
+
+    @model_validator(mode="after")
+    def _leaves_time_to_hold(self) -> Self:
+        if self.give_up <= self.hold:
+            raise fault(
+                f"'give_up' ({self.give_up:g} s) leaves no time for 'hold' ({self.hold:g} s); give more time"
+            )
+        return self
+
+
+class Temperatures(FileModel):
+    """The legs of a run."""
+
+    at_degC: Annotated[tuple[Temperature, ...], Field(min_length=1)] = Field(
+        alias="at", examples=[["25 degC", "85 degC"]], description="Chamber set-points."
+    )
+    soak: Soak = Soak()
+    order: Literal["as written", "least travel"] = "as written"
+
+
+class Until(FileModel):
+    """The interval at which a search is done."""
+
+    isat: Annotated[float, Quantity(FRACTION, above=0, below=1, help="Interval of Isat, as a share of it.")]
+
+
+class WidthSeek(FileModel):
+    """Pulse widths placed by the runner where they tell most about the knee."""
+
+    seek: Literal["knee"]
+    from_: Width = Field(alias="from")
+    to: Width
+    budget: Budget = Field(default=18, description="Most points at one temperature.")
+    until: Until = Until.model_construct(isat=0.005)
+
+    @model_validator(mode="after")
+    def _climbs(self) -> Self:
+        _refuse_falling(self.from_, self.to)
+        return self
+
+
+class CurrentSeek(FileModel):
+    """Bias currents placed by the runner where they tell most about the knee."""
+
+    seek: Literal["knee"]
+    from_: BiasCurrent = Field(default=0.0, alias="from")
+    to: Current
+    budget: Budget = Field(default=18, description="Most points at one temperature.")
+    until: Until = Until.model_construct(isat=0.005)
+
+    @model_validator(mode="after")
+    def _climbs(self) -> Self:
+        _refuse_falling(self.from_, self.to)
+        return self
+
+
+class WidthRange(FileModel):
+    """Evenly spaced pulse widths."""
+
+    from_: Width = Field(alias="from")
+    to: Width
+    count: Count = Field(examples=[18])
+
+    @model_validator(mode="after")
+    def _climbs(self) -> Self:
+        _refuse_falling(self.from_, self.to)
+        return self
+
+
+class CurrentRange(FileModel):
+    """Evenly spaced bias currents."""
+
+    from_: BiasCurrent = Field(default=0.0, alias="from")
+    to: Current
+    count: Count = Field(examples=[21])
+    both_ways: Annotated[bool, Field(strict=True, description="Climb, then come back down.")] = False
+
+    @model_validator(mode="after")
+    def _climbs(self) -> Self:
+        _refuse_falling(self.from_, self.to)
+        return self
+
+
+class CurrentList(FileModel):
+    """Chosen bias currents."""
+
+    at: Annotated[tuple[BiasCurrent, ...], Field(min_length=1)] = Field(examples=[["0 A", "2 A", "4 A"]])
+    both_ways: Annotated[bool, Field(strict=True, description="Climb, then come back down.")] = False
+
+    @field_validator("at")
+    @classmethod
+    def _each_once(cls, values: tuple[float, ...]) -> tuple[float, ...]:
+        return climbing(values, "A", 1.0)
+
+
+def _shape_of_widths(written: Any) -> str:
+    if isinstance(written, dict):
+        return "seek" if "seek" in written else "range"
+    return "list"
+
+
+def _shape_of_currents(written: Any) -> str:
+    if isinstance(written, dict):
+        return "seek" if "seek" in written else ("chosen" if "at" in written else "range")
+    return "list"
+
+
+def _widths(written: "tuple[float, ...] | WidthRange | WidthSeek") -> "tuple[float, ...] | WidthSeek":
+    if isinstance(written, WidthRange):
+        return evenly(written.from_, written.to, written.count)
+    return written if isinstance(written, WidthSeek) else climbing(written, "us", 1e6)
+
+
+def _currents(
+    written: "tuple[float, ...] | CurrentRange | CurrentList | CurrentSeek",
+) -> "tuple[float, ...] | CurrentSeek":
+    if isinstance(written, CurrentSeek):
+        return written
+    if isinstance(written, tuple):
+        return climbing(written, "A", 1.0)
+    up = written.at if isinstance(written, CurrentList) else evenly(written.from_, written.to, written.count)
+    return up + up[-2::-1] if written.both_ways and len(up) > 1 else up
+
+
+WIDTHS = one_of(
+    _shape_of_widths, list=Annotated[tuple[Width, ...], Field(min_length=1)], range=WidthRange, seek=WidthSeek
+)
+CURRENTS = one_of(
+    _shape_of_currents,
+    list=Annotated[tuple[BiasCurrent, ...], Field(min_length=1)],
+    range=CurrentRange,
+    chosen=CurrentList,
+    seek=CurrentSeek,
+)
+
+
+class StopAt(FileModel):
+    """Where the climb of the pulse widths ends at a temperature, before the longest width."""
+
+    current: Current | None = None
+    drop: Annotated[float | None, Quantity(FRACTION, above=0, below=1, help="Fall of the inductance.")] = None
+
+    @model_validator(mode="after")
+    def _says_something(self) -> Self:
+        if self.current is None and self.drop is None:
+            raise fault("neither 'current' nor 'drop' is given; write one of them or remove 'stop_at'")
+        return self
+
+
+class Pulse(FileModel):
+    """The pulse method: differential inductance from voltage pulses."""
+
+    rail: Annotated[float, Quantity(VOLTAGE, above=0, help="Voltage of the capacitor bank.")]
+    width: Annotated[tuple[float, ...] | WidthSeek, Written(WIDTHS, _widths)] = Field(
+        examples=[{"from": "2 us", "to": "20 us", "count": 18}]
+    )
+    repeats: Annotated[Whole, Field(ge=1, le=10_000, description="Captures of each width.")] = 8
+    rest: Annotated[float, Quantity(TIME, above=0, help="From one pulse to the next.")] = 0.5
+    conditioning: Annotated[
+        Whole, Field(ge=0, le=10_000, description="Pulses not recorded, before the captures.")
+    ] = 3
+    stop_at: StopAt | None = None
+
+
+class Signal(FileModel):
+    """The small signal of the bias method."""
+
+    frequency: Annotated[float, Quantity(FREQUENCY, above=0)]
+    level: Annotated[float, Quantity(VOLTAGE, above=0, help="Root mean square.")]
+
+
+class Bias(FileModel):
+    """The bias method: incremental inductance on a direct current.
+
+    Attributes:
+        current: in the order in which they are visited, climbing and then, when both ways, back down [A].
+    """
+
+    current: Annotated[tuple[float, ...] | CurrentSeek, Written(CURRENTS, _currents)] = Field(
+        examples=[{"from": "0 A", "to": "10 A", "count": 21, "both_ways": True}]
+    )
+    settle: Annotated[float, Quantity(TIME, least=0, help="From the current's arrival to the reading.")] = 0.2
+    signal: Signal = Field(examples=[{"frequency": "100 kHz", "level": "50 mV"}])
+
+    @property
+    def both_ways(self) -> bool:
+        """Whether the currents come back down."""
+        return isinstance(self.current, tuple) and any(b < a for a, b in pairwise(self.current))
+
+    @property
+    def largest(self) -> float:
+        """Largest current that may be set [A]."""
+        return max(self.current) if isinstance(self.current, tuple) else self.current.to
+
+
+class Limits(FileModel):
+    """What no value may pass; judged before the run, programmed into the instruments, watched all night."""
+
+    current: Annotated[float, Quantity(CURRENT, above=0, help="Largest current through a part.")]
+    body_degC: Annotated[float, Quantity(TEMPERATURE, above=-273.15, help="Hottest body of a part.")] = Field(
+        alias="body"
+    )
+    rail: Annotated[float, Quantity(VOLTAGE, above=0, help="Highest voltage of the bank.")]
+    pulse_energy: Annotated[
+        float, Quantity(ENERGY, above=0, help="Largest energy that one pulse takes from the bank.")
+    ]
+    chamber_degC: Annotated[
+        tuple[Temperature, Temperature], Field(description="Coldest and hottest set-point.")
+    ] = Field(alias="chamber", examples=[["-45 degC", "130 degC"]])
+    duration: Annotated[float, Quantity(DURATION, above=0, help="Longest time of the whole run.")]
+    bank_energy: Annotated[
+        float | None, Quantity(ENERGY, above=0, help="Largest energy stored in the bank.")
+    ] = None
+    mean_power: Annotated[float | None, Quantity(POWER, above=0, help="Largest mean heating of a part.")] = (
+        None
+    )
+
+    @field_validator("chamber_degC")
+    @classmethod
+    def _cold_first(cls, range_degC: tuple[float, float]) -> tuple[float, float]:
+        return cold_first(range_degC)
+
+
+class Extract(FileModel):
+    """What is made of the captures."""
+
+    drops: Annotated[
+        tuple[Share, ...], Field(min_length=1, description="Falls of the inductance that define Isat.")
+    ] = Field(default=(0.1, 0.2, 0.3), examples=[["10 %", "20 %", "30 %"]])
+    reference: Literal["same temperature", "25 degC", "nominal"] = "same temperature"
+    coverage: Annotated[float, Quantity(FRACTION, above=0, below=1, help="Of the intervals.")] = 0.95
+    guard_band: Annotated[
+        float, Quantity(FRACTION, least=0, below=1, help="Kept below Isat by the derating.")
+    ] = 0.2
+
+    @field_validator("drops")
+    @classmethod
+    def _each_once(cls, drops: tuple[float, ...]) -> tuple[float, ...]:
+        return climbing(drops, "%", 100.0)
+
+
+class Remanence(FileModel):
+    """A study of its own: what the part remembers, and how an offset field moves its knee.
+
+    Attributes:
+        width: of the test pulse, long enough to reach the knee [s].
+        shots: recorded after each preparation, the first of them on the prepared state.
+        demagnetise: how the state is prepared before first shots: by pulses of alternating polarity and falling width, or
+            not at all (as the conditioning left it).
+        polarities: `forward`, or `both` where the fixture can reverse.
+        offset: ampere-turns of a bias winding or offset field, applied one after the other [A].
+    """
+
+    width: Width
+    shots: Annotated[Whole, Field(ge=2, le=1000)] = 5
+    demagnetise: Literal["alternating pulses", "none"] = "none"
+    polarities: Literal["forward", "both"] = "forward"
+    offset: tuple[Annotated[float, Quantity(AMPERE_TURNS)], ...] = ()
+
+    @model_validator(mode="after")
+    def _can_alternate(self) -> Self:
+        if self.demagnetise == "alternating pulses" and self.polarities == "forward":
+            raise fault(
+                "alternating pulses need both polarities; write 'polarities: both' or 'demagnetise: none'"
+            )
+        return self
+
+
+class Plan(FileModel):
+    """A test plan: what to measure on which parts, over which temperatures, within which limits."""
+
+    title: Words = Field(examples=["Night study of a drum-core choke"])
+    bench: Words = Field(examples=["benches/mock.yaml"], description="Bench file, relative to the plan.")
+    parts: Annotated[tuple[Part, ...], Field(min_length=1)] = Field(
+        examples=[
+            [{"label": "DRUM-22-A", "inductance": "22 uH", "rated_current": "6 A", "resistance": "18 mohm"}]
+        ]
+    )
+    temperatures: Temperatures = Field(examples=[{"at": ["25 degC"]}])
+    pulse: Pulse | None = None
+    bias: Bias | None = None
+    remanence: Remanence | None = None
+    limits: Limits = Field(
+        examples=[
+            {
+                "current": "18 A",
+                "body": "140 degC",
+                "rail": "16 V",
+                "pulse_energy": "5 mJ",
+                "chamber": ["-45 degC", "130 degC"],
+                "duration": "14 h",
+            }
+        ]
+    )
+    extract: Extract = Extract()
+
+    @field_validator("parts", mode="before")
+    @classmethod
+    def _numbered(cls, written: Any) -> Any:
+        return number_parts(written)
+
+
+def evenly(first: float, last: float, count: int) -> tuple[float, ...]:
+    """``count`` values from ``first`` to ``last``, both included, evenly spaced."""
+    step = (last - first) / (count - 1)
+    # Twelve digits: 2 us + 6 steps of a third of a microsecond is 4 us to the user.
+    return tuple(float(f"{first + index * step:.12g}") for index in range(count - 1)) + (last,)
+
+
+def climbing(values: tuple[float, ...], unit: str, scale: float) -> tuple[float, ...]:
+    """The same values, climbing.
+
+    Raises:
+        PydanticCustomError: a value stands twice, or the values do not climb; shown times ``scale`` in ``unit``.
+    """
+    for index, (before, after) in enumerate(pairwise(values)):
+        if after == before:
+            raise fault(f"{after * scale:g} {unit} stands twice; keep one of them")
+        if after < before:
+            said = f"{after * scale:g} {unit} (value {index + 2}) comes after {before * scale:g} {unit}"
+            raise fault(f"{said}, but values must climb; sort the list from the smallest")
+    return values
+
+
+def cold_first(range_degC: tuple[float, float]) -> tuple[float, float]:
+    """A range of temperatures whose cold end comes first [degC]."""
+    if range_degC[0] >= range_degC[1]:
+        raise fault(f"{range_degC[0]:g} degC is not below {range_degC[1]:g} degC; write the cold end first")
+    return range_degC
+
+
+def _refuse_falling(first: float, last: float) -> None:
+    if last <= first:
+        raise fault("'to' is not above 'from'; values climb, so write the smallest as 'from'")
