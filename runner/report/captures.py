@@ -8,17 +8,17 @@ first repeat is drawn, thinned so that spikes survive: of each bucket of samples
 import math
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 
 from runner.arrays import FloatArray, IntArray
-from runner.record import Run
+from runner.record import METHODS, Run
 from runner.report.digits import scale_for, short
 from runner.report.facts import PartFacts
 from runner.report.look import LINE_STYLES, new_figure, temperature_colours, temperature_names
 from runner.report.picture import Picture, Sheet
 
-PULSE = 1  # of the column `method`
 ROOM_DEGC = 25.0
 BUCKETS = 90  # four samples a bucket are drawn at most
 
@@ -36,7 +36,7 @@ class Trace:
     current: FloatArray
 
 
-PLACES = ("shortest", "near the knee", "longest")
+PLACES = ("shortest", "knee", "longest")
 
 
 def draw_captures(run: Run, part: PartFacts, knees: Mapping[int, float]) -> Picture | None:
@@ -57,10 +57,16 @@ def draw_captures(run: Run, part: PartFacts, knees: Mapping[int, float]) -> Pict
     names = dict(zip(temperatures, temperature_names(temperatures), strict=True))
     times = scale_for([float(t) for trace in traces for t in trace.time[[0, -1]]], "s")
     currents = scale_for([float(np.abs(trace.current).max()) for trace in traces], "A")
-    figure, axes = new_figure(4.6, rows=2, columns=len(places), right=0.985, top=0.90, wspace=0.06, hspace=0.08)
+    figure, axes = new_figure(
+        4.6, rows=2, columns=len(places), right=0.985, top=0.90, wspace=0.06, hspace=0.08
+    )
     for trace in traces:
         column = places.index(trace.place)
-        pen = {"color": colours[trace.temperature_degC], "linestyle": styles[trace.temperature_degC], "linewidth": 1.1}
+        pen = {
+            "color": colours[trace.temperature_degC],
+            "linestyle": styles[trace.temperature_degC],
+            "linewidth": 1.1,
+        }
         axes[column].plot(times.of(trace.time), trace.voltage, label=names[trace.temperature_degC], **pen)
         axes[column + len(places)].plot(times.of(trace.time), currents.of(trace.current), **pen)
     for column, place in enumerate(places):
@@ -76,7 +82,8 @@ def draw_captures(run: Run, part: PartFacts, knees: Mapping[int, float]) -> Pict
         name=f"{part.slug}_captures",
         caption=(
             f"Raw captures of {part.label}: voltage across the part and current by the shunt, first repeat of each "
-            "point, no correction applied. Every capture is in record.h5."
+            "point, no correction applied. Knee: the point whose peak comes nearest to the saturation current. "
+            "Every capture is in record.h5."
         ),
         figure=figure,
         sheet=_sheet(traces),
@@ -98,15 +105,15 @@ def thin(voltage: FloatArray, current: FloatArray, buckets: int = BUCKETS) -> In
         return np.arange(samples, dtype=np.int64)
     edges = np.linspace(0, samples, buckets + 1).astype(np.int64)
     kept = {0, samples - 1}
-    for first, last in zip(edges[:-1], edges[1:], strict=True):
+    for first, last in pairwise(edges.tolist()):
         for signal in (voltage[first:last], current[first:last]):
-            kept.update((int(first + signal.argmin()), int(first + signal.argmax())))
+            kept.update((first + int(signal.argmin()), first + int(signal.argmax())))
     return np.array(sorted(kept), dtype=np.int64)
 
 
 def _traces(run: Run, part: int, knees: Mapping[int, float]) -> Iterator[Trace]:
     points = run.points
-    mine = np.flatnonzero((points["part"] == part) & (points["method"] == PULSE))
+    mine = np.flatnonzero((points["part"] == part) & (points["method"] == METHODS["pulse"]))
     if mine.size == 0:
         return
     leg_temperatures = {
@@ -118,19 +125,18 @@ def _traces(run: Run, part: int, knees: Mapping[int, float]) -> Iterator[Trace]:
         for place, row in _chosen_points(points, of_leg, knees.get(leg, math.nan)):
             point = int(points["point"][row])
             captures = run.captures(point)
-            if captures.voltage.shape[0] == 0:
+            if captures is None:
                 continue
-            voltage = np.asarray(captures.voltage[0], dtype=np.float64)
-            current = np.asarray(captures.current[0], dtype=np.float64)
+            voltage, current = captures.voltage[0], captures.current[0]
             kept = thin(voltage, current)
             yield Trace(
                 place, point, leg_temperatures[leg], float(points["pulse_width_setpoint"][row]),
-                np.asarray(captures.time, dtype=np.float64)[kept], voltage[kept], current[kept],
+                captures.time[kept], voltage[kept], current[kept],
             )  # fmt: skip
 
 
 def _temperature(points: Mapping[str, np.ndarray], rows: IntArray) -> FloatArray:
-    body = np.asarray(points["body_temperature"][rows], dtype=np.float64)
+    body = points["body_temperature"][rows]
     return np.where(np.isfinite(body), body, points["temperature_setpoint"][rows])
 
 
@@ -142,8 +148,8 @@ def _chosen_legs(temperatures: Mapping[int, float]) -> list[int]:
 
 def _chosen_points(points: Mapping[str, np.ndarray], rows: IntArray, knee: float) -> list[tuple[int, int]]:
     """(place, row) of the shortest pulse, the one nearest to the knee, and the longest, without repeating one."""
-    width = np.asarray(points["pulse_width_setpoint"][rows], dtype=np.float64)
-    peak = np.asarray(points["peak_current"][rows], dtype=np.float64)
+    width = points["pulse_width_setpoint"][rows]
+    peak = points["peak_current"][rows]
     # Captures taken by hand have no width that anybody set; the peak current orders them as well.
     order = rows[np.argsort(width if np.isfinite(width).all() else peak, kind="stable")]
     if order.size == 1:
@@ -152,7 +158,9 @@ def _chosen_points(points: Mapping[str, np.ndarray], rows: IntArray, knee: float
         return [(0, int(order[0])), (2, int(order[1]))]
     inner = order[1:-1]
     if math.isfinite(knee):
-        middle = inner[int(np.argmin(np.abs(np.nan_to_num(points["peak_current"][inner], nan=np.inf) - knee)))]
+        middle = inner[
+            int(np.argmin(np.abs(np.nan_to_num(points["peak_current"][inner], nan=np.inf) - knee)))
+        ]
     else:
         middle = inner[inner.size // 2]
     return [(0, int(order[0])), (1, int(middle)), (2, int(order[-1]))]
@@ -162,7 +170,11 @@ def _title(place: int, widths: list[float]) -> str:
     known = [width for width in widths if math.isfinite(width)]
     if not known:
         return PLACES[place].capitalize()
-    ends = short(known[0], "s") if len(known) == 1 else f"{short(known[0], 's')} to {short(known[-1], 's')}"
+    ends = (
+        short(known[0], "s", 3)
+        if len(known) == 1
+        else f"{short(known[0], 's', 3)} to {short(known[-1], 's', 3)}"
+    )
     return f"{PLACES[place].capitalize()}: {ends}"
 
 

@@ -3,10 +3,14 @@
 import math
 from typing import Any
 
+import matplotlib
 import numpy as np
 from matplotlib.axes import Axes
+from matplotlib.colors import ListedColormap
+from matplotlib.ticker import MaxNLocator
 
-from runner.report.digits import Scale, celsius, percent, scale_for, short, significant
+from runner.arrays import FloatArray
+from runner.report.digits import Scale, celsius, percent, scale_for, short
 from runner.report.facts import INDUCTANCE, Facts, Family, MethodFacts, PartFacts
 from runner.report.look import (
     DROP_MARKERS,
@@ -21,6 +25,9 @@ from runner.report.look import (
 from runner.report.picture import Picture, Sheet
 
 MOST_SAMPLES = 240  # of a curve on paper; more is not seen
+MAP_SAMPLES = 120
+# Perceptually uniform, without its darkest end: thin dark contour lines must be seen on it.
+_MAP_COLOURS = ListedColormap(matplotlib.colormaps["viridis"](np.linspace(0.18, 1.0, 256)))
 
 
 def draw_curves(facts: Facts, part: PartFacts, method: MethodFacts) -> Picture | None:
@@ -41,18 +48,22 @@ def draw_curves(facts: Facts, part: PartFacts, method: MethodFacts) -> Picture |
         current = currents.of(family.current[thin])
         inductance = inductances.of(family.inductance[row, thin])
         margin = facts.coverage_factor * inductances.of(family.errors[row, thin])
-        axes.fill_between(current, inductance - margin, inductance + margin, color=colour, alpha=0.22, linewidth=0)
+        axes.fill_between(
+            current, inductance - margin, inductance + margin, color=colour, alpha=0.22, linewidth=0
+        )
         axes.plot(current, inductance, color=colour, linestyle=LINE_STYLES[row % len(LINE_STYLES)],
-                  marker=_marker(seen.size), markersize=3)  # fmt: skip
+                  marker=_marker(seen.size), markersize=3, gid="curve")  # fmt: skip
         ends.append((float(current[-1]), float(inductance[-1])))
         shown.append(row)
     axes.set_ylim(bottom=0)
-    axes.set_xlim(0, float(currents.of(family.current[np.isfinite(family.inductance).any(axis=0)][-1])) * 1.02)
+    axes.set_xlim(
+        0, float(currents.of(family.current[np.isfinite(family.inductance).any(axis=0)][-1])) * 1.02
+    )
     axes.set_xlabel(f"Current ({currents.unit})")
     axes.set_ylabel(f"{INDUCTANCE[method.name].capitalize()} ({inductances.unit})")
     _mark_knees(axes, family, method, colours, currents, inductances)
     _mark_rated(axes, part, currents)
-    label_ends(axes, ends, [names[row] for row in shown], [colours[row] for row in shown])
+    _name_lines(axes, ends, [names[row] for row in shown], [colours[row] for row in shown])
     return Picture(
         name=f"{part.slug}_{method.name}_curves",
         caption=_curves_caption(facts, part, method),
@@ -63,38 +74,30 @@ def draw_curves(facts: Facts, part: PartFacts, method: MethodFacts) -> Picture |
 
 def draw_surface(part: PartFacts, method: MethodFacts) -> Picture | None:
     """L over current and temperature as a map with contour lines; None with fewer than two temperatures."""
-    family = method.family
-    if family is None or family.temperature_degC.size < 2 or np.ptp(family.temperature_degC) <= 0:
+    mesh = _mesh(method.family) if method.family else None
+    if method.family is None or mesh is None:
         return None
-    columns = np.flatnonzero(np.isfinite(family.inductance).any(axis=0))
-    if columns.size < 2:
-        return None
-    columns = columns[:: max(1, columns.size // MOST_SAMPLES)]
-    currents, inductances = _scales(family)
-    current = currents.of(family.current[columns])
-    values = np.ma.masked_invalid(inductances.of(family.inductance[:, columns]))
-    figure, (axes,) = new_figure(3.5, right=0.97)
+    currents, inductances = _scales(method.family)
+    current, temperature, inductance = currents.of(mesh[0]), mesh[1], inductances.of(mesh[2])
+    figure, (axes,) = new_figure(3.5, right=0.86, top=0.97)
     axes.grid(False)
-    filled = axes.contourf(current, family.temperature_degC, values, levels=24, cmap="viridis")
-    lines = axes.contour(current, family.temperature_degC, values, levels=8, colors="white", linewidths=0.8)
-    axes.clabel(lines, fontsize=7.5, fmt=lambda level: significant(level, 3))
-    bar = figure.colorbar(filled, ax=axes, pad=0.015, fraction=0.055)
+    axes.set_facecolor("#f3f3f3")
+    levels = MaxNLocator(30).tick_values(float(inductance.min()), float(inductance.max()))
+    filled = axes.contourf(current, temperature, inductance, levels=levels, cmap=_MAP_COLOURS)
+    filled.set_edgecolor("face")  # else the page shows hairlines between the levels
+    lines = axes.contour(current, temperature, inductance, levels=MaxNLocator(9).tick_values(levels[0], levels[-1]),
+                         colors=INK, linewidths=0.5, alpha=0.8)  # fmt: skip
+    axes.clabel(lines, fontsize=7, fmt=lambda level: f"{level:g}")
+    bar = figure.colorbar(filled, cax=figure.add_axes((0.88, 0.15, 0.022, 0.79)), ticks=MaxNLocator(8))
     bar.set_label(f"{INDUCTANCE[method.name].capitalize()} ({inductances.unit})")
     bar.outline.set_visible(False)
-    axes.plot(np.full(family.temperature_degC.shape, current[0]), family.temperature_degC, ">", color=INK,
+    axes.plot(np.full(temperature.shape[0], current.min()), temperature[:, 0], ">", color=INK,
               markersize=4, clip_on=False, zorder=5)  # fmt: skip
-    for drop in method.drops:
-        reached = [knee for knee in method.knees_at(drop) if knee.is_reached]
-        if len(reached) > 1:
-            amperes = [currents.of(knee.estimate.value) for knee in reached]
-            axes.plot(amperes, [knee.temperature_degC for knee in reached], color="black", linewidth=1.2, linestyle="--")
-            axes.annotate(f"−{percent(drop)}", (amperes[-1], reached[-1].temperature_degC), xytext=(0, 3),
-                          textcoords="offset points", ha="center", va="bottom", fontsize=7.5, annotation_clip=False)  # fmt: skip
-    axes.set_facecolor("#f3f3f3")
     axes.set_xlabel(f"Current ({currents.unit})")
     axes.set_ylabel("Temperature of the part (°C)")
-    axes.set_xlim(float(current[0]), float(current[-1]))
-    figure.subplots_adjust(top=0.93)
+    axes.set_xlim(float(current.min()), float(current.max()))
+    for place, drop in enumerate(method.drops):
+        _trace_knee(axes, method, drop, currents, place)
     return Picture(
         name=f"{part.slug}_{method.name}_surface",
         caption=(
@@ -103,8 +106,56 @@ def draw_surface(part: PartFacts, method: MethodFacts) -> Picture | None:
             "each drop asked for. Grey: not measured."
         ),
         figure=figure,
-        sheet=_curves_sheet(family),
+        sheet=_curves_sheet(method.family),
     )
+
+
+def _mesh(family: Family) -> tuple[FloatArray, FloatArray, FloatArray] | None:
+    """Current, temperature and inductance, each [m, SAMPLES], on a net that spans what was measured and no more.
+
+    Every row runs from the first to the last current measured at its temperature, so that the map ends where the
+    measurement does, without steps. None where fewer than two different temperatures have two currents each.
+    """
+    rows = []
+    for temperature, inductance in zip(family.temperature_degC, family.inductance, strict=True):
+        seen = np.isfinite(inductance)
+        if np.count_nonzero(seen) < 2:
+            continue
+        current = np.linspace(family.current[seen][0], family.current[seen][-1], MAP_SAMPLES)
+        rows.append(
+            (
+                current,
+                np.full(MAP_SAMPLES, temperature),
+                np.interp(current, family.current[seen], inductance[seen]),
+            )
+        )
+    if len(rows) < 2 or np.ptp([row[1][0] for row in rows]) <= 0:
+        return None
+    return np.array([r[0] for r in rows]), np.array([r[1] for r in rows]), np.array([r[2] for r in rows])
+
+
+def _trace_knee(axes: Axes, method: MethodFacts, drop: float, currents: Scale, place: int) -> None:
+    """The saturation current as a dashed line on the map, its drop written on it; ``place`` staggers the labels."""
+    reached = [knee for knee in method.knees_at(drop) if knee.is_reached]
+    if len(reached) < 2:
+        return
+    amperes = [currents.of(knee.estimate.value) for knee in reached]
+    temperatures = [knee.temperature_degC for knee in reached]
+    axes.plot(amperes, temperatures, color="black", linewidth=1.3, linestyle=(0, (4, 2)))
+    at = temperatures[0] + (0.3 + 0.2 * (place % 3)) * (temperatures[-1] - temperatures[0])
+    axes.annotate(f"−{percent(drop)}", (float(np.interp(at, temperatures, amperes)), at), ha="center", va="center",
+                  fontsize=7.5, bbox={"facecolor": "white", "edgecolor": "none", "alpha": 0.85, "pad": 1.2})  # fmt: skip
+
+
+def _name_lines(axes: Axes, ends: list[tuple[float, float]], texts: list[str], colours: list[Any]) -> None:
+    """Labels beside the ends where the lines end together, else a list in the empty corner below the curves."""
+    reach = [x for x, _ in ends]
+    if min(reach) > 0.97 * max(reach):
+        label_ends(axes, ends, texts, colours)
+        return
+    lines = [line for line in axes.get_lines() if line.get_gid() == "curve"]
+    axes.legend(lines[::-1], texts[::-1], loc="lower left", frameon=False, fontsize=8, handlelength=3.2,
+                labelspacing=0.35, borderaxespad=0.8)  # fmt: skip
 
 
 def _scales(family: Family) -> tuple[Scale, Scale]:
@@ -139,7 +190,9 @@ def _mark_rated(axes: Axes, part: PartFacts, currents: Scale) -> None:
                       xytext=(3, 0), textcoords="offset points", color=RATED, fontsize=8)  # fmt: skip
 
 
-_MARKER_WORDS = dict(zip(DROP_MARKERS, ("circle", "square", "triangle", "diamond", "down triangle", "plus"), strict=True))
+_MARKER_WORDS = dict(
+    zip(DROP_MARKERS, ("circle", "square", "triangle", "diamond", "down triangle", "plus"), strict=True)
+)
 
 
 def _curves_caption(facts: Facts, part: PartFacts, method: MethodFacts) -> str:

@@ -161,18 +161,11 @@ def percent(fraction: float, places: int = 0) -> str:
     return f"{fixed(number, places)} %"
 
 
-def signed_percent(value: float, low: float, high: float) -> str:
-    """A relative margin and its interval: ``+12.3 % (+11.9 % to +12.7 %)``."""
-    text = interval_text(100 * value, 100 * low, 100 * high)
-    if text.value == NOTHING:
-        return NOTHING
-
-    def with_sign(digits: str) -> str:
-        return digits if digits.startswith(MINUS) or not digits.strip("0.") else "+" + digits
-
-    if text.low == NOTHING:
-        return f"{with_sign(text.value)} %"
-    return f"{with_sign(text.value)} % ({with_sign(text.low)} % to {with_sign(text.high)} %)"
+def signed_percent(fraction: float, places: int) -> str:
+    """A relative margin with its sign: ``+12.3 %``; zero has none."""
+    text = fixed(100 * fraction, places)
+    has_sign = text == NOTHING or text.startswith(MINUS) or not text.strip("0.")
+    return f"{text if has_sign else '+' + text} %" if text != NOTHING else NOTHING
 
 
 def celsius(temperature_degC: float, places: int = 1) -> str:

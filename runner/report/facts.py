@@ -170,12 +170,6 @@ def number(value: object) -> float:
     return float(value) if isinstance(value, int | float) and not isinstance(value, bool) else math.nan
 
 
-def method_name(method: object) -> str:
-    """``pulse`` or ``bias``, also from the record's numbers for them."""
-    text = str(method)
-    return METHODS[int(text) - 1] if text in ("1", "2") else text
-
-
 def _methods(run: Run, part: int, written: Mapping[str, Any]) -> tuple[MethodFacts, ...]:
     families = _families(run, part)
     found = []
@@ -199,17 +193,16 @@ def _methods(run: Run, part: int, written: Mapping[str, Any]) -> tuple[MethodFac
 def _families(run: Run, part: int) -> dict[str, Family]:
     if run.extraction is None:
         return {}
-    families = {}
+    families: dict[str, Family] = {}
     for table in run.extraction.surfaces:
         if table.part != part:
             continue
-        temperature = np.asarray(table.temperature_degC, dtype=np.float64)
-        order = np.argsort(temperature, kind="stable")
-        families[method_name(table.method)] = Family(
-            temperature_degC=temperature[order],
-            current=np.asarray(table.current, dtype=np.float64),
-            inductance=np.asarray(table.inductance, dtype=np.float64)[order],
-            errors=np.asarray(table.errors, dtype=np.float64)[order],
+        order = np.argsort(table.temperature_degC, kind="stable")
+        families[table.method] = Family(
+            temperature_degC=table.temperature_degC[order],
+            current=table.current,
+            inductance=table.inductance[order],
+            errors=table.errors[order],
         )
     return families
 

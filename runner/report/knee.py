@@ -38,7 +38,7 @@ def draw_knees(facts: Facts, part: PartFacts) -> Picture | None:
         axes.annotate(f"rated {short(part.rated_current, 'A')}", (0.005, currents.of(part.rated_current)),
                       xycoords=axes.get_yaxis_transform(), xytext=(0, 3), textcoords="offset points",
                       color=RATED, fontsize=8)  # fmt: skip
-    axes.set_ylim(0, 1.08 * max(currents.of(value) for value in [*everything, part.rated_current] if math.isfinite(value)))
+    axes.set_ylim(*_limits([currents.of(x) for x in (*everything, part.rated_current) if math.isfinite(x)]))
     axes.margins(x=0.03)
     axes.set_xlabel("Temperature of the part (°C)")
     axes.set_ylabel(f"Saturation current ({currents.unit})")
@@ -86,7 +86,8 @@ def draw_overview(facts: Facts, drop: float) -> Picture | None:
         caption=f"Saturation current at {percent(drop)} drop as a multiple of each part's rated current.",
         figure=figure,
         sheet=Sheet(
-            ("part", "method", "temperature_degC", "drop_1", "saturation_over_rated_1", "low_1", "high_1"), rows
+            ("part", "method", "temperature_degC", "drop_1", "saturation_over_rated_1", "low_1", "high_1"),
+            rows,
         ),
     )
 
@@ -126,6 +127,13 @@ def draw_resistance(facts: Facts, part: PartFacts) -> Picture | None:
             [(name, *_numbers(entry)) for name, entries in lines for entry in entries],
         ),
     )
+
+
+def _limits(values: Sequence[float]) -> tuple[float, float]:
+    # Close around the data, but never so close that a fall of a few per cent looks like a collapse.
+    low, high = min(values), max(values)
+    room = max(0.12 * (high - low), 0.1 * high)
+    return max(0.0, low - room), high + room
 
 
 def _draw_line(axes: Axes, knees: Sequence[Knee], method: str, style: int, currents: Scale) -> None:
@@ -175,19 +183,32 @@ def _caption(facts: Facts, part: PartFacts, methods: Sequence[MethodFacts]) -> s
         f"Bars: {percent(facts.coverage)} interval, often smaller than the marks."
     )
     if len(methods) > 1:
-        text += " Full marks: " + METHOD_TITLES["pulse"].lower() + "; open marks: " + METHOD_TITLES["bias"].lower() + "."
+        text += (
+            " Full marks: "
+            + METHOD_TITLES["pulse"].lower()
+            + "; open marks: "
+            + METHOD_TITLES["bias"].lower()
+            + "."
+        )
     if not all(knee.is_reached for method in methods for knee in method.knees):
         text += " Arrow up: not reached, the bar is the largest current seen."
     return text
 
 
 def _sheet(methods: Sequence[MethodFacts]) -> Sheet:
-    header = ("method", "temperature_degC", "drop_1", "reference", "saturation_current_A", "low_A", "high_A", "status")
+    header = (
+        "method",
+        "temperature_degC",
+        "drop_1",
+        "reference",
+        "saturation_current_A",
+        "low_A",
+        "high_A",
+        "status",
+    )
     rows = [
         (method.name, knee.temperature_degC, knee.drop, knee.reference, knee.estimate.value, knee.estimate.low,
          knee.estimate.high, knee.status)
         for method in methods for drop in method.drops for knee in method.knees_at(drop)
     ]  # fmt: skip
     return Sheet(header, rows)
-
-

@@ -98,7 +98,7 @@ def temperature_colours(temperatures_degC: Sequence[float] | FloatArray) -> list
     span = float(np.ptp(values)) if values.size else 0.0
     places = (values - values.min()) / span if span > 0 else np.full(values.shape, 0.4)
     colour_map = matplotlib.colormaps["plasma"]
-    return [colour_map(0.02 + 0.80 * place) for place in places]
+    return [colour_map(0.02 + 0.74 * place) for place in places]
 
 
 def temperature_names(temperatures_degC: Sequence[float] | FloatArray) -> list[str]:
@@ -124,7 +124,9 @@ def spread(wanted: Sequence[float], gap: float) -> list[float]:
     blocks: list[list[float]] = []
     for k in order:
         blocks.append([wanted[k]])
-        while len(blocks) > 1 and _first_of(blocks[-2], gap) + len(blocks[-2]) * gap > _first_of(blocks[-1], gap):
+        while len(blocks) > 1 and _first_of(blocks[-2], gap) + len(blocks[-2]) * gap > _first_of(
+            blocks[-1], gap
+        ):
             last = blocks.pop()
             blocks[-1] = blocks[-1] + last
     places = [_first_of(block, gap) + j * gap for block in blocks for j in range(len(block))]

@@ -15,6 +15,7 @@ from typing import Any
 import jinja2
 import numpy as np
 
+from runner.errors import InputError
 from runner.record import Run, open_run
 from runner.report import look
 from runner.report.captures import draw_captures
@@ -24,8 +25,15 @@ from runner.report.facts import INDUCTANCE, METHOD_TITLES, Facts, MethodFacts, P
 from runner.report.knee import draw_knees, draw_overview, draw_resistance
 from runner.report.night import MOST_NUMBERS, Mark, draw_night, marks
 from runner.report.picture import Pasted, Picture, save
-from runner.report.tables import Table, budget_table, flag_rows, knee_table, temperature_table
-from runner.report.words import headline, headline_drop, margin_text, plan_in_words, read_plan
+from runner.report.tables import Table, budget_table, flag_rows, knee_tables, temperature_table
+from runner.report.words import (
+    headline,
+    headline_drop,
+    hold_together,
+    plan_in_words,
+    read_plan,
+    short_margin,
+)
 
 CAUTIONS = (
     "Limits in software are no safety device. Interlock and emergency stop belong in hardware, and the rules of the "
@@ -63,11 +71,10 @@ def write_report(folder: Path) -> Path:
     Raises:
         InputError: ``folder`` is not a run.
     """
-    run = open_run(folder)
-    into = Path(folder) / "report"
-    into.mkdir(exist_ok=True)
-    page = into / "index.html"
-    with look.settings():
+    with open_run(folder) as run, look.settings():
+        into = run.folder / "report"
+        into.mkdir(exist_ok=True)
+        page = into / "index.html"
         text = _render(_context(run, into))
     page.write_text(text, encoding="utf-8", newline="\n")
     return page
@@ -75,7 +82,7 @@ def write_report(folder: Path) -> Path:
 
 def _context(run: Run, into: Path) -> dict[str, Any]:
     plan = read_plan(run.plan_bytes)
-    facts = gather(run, {})
+    facts = gather(run, _rated_currents(run))
     told = marks(run)
 
     def paste(picture: Picture | None) -> Pasted | None:
@@ -88,15 +95,17 @@ def _context(run: Run, into: Path) -> dict[str, Any]:
         "troubles": list(_troubles(run, facts)),
         "parts": [_part(run, facts, part, paste) for part in facts.parts],
         "together": _together(facts, paste),
-        "tested": list(plan_in_words(plan)),
+        "tested": [(what, hold_together(how)) for what, how in plan_in_words(plan)],
         "methods": [_METHOD_WORDS[name] for name in _METHOD_WORDS if name in plan or _has(facts, name)],
         "cautions": CAUTIONS,
         "run_in_time": _run_in_time(run),
         "night": paste(draw_night(run, told)),
         "legs": _leg_rows(run),
-        "marks": [_mark_row(run, mark) for mark in told[:MOST_NUMBERS]],
+        "marks": [_mark_row(mark) for mark in told[:MOST_NUMBERS]],
         "marks_left": max(0, len(told) - MOST_NUMBERS),
-        "instruments": [(i.role.replace("_", " "), i.vendor, i.model, i.serial, i.firmware) for i in run.instruments],
+        "instruments": [
+            (i.role.replace("_", " "), i.vendor, i.model, i.serial, i.firmware) for i in run.instruments
+        ],
         "calibration": _calibration(run),
         "versions": list(_versions(run)),
         "files": [
@@ -107,22 +116,34 @@ def _context(run: Run, into: Path) -> dict[str, Any]:
     }
 
 
+def _rated_currents(run: Run) -> dict[int, float]:
+    """Rated current by part, from the plan or the captures file as the record keeps them; empty if they say none."""
+    if run.result is not None and all("rated_current" in part for part in run.result.get("parts", [])):
+        return {}  # the extraction passed them on; reading a plan would cost more time than the tables do
+    from runner.plan import parse_captures, parse_plan
+
+    try:
+        if run.kind == "captures":
+            parts = (parse_captures(run.plan_bytes, run.plan_name).part,)
+        else:
+            parts = parse_plan(run.plan_bytes, run.plan_name).parts
+    except InputError:  # an old plan that today's reader refuses: its text is on the page all the same
+        return {}
+    return {index: float(part.rated_current) for index, part in enumerate(parts)}
+
+
 def _part(run: Run, facts: Facts, part: PartFacts, paste: Any) -> dict[str, Any]:
     known = _places(run)
     return {
         "slug": part.slug,
         "label": part.label,
         "description": part.description,
-        "headline": headline(facts, part),
+        "headline": hold_together(headline(facts, part)),
         "sentences": [str(text) for text in part.extras.get("sentences") or []],
         "methods": [_method(facts, part, method, paste) for method in part.methods],
         "saturation": paste(draw_knees(facts, part)),
         "resistance": paste(draw_resistance(facts, part)),
-        "resistance_tables": [
-            temperature_table(facts, f"Winding resistance, {method.name} method", method.resistance, "ohm")
-            for method in part.methods
-            if method.resistance
-        ],
+        "resistance_tables": _resistance_tables(facts, part),
         "captures": paste(draw_captures(run, part, _knee_by_leg(run, part))),
         "cross_check": [str(row.get("text", "")) for row in part.extras.get("cross_check") or []],
         "flags": flag_rows(part, known),
@@ -131,19 +152,31 @@ def _part(run: Run, facts: Facts, part: PartFacts, paste: Any) -> dict[str, Any]
 
 def _method(facts: Facts, part: PartFacts, method: MethodFacts, paste: Any) -> dict[str, Any]:
     inductance = INDUCTANCE[method.name]
-    initial = temperature_table(facts, f"Initial {inductance}", method.initial, "H") if method.initial else None
+    initial = (
+        temperature_table(facts, f"Initial {inductance}", method.initial, "H") if method.initial else None
+    )
     budgets = [budget_table(entry) for entry in method.extras.get("budget") or []]
     return {
         "title": METHOD_TITLES[method.name],
         "inductance": inductance,
         "meaning": _MEANINGS[method.name],
-        "knees": knee_table(facts, part, method) if method.knees else None,
+        "knees": knee_tables(facts, part, method),
         "curves": paste(draw_curves(facts, part, method)),
         "surface": paste(draw_surface(part, method)),
         "initial": initial,
         "budgets": [budget for budget in budgets if budget],
         "extras": [],
     }
+
+
+def _resistance_tables(facts: Facts, part: PartFacts) -> list[Table]:
+    known = [method for method in part.methods if method.resistance]
+    if len({method.resistance for method in known}) == 1:  # both methods stand on one measurement
+        return [temperature_table(facts, "Winding resistance", known[0].resistance, "ohm")]
+    return [
+        temperature_table(facts, f"Winding resistance, {method.name} method", method.resistance, "ohm")
+        for method in known
+    ]
 
 
 def _together(facts: Facts, paste: Any) -> dict[str, Any] | None:
@@ -159,20 +192,21 @@ def _together(facts: Facts, paste: Any) -> dict[str, Any] | None:
         knees = method.knees_at(drop) if method else ()
         reached = [knee for knee in knees if knee.is_reached]
         if method is None or not reached:
-            rows.append(((part.label,), (NOTHING,), ("not reached" if knees else NOTHING,), (NOTHING,)))
+            rows.append((part.label, NOTHING, NOTHING, knees[0].status if knees else NOTHING, NOTHING))
             continue
         worst = min(reached, key=lambda knee: knee.estimate.value)
         rows.append(
             (
-                (part.label, f"{method.name} method"),
-                (fixed(worst.temperature_degC, 1),),
-                (quantity(worst.estimate.value, "A"),),
-                (margin_text(worst, part.rated_current) or NOTHING,),
+                part.label,
+                method.name,
+                fixed(worst.temperature_degC, 1),
+                quantity(worst.estimate.value, "A"),
+                short_margin(worst, part.rated_current) if part.rated_current > 0 else NOTHING,
             )
         )
     table = Table(
         f"Lowest saturation current of each part, {100 * drop:.3g} % drop",
-        ("Part", "Temperature (°C)", "Saturation current", "Margin to the rated current"),
+        ("Part", "Method", "Temperature (°C)", "Saturation current", "Margin to the rated current"),
         tuple(rows),
     )
     return {"table": table, "picture": paste(draw_overview(facts, drop))}
@@ -205,7 +239,7 @@ def _run_in_time(run: Run) -> str:
     count = len(run.points["point"])
     flagged = int(np.count_nonzero(run.points["quality"]))
     text = f"{count} points" + (f", {flagged} of them flagged" if flagged else ", none flagged")
-    if run.end is not None and math.isfinite(run.end):
+    if run.kind != "captures":
         text += f", in {duration(run.end - run.start)}"
     if len(run.sessions) > 1:
         text += f", in {len(run.sessions)} sessions"
@@ -216,29 +250,28 @@ def _leg_rows(run: Run) -> list[tuple[str, ...]]:
     points = run.points
     rows = []
     for leg in run.legs:
-        mine = np.asarray(points["leg"]) == leg.index
-        body = np.asarray(points["body_temperature"], dtype=np.float64)[mine]
-        body = body[np.isfinite(body)]
+        mine = points["leg"] == leg.index
+        body = points["body_temperature"][mine & np.isfinite(points["body_temperature"])]
         rows.append(
             (
-                fixed(leg.setpoint_degC, 1),
+                fixed(leg.setpoint, 1),
                 fixed(float(body.mean()), 1) if body.size else NOTHING,
-                duration(leg.start - run.start),
+                duration(leg.start),
                 duration(leg.end - leg.start),
                 str(int(mine.sum())),
-                str(int(np.count_nonzero(np.asarray(points["quality"])[mine]))),
+                str(int(np.count_nonzero(points["quality"][mine]))),
             )
         )
     return rows
 
 
-def _mark_row(run: Run, mark: Mark) -> dict[str, str]:
+def _mark_row(mark: Mark) -> dict[str, str]:
     text = mark.text + (f" (and {mark.count - 1} more alike)" if mark.count > 1 else "")
     if mark.point >= 0:
         text = f"Point {mark.point}: {text}"
     return {
         "number": str(mark.number),
-        "after": duration(mark.time - run.start),
+        "after": duration(mark.time),
         "leg": mark.leg,
         "level": mark.level,
         "kind": mark.kind.replace("_", " "),
@@ -256,7 +289,7 @@ def _knee_by_leg(run: Run, part: PartFacts) -> dict[int, float]:
     if not knees:
         return {}
     nearest = {
-        leg.index: min(knees, key=lambda knee: abs(knee.temperature_degC - leg.setpoint_degC)) for leg in run.legs
+        leg.index: min(knees, key=lambda knee: abs(knee.temperature_degC - leg.setpoint)) for leg in run.legs
     }
     return {leg: knee.estimate.value for leg, knee in nearest.items()}
 
@@ -292,12 +325,14 @@ def _calibration(run: Run) -> list[tuple[str, ...]]:
 
 def _constant(value: float, unit: str) -> str:
     # An SI prefix cannot stand before "K" differences in ppm or a plain ratio: those are written out.
-    return short(value, unit, 6) if unit in {"ohm", "s", "H", "V", "A", "F"} else f"{value:.6g} {unit}".strip()
+    return (
+        short(value, unit, 6) if unit in {"ohm", "s", "H", "V", "A", "F"} else f"{value:.6g} {unit}".strip()
+    )
 
 
 def _versions(run: Run) -> Iterator[tuple[str, str]]:
     for number, session in enumerate(run.sessions, start=1):
-        when = datetime.fromtimestamp(session.t, UTC).strftime("%Y-%m-%d %H:%M UTC")
+        when = datetime.fromtimestamp(run.start + session.start, UTC).strftime("%Y-%m-%d %H:%M UTC")
         versions: Mapping[str, str] = session.versions
         software = ", ".join([session.software, *(f"{name} {version}" for name, version in versions.items())])
         yield f"Session {number}", f"{when}: {software}"
@@ -317,5 +352,3 @@ def _render(context: Mapping[str, Any]) -> str:
 
 def _template_text(name: str) -> str:
     return (Path(__file__).parent / "templates" / name).read_text(encoding="utf-8")
-
-

@@ -78,9 +78,7 @@ def inline_svg(document: str, name: str) -> str:
     svg = re.sub(r'href="#([^"]+)"', rf'href="#{name}-\1"', svg)
     svg = re.sub(r"url\(#([^)]+)\)", rf"url(#{name}-\1)", svg)
     # The size in points would fix the size on the page; the view box alone lets it follow the column.
-    return re.sub(
-        r'<svg ([^>]*?)height="[^"]*"([^>]*?)width="[^"]*"', r"<svg \1\2", svg, count=1
-    ).strip()
+    return re.sub(r'<svg ([^>]*?)height="[^"]*"([^>]*?)width="[^"]*"', r"<svg \1\2", svg, count=1).strip()
 
 
 def _field(value: float | int | str) -> str:

@@ -10,62 +10,91 @@ from typing import Any
 
 from runner.report.digits import (
     NOTHING,
+    IntervalText,
     celsius,
     fixed,
     interval_text,
     percent,
     round_uncertainty,
     scale_for,
+    short,
     significant,
 )
-from runner.report.facts import AtTemperature, Facts, Knee, MethodFacts, PartFacts, number
-from runner.report.words import counted_from, margin_text
+from runner.report.facts import (
+    INDUCTANCE,
+    METHOD_TITLES,
+    AtTemperature,
+    Facts,
+    Knee,
+    MethodFacts,
+    PartFacts,
+    number,
+)
+from runner.report.words import counted_from, short_margin
 
-NOT_REACHED = "not reached"
+DROPS_A_TABLE = 3
 
 
 @dataclass(frozen=True, slots=True)
 class Table:
-    """Head and rows of equal length; a cell may hold lines, of which all but the first are set small."""
+    """Head and rows of equal length; ``groups`` (text, columns spanned) stand above the head."""
 
     title: str
     head: tuple[str, ...]
-    rows: tuple[tuple[tuple[str, ...], ...], ...]
+    rows: tuple[tuple[str, ...], ...]
     note: str = ""
+    groups: tuple[tuple[str, int], ...] = ()
 
 
-def knee_table(facts: Facts, part: PartFacts, method: MethodFacts) -> Table:
-    """Isat by temperature (rows) and drop (columns), with interval and margin to the rated current in each cell."""
+def knee_tables(facts: Facts, part: PartFacts, method: MethodFacts) -> tuple[Table, ...]:
+    """Isat by temperature (rows) and drop (groups of columns), with interval and margin to the rated current.
+
+    Three drops fit the width of a page; more go into further tables.
+    """
+    drops = method.drops
+    return tuple(
+        _knee_table(facts, part, method, drops[first : first + DROPS_A_TABLE])
+        for first in range(0, len(drops), DROPS_A_TABLE)
+    )
+
+
+def _knee_table(facts: Facts, part: PartFacts, method: MethodFacts, drops: tuple[float, ...]) -> Table:
     scale = scale_for([x for k in method.knees for x in (k.estimate.value, k.estimate.low)], "A")
     by_place = {(knee.temperature_degC, knee.drop): knee for knee in method.knees}
-    temperatures = sorted({knee.temperature_degC for knee in method.knees})
+    has_rating = part.rated_current > 0
 
-    def cell(knee: Knee | None) -> tuple[str, ...]:
+    def cells(knee: Knee | None) -> tuple[str, ...]:
         if knee is None:
-            return (NOTHING,)
-        margin = margin_text(knee, part.rated_current)
-        lines = [margin] if margin else []
-        if knee.is_reached:
-            text = interval_text(knee.estimate.value, knee.estimate.low, knee.estimate.high, factor=scale.factor)
-            return (text.value, f"{text.low} to {text.high}", *lines)
-        # Any other status is shown under its own name: the report does not know better than the extraction.
-        seen = knee.estimate.low
-        bound = f"above {significant(scale.of(seen), 3)} {scale.unit}" if math.isfinite(seen) else ""
-        return (NOT_REACHED if knee.status == NOT_REACHED else knee.status, *([bound] if bound else []), *lines)
+            value, interval = NOTHING, NOTHING
+        elif knee.is_reached:
+            text = interval_text(
+                knee.estimate.value, knee.estimate.low, knee.estimate.high, factor=scale.factor
+            )
+            value, interval = text.value, _interval(text)
+        else:
+            # Any status is shown under its own name: the report does not know better than the extraction.
+            seen = significant(scale.of(knee.estimate.low), 3)
+            value, interval = knee.status, f"above {seen}" if seen != NOTHING else NOTHING
+        margin = short_margin(knee, part.rated_current) if knee else NOTHING
+        return (value, interval, margin) if has_rating else (value, interval)
 
-    rows = tuple(
-        ((fixed(temperature, 1),), *(cell(by_place.get((temperature, drop))) for drop in method.drops))
-        for temperature in temperatures
-    )
     references = sorted({knee.reference for knee in method.knees})
-    note = f"Drop {'; '.join(counted_from(r) for r in references)}. Below each value: its {percent(facts.coverage)} interval"
-    if math.isfinite(part.rated_current):
-        note += ", then the margin to the rated current with the same interval"
+    note = f"Drop of the {INDUCTANCE[method.name]}, {'; '.join(counted_from(r) for r in references)}."
+    if has_rating:
+        note += f" Margin: saturation current over the rated {short(part.rated_current, 'A')}, less one."
+    head = ["Isat", f"{percent(facts.coverage)} interval"] + (["margin"] if has_rating else [])
     return Table(
-        "Saturation current",
-        ("Temperature (°C)", *(f"{percent(drop)} drop ({scale.unit})" for drop in method.drops)),
-        rows,
-        note + ".",
+        f"Saturation current of {part.label} ({scale.unit}), {METHOD_TITLES[method.name].lower()}",
+        ("Temperature (°C)", *(head * len(drops))),
+        tuple(
+            (
+                fixed(temperature, 1),
+                *(text for drop in drops for text in cells(by_place.get((temperature, drop)))),
+            )
+            for temperature in sorted({knee.temperature_degC for knee in method.knees})
+        ),
+        note,
+        (("", 1), *((f"{percent(drop)} drop", len(head)) for drop in drops)),
     )
 
 
@@ -74,17 +103,23 @@ def temperature_table(facts: Facts, title: str, entries: Sequence[AtTemperature]
     scale = scale_for([entry.estimate.value for entry in entries], unit)
     rows = []
     for entry in entries:
-        text = interval_text(entry.estimate.value, entry.estimate.low, entry.estimate.high, factor=scale.factor)
-        interval = f"{text.low} to {text.high}" if text.low != NOTHING else NOTHING
-        rows.append(((fixed(entry.temperature_degC, 1),), (text.value,), (interval,)))
-    head = ("Temperature (°C)", f"{title} ({scale.unit})", f"{percent(facts.coverage)} interval ({scale.unit})")
+        text = interval_text(
+            entry.estimate.value, entry.estimate.low, entry.estimate.high, factor=scale.factor
+        )
+        rows.append((fixed(entry.temperature_degC, 1), text.value, _interval(text)))
+    head = (
+        "Temperature (°C)",
+        f"{title} ({scale.unit})",
+        f"{percent(facts.coverage)} interval ({scale.unit})",
+    )
     return Table(title, head, tuple(rows))
 
 
 def budget_table(entry: Mapping[str, Any]) -> Table | None:
     """Contributions to the uncertainty of one saturation current, the largest first; None when there are none."""
     contributions = [
-        (str(c.get("name", "")), number(c.get("standard_uncertainty"))) for c in entry.get("contributions") or []
+        (str(c.get("name", "")), number(c.get("standard_uncertainty")))
+        for c in entry.get("contributions") or []
     ]
     contributions = sorted((c for c in contributions if c[1] > 0), key=lambda c: -c[1])
     if not contributions:
@@ -92,9 +127,9 @@ def budget_table(entry: Mapping[str, Any]) -> Table | None:
     total = math.sqrt(sum(u**2 for _, u in contributions))
     scale = scale_for([total], "A")
 
-    def line(name: str, u: float) -> tuple[tuple[str, ...], ...]:
+    def line(name: str, u: float) -> tuple[str, ...]:
         rounded, places = round_uncertainty(scale.of(u))
-        return ((name,), (fixed(rounded, places),), (f"{100 * u**2 / total**2:.1f} %",))
+        return (name, fixed(rounded, places), f"{100 * u**2 / total**2:.1f} %")
 
     rows = [line(name, u) for name, u in contributions]
     rows.append(line("combined", total))
@@ -109,8 +144,15 @@ def budget_table(entry: Mapping[str, Any]) -> Table | None:
 def flag_rows(part: PartFacts, known: Mapping[int, str]) -> tuple[tuple[str, str, str, str], ...]:
     """(point, where, flag, sentence); ``known`` tells by point where it stands in the plan."""
     return tuple(
-        ("" if flag.point < 0 else str(flag.point), known.get(flag.point, ""), flag.flag.replace("_", " "), flag.text)
+        (
+            "" if flag.point < 0 else str(flag.point),
+            known.get(flag.point, ""),
+            flag.flag.replace("_", " "),
+            flag.text,
+        )
         for flag in part.flags
     )
 
 
+def _interval(text: IntervalText) -> str:
+    return NOTHING if text.low == NOTHING else f"{text.low} to {text.high}"

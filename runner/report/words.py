@@ -11,7 +11,16 @@ from typing import Any
 
 import yaml
 
-from runner.report.digits import celsius, interval_text, percent, scale_for, short, signed_percent
+from runner.report.digits import (
+    NOTHING,
+    celsius,
+    interval_text,
+    percent,
+    round_uncertainty,
+    scale_for,
+    short,
+    signed_percent,
+)
 from runner.report.facts import INDUCTANCE, Facts, Knee, MethodFacts, PartFacts
 
 USUAL_DROP = 0.30  # the drop most data sheets state Isat for (common practice)
@@ -24,6 +33,10 @@ _UNIT_SPELLINGS = (
     (re.compile(r"\^2\b"), "²"),
     (re.compile(r"\^3\b"), "³"),
     (re.compile(r"(?<![\w.])-(?=\d)"), "−"),
+)
+
+_BEFORE_UNIT = re.compile(
+    r"(?<=\d) (?=(?:[%°µΩ]|[numkMG]?[AVHFsWJK]\b|[umkM]?ohm|[umk]?m\b|min\b|h\b|[mkM]?Ω|k?Hz))"
 )
 
 
@@ -74,14 +87,23 @@ def counted_from(reference: str) -> str:
     return known.get(reference, f"counted from the initial value at {printed(reference)}")
 
 
-def margin_text(knee: Knee, rated_current: float) -> str:
-    """Isat over rated current, less one, with its interval; a bound where it was not reached."""
-    if not (math.isfinite(rated_current) and rated_current > 0):
-        return ""
-    low = knee.estimate.low / rated_current - 1
+def short_margin(knee: Knee, rated_current: float) -> str:
+    """Isat over rated current, less one, to one digit of its uncertainty; a bound where it was not reached.
+
+    Where the interval holds zero, the sign is not certain, and the interval stands beside it.
+    """
+    low, high = knee.estimate.low / rated_current - 1, knee.estimate.high / rated_current - 1
     if not knee.is_reached:
-        return f"more than {signed_percent(low, math.nan, math.nan)}" if math.isfinite(low) else ""
-    return signed_percent(knee.estimate.value / rated_current - 1, low, knee.estimate.high / rated_current - 1)
+        return f"over {signed_percent(low, 0)}" if math.isfinite(low) else NOTHING
+    margin = knee.estimate.value / rated_current - 1
+    half_width = 100 * max(high - margin, margin - low)
+    places = round_uncertainty(half_width)[1] - 1 if half_width > 0 else 1
+    text = signed_percent(margin, places)
+    return (
+        f"{text} ({signed_percent(low, places)} to {signed_percent(high, places)})"
+        if low < 0 < high
+        else text
+    )
 
 
 def printed(value: object) -> str:
@@ -92,6 +114,11 @@ def printed(value: object) -> str:
     for pattern, spelling in _UNIT_SPELLINGS:
         text = pattern.sub(spelling, text)
     return text
+
+
+def hold_together(text: str) -> str:
+    """Text in which no line ends between a number and its unit."""
+    return _BEFORE_UNIT.sub("\N{NO-BREAK SPACE}", text)
 
 
 def read_plan(data: bytes) -> Mapping[str, Any]:
@@ -171,7 +198,8 @@ def _setting(key: str, value: object) -> str:
     if isinstance(value, Mapping) and "seek" in value:
         return f"{name} sought at the knee: {_told({k: v for k, v in value.items() if k != 'seek'})}"
     if isinstance(value, Mapping) and {"from", "to", "count"} <= value.keys():
-        return f"{name} in {value['count']} steps from {printed(value['from'])} to {printed(value['to'])}"
+        text = f"{name} at {value['count']} values from {printed(value['from'])} to {printed(value['to'])}"
+        return text + (", up and down again" if value.get("both_ways") else "")
     if key == "conditioning":
         return f"{value} conditioning pulses before each point, not recorded"
     if key == "repeats":
@@ -179,10 +207,14 @@ def _setting(key: str, value: object) -> str:
     return f"{name} {_told(value)}"
 
 
-def _told(value: object) -> str:
+def _told(value: object, key: str = "") -> str:
     if isinstance(value, Mapping):
-        return ", ".join(f"{_WORDS.get(str(k), str(k).replace('_', ' '))} {_told(v)}" for k, v in value.items())
+        return ", ".join(
+            f"{_WORDS.get(str(k), str(k).replace('_', ' '))} {_told(v, str(k))}" for k, v in value.items()
+        )
     if isinstance(value, list):
+        if key == "chamber" and len(value) == 2:
+            return f"{printed(value[0])} to {printed(value[1])}"
         if len(value) > 12:
             return f"{len(value)} values from {printed(value[0])} to {printed(value[-1])}"
         return ", ".join(printed(v) for v in value)
@@ -192,9 +224,7 @@ def _told(value: object) -> str:
 def _with_interval(knee: Knee, coverage: float) -> str:
     scale = scale_for([knee.estimate.value], "A")
     text = interval_text(knee.estimate.value, knee.estimate.low, knee.estimate.high, factor=scale.factor)
-    return (
-        f"{text.value} {scale.unit} ({percent(coverage)} interval {text.low} {scale.unit} to {text.high} {scale.unit})"
-    )
+    return f"{text.value} {scale.unit} ({percent(coverage)} interval {text.low} {scale.unit} to {text.high} {scale.unit})"
 
 
 def _against_rating(knee: Knee, rated_current: float) -> str:
