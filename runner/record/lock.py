@@ -1,0 +1,61 @@
+"""Who may write: ``run.lock`` for the one process that acquires, ``record.lock`` for whoever rebuilds the
+record.
+
+Both are locks of the operating system on an open file, so that they vanish with the process that held them,
+however it ended; the files themselves stay and mean nothing.
+"""
+
+from collections.abc import Iterator
+from contextlib import contextmanager
+from pathlib import Path
+
+from filelock import FileLock, Timeout
+
+from runner.errors import Fault, InputError
+
+#: A reader that asks `is_being_acquired` holds the lock for an instant; an acquiring process outwaits it.
+_PATIENCE = 1.0  # s
+_RECORD_PATIENCE = 1800.0  # s: the longest rebuild that somebody else may be busy with
+
+
+def take_run_lock(folder: Path) -> FileLock:
+    """Become the one process that acquires this run.
+
+    Raises:
+        InputError: another process is acquiring it.
+    """
+    lock = FileLock(folder / "run.lock", timeout=_PATIENCE)
+    try:
+        lock.acquire()
+    except Timeout:
+        raise InputError([Fault(str(folder), _REFUSAL)]) from None
+    return lock
+
+
+_REFUSAL = (
+    "another process is acquiring this run right now (it holds run.lock). Watch it with 'kneemap status', "
+    "or stop it and try again."
+)
+
+
+def is_being_acquired(folder: Path) -> bool:
+    """Does a living process hold the run?"""
+    path = folder / "run.lock"
+    if not path.exists():
+        return False
+    lock = FileLock(path, timeout=0)
+    try:
+        lock.acquire()
+    except Timeout:
+        return True
+    except OSError:  # a folder that we may only read: nobody can be writing it from here
+        return False
+    lock.release()
+    return False
+
+
+@contextmanager
+def holding_record_lock(folder: Path) -> Iterator[None]:
+    """Rebuilds and re-extractions of one run come one after the other, in whichever process they run."""
+    with FileLock(folder / "record.lock", timeout=_RECORD_PATIENCE):
+        yield

@@ -1,0 +1,352 @@
+"""A run as it is read: extraction and report see nothing else.
+
+All of it comes from ``record.h5``; times are seconds from the start of the run, everything else is SI and
+degC. Captures stay on the disk and are read point by point, so memory does not grow with the night. An open
+`Run` is one instant: a rebuild puts a new file in place of the one that is being read here, and the old one
+stays whole.
+"""
+
+import json
+import math
+from dataclasses import dataclass
+from functools import cached_property
+from pathlib import Path
+from typing import Any, Self
+
+import h5py
+import numpy as np
+
+from runner.arrays import FloatArray
+from runner.record import hdf, reading
+from runner.record.columns import EVERY_COLUMN, INTEGERS, LAYOUT_VERSION
+from runner.record.consolidation import consolidate, is_current
+from runner.record.errors import RecordError, not_a_run
+from runner.record.extractions import RECORD, latest_valid, read_tables
+from runner.record.flags import is_acceptable
+from runner.record.layout import CHAMBER
+from runner.record.lock import is_being_acquired
+from runner.record.reading import JOURNAL, Columns, LegTimes, Session
+from runner.record.rows import CalibrationRow, Codes, EventRow, InstrumentRow, PartRow
+from runner.record.tables import ExtractionTables
+from runner.record.verify import capture_groups
+
+
+@dataclass(frozen=True, slots=True)
+class PointCaptures:
+    """All captures of one point: n samples, r repeats.
+
+    ``time`` [n] s from the trigger; ``voltage`` [r, n] V, ``current`` [r, n] A (shunt voltage over the
+    bench's nominal shunt resistance); the codes [r, n] as delivered; ``repeat`` [r]; ``setting`` with
+    "code_min" and "code_max" of the digitizer (infinite where the captures were not codes).
+    """
+
+    time: FloatArray
+    voltage: FloatArray
+    current: FloatArray
+    voltage_codes: Codes
+    current_codes: Codes
+    repeat: Codes
+    setting: dict[str, Any]
+
+
+def open_run(path: Path | str) -> "Run":
+    """Open a run folder or a ``record.h5``.
+
+    A folder whose record is missing, or older than its journal, has it rebuilt first; while the run is being
+    acquired the record of the last rebuild is read as it is.
+
+    Raises:
+        InputError: it is neither.
+        RecordError: it is damaged, or its record could not be rebuilt.
+    """
+    path = Path(path)
+    if path.is_file():
+        return Run(path)
+    if not path.is_dir():
+        raise not_a_run(path, "there is no such run folder or record.")
+    record = path / RECORD
+    if (path / JOURNAL).is_file() and reading.has_run(path):
+        acquired = record.is_file() and is_being_acquired(path)
+        if not acquired and not is_current(path):
+            return Run(consolidate(path))
+    elif not record.is_file():
+        raise not_a_run(path, f"is not a run folder: it has neither {RECORD} nor {JOURNAL}.")
+    return Run(record)
+
+
+class Run:
+    """An open record. Close it, or use it in a ``with`` statement; it can be sent to another process."""
+
+    def __init__(self, path: Path) -> None:
+        self.path = path
+        try:
+            self._file = hdf.open_to_read(path)
+        except OSError as error:
+            raise not_a_run(path, f"is not a record that can be read: {error}.") from error
+        try:
+            state = self._file["entry/run_state"]
+            version = int(state.attrs["layout_version"])
+        except (KeyError, ValueError):
+            self._file.close()
+            raise not_a_run(path, "is an HDF5 file, but not a record of kneemap.") from None
+        if version > LAYOUT_VERSION:
+            self._file.close()
+            raise not_a_run(
+                path, f"was written by a newer kneemap (layout {version}, known is {LAYOUT_VERSION})."
+            )
+
+    def __reduce__(self) -> tuple[Any, ...]:
+        return Run, (self.path,)
+
+    # ------------------------------------------------------------ the run itself
+
+    @property
+    def folder(self) -> Path:
+        return self.path.parent
+
+    @cached_property
+    def title(self) -> str:
+        return self._text("title")
+
+    @cached_property
+    def kind(self) -> str:
+        """ "plan" for a plan that was carried out, "captures" for captures taken by hand."""
+        return self._text("run_state/kind")
+
+    @cached_property
+    def start(self) -> float:
+        """UTC seconds since 1970; all other times are relative to it."""
+        return hdf.from_iso(self._text("start_time"))
+
+    @cached_property
+    def end(self) -> float:
+        """The last time at which anything happened [UTC s]."""
+        return hdf.from_iso(self._text("end_time"))
+
+    @cached_property
+    def state(self) -> str:
+        return self._text("run_state/state")
+
+    @cached_property
+    def run_id(self) -> str:
+        return self._text("entry_identifier_uuid")
+
+    @cached_property
+    def raw_sha256(self) -> str:
+        return self._text("run_state/raw_sha256")
+
+    @cached_property
+    def plan_name(self) -> str:
+        return self._text("plan/file_name")
+
+    @cached_property
+    def plan_bytes(self) -> bytes:
+        return bytes(self._entry["plan/data"][:].tobytes())
+
+    @cached_property
+    def bench_name(self) -> str:
+        return self._text("bench_description/file_name")
+
+    @cached_property
+    def bench_bytes(self) -> bytes:
+        return bytes(self._entry["bench_description/data"][:].tobytes())
+
+    @cached_property
+    def parts(self) -> tuple[PartRow, ...]:
+        names = sorted(name for name in self._entry if name.startswith("part_"))
+        return tuple(
+            PartRow(
+                self._text(f"{name}/name"),
+                self._text(f"{name}/description"),
+                int(self._entry[name]["changer_position"][()]),
+            )
+            for name in names
+        )
+
+    @cached_property
+    def instruments(self) -> tuple[InstrumentRow, ...]:
+        bench = self._entry["bench"]
+        return tuple(_instrument(role, bench[role]) for role in bench if role != "name")
+
+    @cached_property
+    def legs(self) -> tuple[LegTimes, ...]:
+        state = self._entry["run_state"]
+        columns = (
+            state[name][:].tolist() for name in ("leg", "leg_temperature_setpoint", "leg_start", "leg_end")
+        )
+        return tuple(LegTimes(*row) for row in zip(*columns, strict=True))
+
+    @cached_property
+    def sessions(self) -> tuple[Session, ...]:
+        state = self._entry["run_state"]
+        rows = zip(
+            state["session"][:].tolist(),
+            state["session_start"][:].tolist(),
+            hdf.read_texts(state, "session_software"),
+            hdf.read_texts(state, "session_versions"),
+            strict=True,
+        )
+        return tuple(
+            Session(number, start, software, json.loads(text)) for number, start, software, text in rows
+        )
+
+    @cached_property
+    def events(self) -> tuple[EventRow, ...]:
+        made = self._entry["events"]
+        rows = zip(
+            made["time"][:].tolist(),
+            *(hdf.read_texts(made, name) for name in ("level", "kind", "text")),
+            made["point"][:].tolist(),
+            made["leg"][:].tolist(),
+            strict=True,
+        )
+        return tuple(EventRow(*row) for row in rows)
+
+    @cached_property
+    def chamber_log(self) -> tuple[FloatArray, FloatArray]:
+        """Time [n] s and air temperature [n] degC."""
+        return _log(self._entry["bench/chamber/air/value_log"])
+
+    @cached_property
+    def body_logs(self) -> tuple[tuple[FloatArray, FloatArray], ...]:
+        """For each part, time [n] s and body temperature [n] degC."""
+        return tuple(
+            _log(self._entry[f"part_{number:02d}/temperature_env/body/value_log"])
+            for number in range(len(self.parts))
+        )
+
+    # ------------------------------------------------------------------- points
+
+    @cached_property
+    def all_points(self) -> Columns:
+        """Every attempt at every point, in the order of recording; one array a column, see record-layout."""
+        points = self._entry["points"]
+        return {
+            name: points[name][:].astype(np.int64 if name in INTEGERS else np.float64)
+            for name in EVERY_COLUMN
+        }
+
+    @cached_property
+    def points(self) -> Columns:
+        """The last acceptable attempt at each point, in the order of the plan."""
+        everything = self.all_points
+        chosen: dict[int, int] = {}
+        for row, (index, quality) in enumerate(
+            zip(everything["plan_index"].tolist(), everything["quality"].tolist(), strict=True)
+        ):
+            if is_acceptable(quality):
+                chosen[index] = row  # rows stand in the order of recording, so a later attempt wins
+        rows = [chosen[index] for index in sorted(chosen)]
+        return {name: values[rows] for name, values in everything.items()}
+
+    def captures(self, point: int) -> PointCaptures | None:
+        """Captures of the point with this number (column ``point``); None when it has none.
+
+        Raises:
+            RecordError: they cannot be read, the record is damaged.
+        """
+        found = self._where.get(int(point))
+        if found is None:
+            return None
+        name, first, last = found
+        made = self._entry[name]
+        try:
+            voltage, current = made["voltage"][first:last], made["current"][first:last]
+            repeat = made["repeat"][first:last]
+        except OSError as error:
+            raise RecordError(
+                f"{self.path}: damaged: captures of point {point} cannot be read: {error}."
+            ) from error
+        setting = self._setting(name)
+        return PointCaptures(
+            time=made["time"][:],
+            voltage=voltage * setting["v_scale"] + setting["v_offset"],
+            current=current * setting["i_scale"] + setting["i_offset"],
+            voltage_codes=voltage,
+            current_codes=current,
+            repeat=repeat,
+            setting=setting,
+        )
+
+    # -------------------------------------------------------------- extraction
+
+    @cached_property
+    def extraction(self) -> ExtractionTables | None:
+        """The newest extraction made from exactly these data; None when there is none."""
+        made = latest_valid(self._file)
+        return None if made is None else read_tables(made)
+
+    @cached_property
+    def result(self) -> dict[str, Any] | None:
+        """What ``result.json`` said when `extraction` was made; None when there is none."""
+        made = latest_valid(self._file)
+        if made is None:
+            return None
+        result: dict[str, Any] = json.loads(hdf.read_text(made["result"], "data"))
+        return result
+
+    def close(self) -> None:
+        self._file.close()
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.close()
+
+    # ------------------------------------------------------------------ private
+
+    @property
+    def _entry(self) -> h5py.Group:
+        return self._file["entry"]
+
+    def _text(self, name: str) -> str:
+        return hdf.read_text(self._entry, name)
+
+    @cached_property
+    def _where(self) -> dict[int, tuple[str, int, int]]:
+        """Point to captures group and rows; those of one point stand together, in order."""
+        found: dict[int, tuple[str, int, int]] = {}
+        for name in capture_groups(self._entry):
+            points, firsts, counts = np.unique(
+                self._entry[name]["point"][:], return_index=True, return_counts=True
+            )
+            for point, first, count in zip(points.tolist(), firsts.tolist(), counts.tolist(), strict=True):
+                found[point] = (name, first, first + count)
+        return found
+
+    def _setting(self, name: str) -> dict[str, Any]:
+        facts: dict[str, Any] = json.loads(self._text(f"{name}/setting"))
+        detail: dict[str, Any] = facts.pop("detail")
+        return {"code_min": -math.inf, "code_max": math.inf} | detail | facts
+
+
+def _log(made: h5py.Group) -> tuple[FloatArray, FloatArray]:
+    return made["time"][:], made["value"][:]
+
+
+def _instrument(role: str, made: h5py.Group) -> InstrumentRow:
+    owner = made["air"] if role == CHAMBER else made
+    fabrication, identity = owner["fabrication"], owner["identity"]
+    calibration = {
+        str(name): CalibrationRow(
+            float(constant[()]),
+            str(constant.attrs["units"]),
+            float(constant.attrs["uncertainty"]),
+            str(constant.attrs["date"]),
+            str(constant.attrs["certificate"]),
+        )
+        for name, constant in owner["calibration"].items()
+    }
+    return InstrumentRow(
+        role=role,
+        nx_class=made.attrs["NX_class"],
+        name=hdf.read_text(made, "name"),
+        vendor=hdf.read_text(fabrication, "vendor"),
+        model=hdf.read_text(fabrication, "model"),
+        serial=hdf.read_text(fabrication, "serial_number"),
+        firmware=hdf.read_text(identity, "firmware"),
+        idn=hdf.read_text(identity, "idn"),
+        address=hdf.read_text(identity, "address"),
+        calibration=calibration,
+    )
