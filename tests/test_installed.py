@@ -16,7 +16,18 @@ ROOT = Path(__file__).resolve().parent.parent
 def wheel(tmp_path_factory):
     out = tmp_path_factory.mktemp("wheel")
     subprocess.run(
-        [sys.executable, "-m", "pip", "wheel", "--no-deps", "--quiet", "--disable-pip-version-check", "-w", out, ROOT],
+        [
+            sys.executable,
+            "-m",
+            "pip",
+            "wheel",
+            "--no-deps",
+            "--quiet",
+            "--disable-pip-version-check",
+            "-w",
+            out,
+            ROOT,
+        ],
         check=True,
         capture_output=True,
         text=True,
@@ -32,7 +43,16 @@ def installed(wheel, tmp_path_factory):
     subprocess.run([sys.executable, "-m", "venv", home / "env"], check=True, capture_output=True)
     (site,) = (home / "env").glob("lib/python*/site-packages")
     subprocess.run(
-        [home / "env/bin/python", "-m", "pip", "install", "--no-deps", "--quiet", "--disable-pip-version-check", wheel],
+        [
+            home / "env/bin/python",
+            "-m",
+            "pip",
+            "install",
+            "--no-deps",
+            "--quiet",
+            "--disable-pip-version-check",
+            wheel,
+        ],
         check=True,
         capture_output=True,
         text=True,
@@ -48,7 +68,11 @@ def test_the_wheel_carries_the_plans_and_templates(wheel):
     names = set(zipfile.ZipFile(wheel).namelist())
     assert "runner/shipped_plans/demo_night.yaml" in names
     assert any(name.startswith("runner/shipped_plans/dialects/") for name in names)
-    assert any(name.endswith(".html.j2") or name.endswith(".html") for name in names if name.startswith("runner/report/"))
+    assert any(
+        name.endswith((".html.j2", ".html"))
+        for name in names
+        if name.startswith("runner/report/")
+    )
     assert not any(name.startswith("tests/") for name in names)
 
 

@@ -6,7 +6,7 @@ from pathlib import Path
 import pytest
 
 ROOT = Path(__file__).resolve().parent.parent
-COMMON = {"runner.errors", "runner.arrays", "runner.shipped"}
+COMMON = {"runner.errors", "runner.arrays", "runner.shipped", "runner.versions"}
 
 # room: what it may import of the house, besides itself
 MAY_IMPORT = {
@@ -18,7 +18,14 @@ MAY_IMPORT = {
     "runner.report": COMMON | {"runner.plan", "runner.record"},
     "runner.sweep": COMMON | {"runner.plan", "runner.record", "drivers", "mock_instruments"},
     "runner.commands": COMMON
-    | {"runner.plan", "runner.record", "runner.extraction", "runner.report", "runner.sweep", "mock_instruments"},
+    | {
+        "runner.plan",
+        "runner.record",
+        "runner.extraction",
+        "runner.report",
+        "runner.sweep",
+        "mock_instruments",
+    },
 }
 
 
@@ -31,7 +38,11 @@ def house_imports(path: Path) -> list[tuple[int, str]]:
             names = [alias.name for alias in node.names]
         elif isinstance(node, ast.ImportFrom) and node.module and node.level == 0:
             names = [f"{node.module}.{alias.name}" for alias in node.names]
-        found += [(node.lineno, name) for name in names if name.split(".")[0] in ("runner", "drivers", "mock_instruments")]
+        found += [
+            (node.lineno, name)
+            for name in names
+            if name.split(".")[0] in ("runner", "drivers", "mock_instruments")
+        ]
     return found
 
 
@@ -76,7 +87,9 @@ def test_the_wall_reader_sees_a_broken_wall(tmp_path):
 
 def test_the_top_level_holds_no_other_folders():
     tracked = {
-        path.name for path in ROOT.iterdir() if path.is_dir() and not path.name.startswith(".") and path.name != "__pycache__"
+        path.name
+        for path in ROOT.iterdir()
+        if path.is_dir() and not path.name.startswith(".") and path.name != "__pycache__"
     }
     assert tracked - {"runs", "build", "dist"} == {"runner", "drivers", "plans", "tests", "mock_instruments"}
 

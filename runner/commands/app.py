@@ -28,7 +28,8 @@ PlanArgument = Annotated[Path, typer.Argument(metavar="PLAN", help="A test plan 
 BenchArgument = Annotated[Path, typer.Argument(metavar="BENCH", help="A bench file (YAML).")]
 RunArgument = Annotated[Path, typer.Argument(metavar="RUN", help="A run folder, or a record.h5.")]
 BenchOption = Annotated[
-    Path | None, typer.Option("--bench", metavar="BENCH", help="Use this bench instead of the one the plan names.")
+    Path | None,
+    typer.Option("--bench", metavar="BENCH", help="Use this bench instead of the one the plan names."),
 ]
 IntoOption = Annotated[
     Path, typer.Option("--into", metavar="DIR", help="Where run folders are made.", show_default=True)

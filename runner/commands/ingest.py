@@ -5,9 +5,11 @@ from pathlib import Path
 
 def ingest_captures(path: Path, *, into: Path) -> None:
     """Read a captures file and the waveforms it names; write a run folder and say where it is."""
-    from runner.record import write_captures_run
-
     from runner.plan import load_captures_file
+    from runner.record import write_captures_run
+    from runner.versions import library_versions, software
 
-    folder = write_captures_run(load_captures_file(path), into=into)
-    print(f"{folder}\nNext: kneemap extract {folder}; kneemap report {folder}")
+    folder = write_captures_run(
+        load_captures_file(path), into=into, software=software(), versions=library_versions()
+    )
+    print(f"Run folder: {folder}\nNext: kneemap extract {folder}; kneemap report {folder}")

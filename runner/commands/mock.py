@@ -38,6 +38,11 @@ def _simulation(path: Path) -> dict[str, Any]:
     bench = load_bench(path).bench
     if bench.simulation is None:
         raise InputError(
-            [Fault(str(path), "this bench has no 'simulation:' section; give a mock bench, such as benches/mock.yaml")]
+            [
+                Fault(
+                    str(path),
+                    "this bench has no 'simulation:' section; give a mock bench, such as benches/mock.yaml",
+                )
+            ]
         )
     return simulation_spec(bench)

@@ -17,7 +17,9 @@ def probe_bench(path: Path) -> int:
     for heading in ("role", "answers", "identity", "can do"):
         table.add_column(heading)
     for finding in findings:
-        table.add_row(finding.role, "yes" if finding.answers else "NO", finding.identity, finding.capabilities)
+        table.add_row(
+            finding.role, "yes" if finding.answers else "NO", finding.identity, finding.capabilities
+        )
     console.print(table)
     disagreements = [f"{finding.role}: {text}" for finding in findings for text in finding.disagreements]
     for text in disagreements:

@@ -7,6 +7,7 @@ import sys
 import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
+from math import isfinite
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
@@ -36,9 +37,10 @@ def span(seconds: float) -> str:
 
 def describe(progress: "Progress") -> str:
     """Where a run stands, in one line."""
-    body = "" if progress.body_degC is None else f", part at {progress.body_degC:.1f} °C"
+    body = f", part at {progress.body_degC:.1f} °C" if isfinite(progress.body_degC) else ""
+    part = f" {progress.part}" if progress.part else ""
     return (
-        f"leg {progress.leg + 1} of {progress.legs} ({progress.setpoint_degC:g} °C{body}): {progress.phase}; "
+        f"leg {progress.leg} of {progress.legs} ({progress.setpoint_degC:g} °C{body}): {progress.phase}{part}; "
         f"{progress.done} of {progress.total} points, about {span(progress.remaining)} of bench time left"
     )
 
@@ -48,7 +50,9 @@ def _bar() -> Iterator[Callable[["Progress"], None]]:
     from rich.progress import BarColumn, MofNCompleteColumn, TextColumn
     from rich.progress import Progress as Bar
 
-    with Bar(TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TextColumn("{task.fields[left]}")) as bar:
+    with Bar(
+        TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TextColumn("{task.fields[left]}")
+    ) as bar:
         task = bar.add_task("starting", total=None, left="")
 
         def watch(progress: "Progress") -> None:
@@ -56,7 +60,7 @@ def _bar() -> Iterator[Callable[["Progress"], None]]:
                 task,
                 total=progress.total,
                 completed=progress.done,
-                description=f"leg {progress.leg + 1}/{progress.legs}  {progress.setpoint_degC:g} °C  {progress.phase}",
+                description=f"leg {progress.leg}/{progress.legs}  {progress.setpoint_degC:g} °C  {progress.phase}",
                 left=f"{span(progress.remaining)} of bench time left",
             )
 
@@ -65,11 +69,11 @@ def _bar() -> Iterator[Callable[["Progress"], None]]:
 
 def _log_lines() -> Callable[["Progress"], None]:
     last_said = -QUIETEST
-    last_place: tuple[int, str] | None = None
+    last_place: tuple[int, str, str] | None = None
 
     def watch(progress: "Progress") -> None:
         nonlocal last_said, last_place
-        place = (progress.leg, progress.phase)
+        place = (progress.leg, progress.phase, progress.part)
         now = time.monotonic()
         if place != last_place and now - last_said >= QUIETEST:
             last_said, last_place = now, place

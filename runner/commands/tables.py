@@ -32,16 +32,24 @@ def isat_table(label: str, method: str, numbers: Mapping[str, Any], *, coverage:
     table.add_column("T / °C", justify="right")
     table.add_column("L₀ / µH", justify="right")
     for drop, reference in columns:
-        table.add_column(f"Isat {drop:.0%} / A" if not references else f"Isat {drop:.0%} ({reference}) / A", justify="right")
+        table.add_column(
+            f"Isat {drop:.0%} / A" if not references else f"Isat {drop:.0%} ({reference}) / A",
+            justify="right",
+        )
     for start in numbers["initial_inductance"]:
         temperature = start["temperature_degC"]
-        cells = [f"{temperature:.1f}", _with_half_width(start["henry"], start["low"], start["high"], scale=1e6)]
+        cells = [
+            f"{temperature:.1f}",
+            _with_half_width(start["henry"], start["low"], start["high"], scale=1e6),
+        ]
         for drop, reference in columns:
             row = next(
                 (
                     row
                     for row in currents
-                    if row["drop"] == drop and row["reference"] == reference and row["temperature_degC"] == temperature
+                    if row["drop"] == drop
+                    and row["reference"] == reference
+                    and row["temperature_degC"] == temperature
                 ),
                 None,
             )
@@ -58,7 +66,9 @@ def _current_cell(row: Mapping[str, Any] | None) -> str:
     return _with_half_width(row["ampere"], row["low"], row["high"])
 
 
-def _with_half_width(value: float | None, low: float | None, high: float | None, *, scale: float = 1.0) -> str:
+def _with_half_width(
+    value: float | None, low: float | None, high: float | None, *, scale: float = 1.0
+) -> str:
     if value is None:
         return "–"
     if low is None or high is None:

@@ -18,7 +18,9 @@ def seconds(*command: str) -> float:
 def main() -> None:
     kneemap = str(Path(sys.executable).parent / "kneemap")
     seconds(kneemap, "--help"), seconds(sys.executable, "-c", "import typer")  # files into the cache
-    pairs = [(seconds(kneemap, "--help"), seconds(sys.executable, "-c", "import typer")) for _ in range(TRIES)]
+    pairs = [
+        (seconds(kneemap, "--help"), seconds(sys.executable, "-c", "import typer")) for _ in range(TRIES)
+    ]
     ratio = statistics.median(ours / bare for ours, bare in pairs)
     print(f"kneemap --help: {statistics.median(o for o, _ in pairs):.3f} s")
     print(f"python -c 'import typer': {statistics.median(b for _, b in pairs):.3f} s")
