@@ -1,12 +1,13 @@
 """Test plans, benches and captures files: YAML with units in, checked plain values in SI out.
 
 Gives plans in points (`expand`), what a run will take (`forecast`) and what a simulated bench is made from
-(`simulation_spec`). Never knows instruments, HDF5, or how a point is measured. All faults of a file come at once, as one
-`InputError`, each located.
+(`simulation_spec`). Never knows instruments, HDF5, or how a point is measured. All faults of a file come at once, as
+one `InputError`, each located.
 """
 
 from runner.plan.bench_file import Bench
 from runner.plan.captures_file import CapturesFile
+from runner.plan.forecast import Forecast, forecast
 from runner.plan.load import (
     LoadedBench,
     LoadedCaptures,
@@ -21,11 +22,13 @@ from runner.plan.load import (
 )
 from runner.plan.plan_file import Plan
 from runner.plan.points import Leg, Point, Programme, expand
+from runner.plan.schema import schemas
 from runner.plan.simulation_file import simulation_spec
 
 __all__ = [
     "Bench",
     "CapturesFile",
+    "Forecast",
     "Leg",
     "LoadedBench",
     "LoadedCaptures",
@@ -34,6 +37,7 @@ __all__ = [
     "Point",
     "Programme",
     "expand",
+    "forecast",
     "load_bench",
     "load_captures_file",
     "load_model",
@@ -41,5 +45,6 @@ __all__ = [
     "parse_bench",
     "parse_captures",
     "parse_plan",
+    "schemas",
     "simulation_spec",
 ]
