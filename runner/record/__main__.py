@@ -4,7 +4,7 @@ import sys
 
 from runner.errors import KneemapError
 from runner.record.consolidation import be_patient, consolidate
-from runner.record.extractions import RECORD
+from runner.record.places import RECORD
 
 
 def main(arguments: list[str]) -> int:

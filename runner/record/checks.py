@@ -22,7 +22,7 @@ from runner.record.rows import (
     SettingRow,
 )
 
-_LARGEST_SAMPLES = 2**30  # SQLite keeps a BLOB below 1e9 bytes by default
+_LARGEST_CAPTURE = 900_000_000  # bytes: SQLite keeps a row, both channels together, below 1e9 by default
 _NAME = re.compile(r"[a-z][a-z0-9_]*")
 
 
@@ -74,10 +74,11 @@ def check_instrument(row: InstrumentRow) -> None:
 
 
 def check_setting(row: SettingRow) -> None:
-    if not 1 <= row.samples <= _LARGEST_SAMPLES:
-        raise ValueError(f"setting.samples: 1 to {_LARGEST_SAMPLES}, got {row.samples!r}")
     if row.dtype not in DTYPES:
         raise ValueError(f"setting.dtype: one of {', '.join(DTYPES)}, got {row.dtype!r}")
+    most = _LARGEST_CAPTURE // (2 * np.dtype(row.dtype).itemsize)
+    if not 1 <= row.samples <= most:
+        raise ValueError(f"setting.samples: 1 to {most} of {row.dtype}, got {row.samples!r}")
     for name in ("interval", "first", "v_scale", "v_offset", "i_scale", "i_offset"):
         check_finite(f"setting.{name}", getattr(row, name))
     if not row.interval > 0:

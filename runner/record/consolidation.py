@@ -14,9 +14,10 @@ from pathlib import Path
 from runner.record import hdf, reading
 from runner.record.durable import replace
 from runner.record.errors import RecordError
-from runner.record.extractions import PART, RECORD, add_extraction, read_everything
+from runner.record.extractions import add_extraction, read_everything
 from runner.record.layout import store_digest, write_record
 from runner.record.lock import holding_record_lock
+from runner.record.places import PART, RECORD
 from runner.record.tables import ExtractionTables
 from runner.record.verify import raw_sha256_of
 

@@ -19,13 +19,10 @@ from runner.record import hdf
 from runner.record.durable import copy_file, replace, write_file
 from runner.record.errors import RecordError, not_a_run
 from runner.record.lock import holding_record_lock
+from runner.record.places import PART, RECORD, RESULT
 from runner.record.rows import METHODS, Method
 from runner.record.tables import ExtractionTables, IsatTable, SurfaceTable
 from runner.record.verify import raw_sha256_of
-
-RECORD = "record.h5"
-PART = "record.h5.part"
-RESULT = "result.json"
 
 
 def write_extraction(path: Path | str, tables: ExtractionTables, result: Mapping[str, Any]) -> None:

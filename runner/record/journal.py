@@ -28,10 +28,9 @@ from runner.record.columns import LAYOUT_VERSION, SCALARS
 from runner.record.durable import fsync_folder, make_folder
 from runner.record.errors import RecordError, not_a_run
 from runner.record.lock import take_run_lock
+from runner.record.places import JOURNAL, RECORD
 from runner.record.rows import METHODS, CaptureRow, EventRow, InstrumentRow, PointRow, RunHeader, SettingRow
 from runner.record.schema import statements
-
-JOURNAL = reading.JOURNAL
 
 _POINT_COLUMNS = (
     "plan_index",
@@ -57,6 +56,7 @@ _INSERT_SETTING = (
     "(samples, interval, first, dtype, v_scale, v_offset, i_scale, i_offset, detail)"
     " VALUES (?,?,?,?,?,?,?,?,?)"
 )
+_FOLD_PATIENCE_MS = 2000
 _BUSY = 10.0  # s to wait for another writer of the journal (only `append_event` of another process is one)
 
 
@@ -89,7 +89,7 @@ class Journal:
         make_folder(folder)
         lock = take_run_lock(folder)
         try:
-            if reading.has_run(folder):
+            if (folder / RECORD).exists() or reading.has_run(folder):
                 raise not_a_run(folder, "holds a run already; resume it, or choose another folder.")
             connection = _open(folder / JOURNAL)
             journal = cls(folder, lock, connection)
@@ -322,7 +322,8 @@ class Journal:
     def close(self) -> None:
         """Fold the write-ahead log into the journal and let go of the run. A second call does nothing."""
         try:
-            self._connection.close()  # the last connection to close checkpoints and removes the log
+            self._fold_log_in()
+            self._connection.close()
         finally:
             self._lock.release()
 
@@ -353,6 +354,16 @@ class Journal:
             raise
         finally:
             cursor.close()
+
+    def _fold_log_in(self) -> None:
+        """Bring all of the write-ahead log into the journal, even while somebody reads."""
+        try:
+            self._connection.execute(f"PRAGMA busy_timeout={_FOLD_PATIENCE_MS}")
+            self._connection.execute("PRAGMA wal_checkpoint(TRUNCATE)")
+        except sqlite3.Error:
+            # A full disk, or a second call of `close`. The log holds everything and stays; nothing is lost by
+            # leaving it for the next time, and a run must not fail at its last step.
+            pass
 
     def _roll_back(self) -> None:
         if self._connection.in_transaction:

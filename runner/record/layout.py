@@ -9,7 +9,6 @@ import hashlib
 import json
 import sqlite3
 import zlib
-from importlib.metadata import version
 from typing import Any
 
 import h5py
@@ -20,8 +19,10 @@ from runner.record.columns import INTEGERS, LAYOUT_VERSION, SCALARS, TIMES
 from runner.record.digest import RawDigest, relative, rows_to_hash
 from runner.record.errors import RecordError
 from runner.record.flags import Flag, spelled
+from runner.record.places import RECORD
 from runner.record.reading import Columns, StoredCapture
 from runner.record.rows import METHODS, InstrumentRow, RunHeader, SettingRow, codes_dtype
+from runner.versions import software
 
 PROGRAM = "kneemap"
 CHAMBER = "chamber"
@@ -29,7 +30,7 @@ _CHUNK_SAMPLES = 262144
 
 
 def program_version() -> str:
-    return version(PROGRAM)
+    return software().removeprefix(f"{PROGRAM} ")
 
 
 def write_record(file: h5py.File, journal: sqlite3.Connection) -> str:
@@ -84,7 +85,7 @@ def _write_root(file: h5py.File, end: float) -> None:
         {
             "NX_class": "NXroot",
             "default": "entry",
-            "file_name": "record.h5",
+            "file_name": RECORD,
             "file_time": hdf.iso(end),
             "creator": PROGRAM,
             "creator_version": program_version(),

@@ -12,6 +12,7 @@ from pathlib import Path
 from filelock import FileLock, Timeout
 
 from runner.errors import Fault, InputError
+from runner.record.places import RECORD_LOCK, RUN_LOCK
 
 #: A reader that asks `is_being_acquired` holds the lock for an instant; an acquiring process outwaits it.
 _PATIENCE = 1.0  # s
@@ -24,7 +25,7 @@ def take_run_lock(folder: Path) -> FileLock:
     Raises:
         InputError: another process is acquiring it.
     """
-    lock = FileLock(folder / "run.lock", timeout=_PATIENCE)
+    lock = FileLock(folder / RUN_LOCK, timeout=_PATIENCE)
     try:
         lock.acquire()
     except Timeout:
@@ -40,7 +41,7 @@ _REFUSAL = (
 
 def is_being_acquired(folder: Path) -> bool:
     """Does a living process hold the run?"""
-    path = folder / "run.lock"
+    path = folder / RUN_LOCK
     if not path.exists():
         return False
     lock = FileLock(path, timeout=0)
@@ -57,5 +58,5 @@ def is_being_acquired(folder: Path) -> bool:
 @contextmanager
 def holding_record_lock(folder: Path) -> Iterator[None]:
     """Rebuilds and re-extractions of one run come one after the other, in whichever process they run."""
-    with FileLock(folder / "record.lock", timeout=_RECORD_PATIENCE):
+    with FileLock(folder / RECORD_LOCK, timeout=_RECORD_PATIENCE):
         yield

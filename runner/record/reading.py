@@ -20,9 +20,8 @@ import numpy as np
 from runner.arrays import FloatArray, IntArray
 from runner.record.columns import EVERY_COLUMN, INTEGERS, LAYOUT_VERSION, SCALARS, TIMES
 from runner.record.errors import RecordError, not_a_run
+from runner.record.places import JOURNAL
 from runner.record.rows import CalibrationRow, EventRow, InstrumentRow, PartRow, RunHeader, SettingRow
-
-JOURNAL = "journal.sqlite"
 
 Columns = dict[str, FloatArray | IntArray]
 
@@ -174,7 +173,8 @@ def read_settings(connection: sqlite3.Connection) -> dict[int, SettingRow]:
         "SELECT id, samples, interval, first, dtype, v_scale, v_offset, i_scale, i_offset, detail"
         " FROM setting ORDER BY id"
     )
-    return {row[0]: SettingRow(*row[1:9], detail=json.loads(row[9])) for row in rows}
+    settings: dict[int, list[Any]] = {row[0]: [*row[1:9], json.loads(row[9])] for row in rows}
+    return {number: SettingRow(*values) for number, values in settings.items()}
 
 
 def read_points(connection: sqlite3.Connection, after: int = 0, limit: int = _EVERYTHING) -> Columns:
@@ -220,7 +220,8 @@ def read_instruments(connection: sqlite3.Connection) -> tuple[InstrumentRow, ...
 def _instrument(row: tuple[Any, ...]) -> InstrumentRow:
     constants = json.loads(row[-1])
     calibration = {name: CalibrationRow(**constant) for name, constant in constants.items()}
-    return InstrumentRow(*row[:9], calibration=calibration)
+    values = [*row[:9], calibration]
+    return InstrumentRow(*values)
 
 
 def read_events(

@@ -21,11 +21,12 @@ from runner.record import hdf, reading
 from runner.record.columns import EVERY_COLUMN, INTEGERS, LAYOUT_VERSION
 from runner.record.consolidation import consolidate, is_current
 from runner.record.errors import RecordError, not_a_run
-from runner.record.extractions import RECORD, latest_valid, read_tables
+from runner.record.extractions import latest_valid, read_tables
 from runner.record.flags import is_acceptable
 from runner.record.layout import CHAMBER
 from runner.record.lock import is_being_acquired
-from runner.record.reading import JOURNAL, Columns, LegTimes, Session
+from runner.record.places import JOURNAL, RECORD
+from runner.record.reading import Columns, LegTimes, Session
 from runner.record.rows import CalibrationRow, Codes, EventRow, InstrumentRow, PartRow
 from runner.record.tables import ExtractionTables
 from runner.record.verify import capture_groups
@@ -260,8 +261,8 @@ class Run:
         setting = self._setting(name)
         return PointCaptures(
             time=made["time"][:],
-            voltage=voltage * setting["v_scale"] + setting["v_offset"],
-            current=current * setting["i_scale"] + setting["i_offset"],
+            voltage=voltage.astype(np.float64) * setting["v_scale"] + setting["v_offset"],
+            current=current.astype(np.float64) * setting["i_scale"] + setting["i_offset"],
             voltage_codes=voltage,
             current_codes=current,
             repeat=repeat,
