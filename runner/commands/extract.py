@@ -1,6 +1,7 @@
 """`kneemap extract` and `kneemap report`: from a record to numbers, and from numbers to a page."""
 
 import json as json_module
+import sys
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
@@ -48,11 +49,9 @@ def record_folder(path: Path) -> Path:
 
 def print_result(result: Mapping[str, Any]) -> None:
     """The result in a few lines: one table a part and method, then what is doubtful."""
-    from rich.console import Console
+    from runner.commands.tables import console_for, isat_table
 
-    from runner.commands.tables import isat_table
-
-    console = Console()
+    console = console_for(sys.stdout)
     for part in result["parts"]:
         for method, numbers in part["methods"].items():
             console.print(isat_table(part["label"], method, numbers, coverage=result["coverage"]))

@@ -1,19 +1,18 @@
 """`kneemap probe`: open every instrument of a bench, one line each, then what does not agree with the bench file."""
 
+import sys
 from pathlib import Path
 
 
 def probe_bench(path: Path) -> int:
     """Open the instruments of the bench at ``path`` and print who they are; 0 when all answer and agree, else 1."""
-    from rich.console import Console
-    from rich.table import Table
-
+    from runner.commands.tables import console_for, plain_table
     from runner.plan import load_bench
     from runner.sweep import probe
 
     findings = probe(load_bench(path))
-    console = Console()
-    table = Table(title=f"Bench {path}", title_justify="left")
+    console = console_for(sys.stdout)
+    table = plain_table(f"Bench {path}")
     for heading in ("role", "answers", "identity", "can do"):
         table.add_column(heading)
     for finding in findings:

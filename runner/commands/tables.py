@@ -1,14 +1,30 @@
 """Tables a terminal shows: plain values in, rich tables out."""
 
 from collections.abc import Mapping
-from typing import Any
+from typing import Any, TextIO
 
+from rich.box import SIMPLE_HEAD
+from rich.console import Console
 from rich.table import Table
 
 METHOD_TITLES = {
     "pulse": "pulse method, differential inductance",
     "bias": "bias method, incremental inductance",
 }
+
+
+# Output that goes to a file or a pipe has no width of its own; tables there may be this wide.
+_FILE_WIDTH = 140
+
+
+def console_for(stream: TextIO) -> Console:
+    """A console that writes to ``stream`` and colours nothing by itself."""
+    return Console(file=stream, highlight=False, width=None if stream.isatty() else _FILE_WIDTH)
+
+
+def plain_table(title: str) -> Table:
+    """An empty table with a title on the left and a rule under its headings."""
+    return Table(title=title, title_justify="left", title_style="bold", box=SIMPLE_HEAD, pad_edge=False)
 
 
 def isat_table(label: str, method: str, numbers: Mapping[str, Any], *, coverage: float) -> Table:
@@ -24,11 +40,7 @@ def isat_table(label: str, method: str, numbers: Mapping[str, Any], *, coverage:
     columns = sorted({(row["drop"], row["reference"]) for row in currents})
     references = {reference for _, reference in columns}
     against = f"; drop from {references.pop()}" if len(references) == 1 else ""
-    table = Table(
-        title=f"{label}: {METHOD_TITLES.get(method, method)} ({coverage:.0%} intervals{against})",
-        title_justify="left",
-        title_style="bold",
-    )
+    table = plain_table(f"{label}: {METHOD_TITLES.get(method, method)} ({coverage:.0%} intervals{against})")
     table.add_column("T / °C", justify="right")
     table.add_column("L₀ / µH", justify="right")
     for drop, reference in columns:
