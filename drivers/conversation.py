@@ -58,6 +58,7 @@ class Conversation:
         self._unanswered = ""
         self._in_step = True
         self._acquainted = False
+        self._fixed: dict[str, tuple[_Line, ...]] = {}  # lines of the intents that take no values, by name
         errors, power_on = dialect.errors.ask, dialect.power_on
         self._service: tuple[_Question, ...] = ()
         if errors:
@@ -73,7 +74,13 @@ class Conversation:
         Raises:
             Refused, Restarted, NoReply, Garbled, Disconnected.
         """
-        return self.say(self.dialect.intents[intent], values, sample_count=sample_count)
+        messages = self.dialect.intents[intent]
+        if values:
+            return self.say(messages, values, sample_count=sample_count)
+        lines = self._fixed.get(intent)
+        if lines is None:
+            lines = self._fixed[intent] = tuple(self._lines(messages, {}))
+        return self._send(lines, sample_count)
 
     def say(
         self,
@@ -83,9 +90,12 @@ class Conversation:
         sample_count: int | None = None,
     ) -> Values:
         """As `carry_out`, for messages that stand outside the intents."""
+        return self._send(tuple(self._lines(messages, values or {})), sample_count)
+
+    def _send(self, lines: Sequence[_Line], sample_count: int | None) -> Values:
         brought = Values()
-        lines = list(self._lines(messages, values or {}))
-        self._get_into_step()
+        if not self._in_step or self._unanswered:
+            self._get_into_step()
         for line in lines:
             self._exchange(line, brought, sample_count)
         return brought

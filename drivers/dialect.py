@@ -16,12 +16,11 @@ from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, ValidationEr
 from pydantic_core import InitErrorDetails, PydanticCustomError
 
 from drivers.blocks import Encoding, Order
-from drivers.needs import ROLES, WORDS, Need, Role
+from drivers.needs import ROLES, WORDS, Kind, Need, Role
 from drivers.templates import placeholders
 
 TERMINATORS = {"LF": b"\n", "CR": b"\r", "CRLF": b"\r\n"}
 TerminatorName = Literal["LF", "CR", "CRLF"]
-Kind = Literal["number", "numbers", "text", "flag", "word", "samples"]
 
 
 def _regex(text: object) -> object:
@@ -94,6 +93,8 @@ class Message(_Part):
             raise ValueError("'as: samples' and 'of: int16 | int32 | real32 | ascii' go together")
         if (self.as_ == "flag") != (self.when is not None):
             raise ValueError("'as: flag' and 'when: <replies that mean yes>' go together")
+        if self.bits and self.gives:
+            raise ValueError("a reply brings either the bits of a register ('bits') or values ('gives')")
         if len(self.gives) > 1 and self.as_ != "number":
             raise ValueError("only numbers can come several in one reply")
         placeholders(self.text)
@@ -110,6 +111,10 @@ class Message(_Part):
     @property
     def is_binary(self) -> bool:
         return self.of is not None and self.of != "ascii"
+
+    @property
+    def kind(self) -> Kind:
+        return "flag" if self.bits else self.as_
 
     @property
     def brings(self) -> tuple[str, ...]:
@@ -212,9 +217,9 @@ class Dialect(_Part):
 
 
 def _fault(where: tuple[str | int, ...], what: str) -> InitErrorDetails:
-    # Braces in the text would be taken for pydantic's own placeholders, hence the context.
+    # The type and context of a plain ValueError, so that whoever shows it needs no case of its own for dialects.
     return InitErrorDetails(
-        type=PydanticCustomError("dialect", "{what}", {"what": what}), loc=where, input=None
+        type=PydanticCustomError("value_error", "{error}", {"error": what}), loc=where, input=None
     )
 
 
@@ -251,6 +256,11 @@ def _message_faults(
         for name in message.brings:
             if name not in need.known_values:
                 yield _fault((*where, at), f"nobody asked for {name!r}{_nearest(name, need.known_values)}")
+            elif (kind := need.kind_of(name)) != message.kind:
+                yield _fault(
+                    (*where, at),
+                    f"{name!r} is read 'as: {kind}'{' or as one of some bits' * (kind == 'flag')}",
+                )
         if dialect.join and message.is_binary and text_came:
             yield _fault(
                 (*where, at),
@@ -276,8 +286,6 @@ def _word_faults(dialect: Dialect) -> Iterator[InitErrorDetails]:
                 yield _fault(
                     ("intents", intent, at), f"say under 'words: {name}:' how the instrument spells it"
                 )
-            if message.as_ == "word" and not set(message.gives) <= set(WORDS):
-                yield _fault(("intents", intent, at), f"only {', '.join(WORDS)} can be read 'as: word'")
 
 
 def _code_faults(dialect: Dialect) -> Iterator[InitErrorDetails]:
@@ -286,8 +294,6 @@ def _code_faults(dialect: Dialect) -> Iterator[InitErrorDetails]:
             yield _fault(("codes",), f"a {dialect.role} has no codes")
         return
     kinds = {message.of for message in dialect.intents.get("fetch", ()) if message.of}
-    if "fetch" in dialect.intents and not kinds:
-        yield _fault(("intents", "fetch"), "the replies of 'fetch' are read 'as: samples'")
     has_scale = dialect.codes is not None and dialect.codes.full_scale is not None
     if kinds & {"int16", "int32"} and not has_scale and "scaling" not in dialect.intents:
         yield _fault(("codes",), "give 'full_scale' (code at the end of the range) or the intent 'scaling'")

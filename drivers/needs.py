@@ -21,6 +21,20 @@ Role = Literal[
 ]
 
 
+Kind = Literal["number", "numbers", "text", "flag", "word", "samples"]
+
+# Values that are not one number each.
+_KINDS: Mapping[str, Kind] = {
+    "active": "flag",
+    "waiting": "flag",
+    "measuring": "flag",
+    "done": "flag",
+    "polarity": "word",
+    "states": "numbers",
+    "relays": "numbers",
+}
+
+
 @dataclass(frozen=True, slots=True)
 class Need:
     """One intent of a role.
@@ -31,6 +45,7 @@ class Need:
         one_of: values of which its replies must bring at least one.
         may_give: values that its replies may bring, such as the read-back of a setting.
         optional: the role can do without.
+        brings_samples: its values are whole records of a digitizer.
     """
 
     takes: tuple[str, ...] = ()
@@ -38,10 +53,15 @@ class Need:
     one_of: tuple[str, ...] = ()
     may_give: tuple[str, ...] = ()
     optional: bool = False
+    brings_samples: bool = False
 
     @property
     def known_values(self) -> tuple[str, ...]:
         return self.gives + self.one_of + self.may_give
+
+    def kind_of(self, value: str) -> Kind:
+        """How a value is read, so that the role finds it where it looks."""
+        return "samples" if self.brings_samples else _KINDS.get(value, "number")
 
 
 _SWITCHED = {"output_on": Need(may_give=("active",)), "output_off": Need(may_give=("active",))}
@@ -68,7 +88,7 @@ ROLES: Mapping[Role, Mapping[str, Need]] = {
         ),
         "arm": Need(),
         "state": Need(one_of=("waiting", "measuring", "done")),
-        "fetch": Need(gives=("voltage", "shunt")),
+        "fetch": Need(gives=("voltage", "shunt"), brings_samples=True),
     },
     "lcr": {
         "set": Need(takes=("frequency", "level"), may_give=("frequency", "level")),

@@ -14,6 +14,9 @@ from drivers.blocks import Samples
 # SCPI-1999 vol. 1, 7.2.1.4 and 7.2.1.5: 9.9E37 is infinity, -9.9E37 its negative, 9.91E37 "not a number".
 INFINITY = 9.9e37
 NOT_A_NUMBER = 9.91e37
+# A float32 on the way moves both by a few parts in 1e8, hence a little room on each side.
+_FIRST_THAT_IS_NONE = INFINITY * (1 - 1e-6)
+_BETWEEN = (INFINITY + NOT_A_NUMBER) / 2
 
 _NUMBER = re.compile(r"\s*([-+]?(?:\d+\.?\d*|\.\d+)(?:\s*[eE]\s*[-+]?\d+)?)\s*(.*?)\s*", re.DOTALL)
 _UNITS_OF_LINE = re.compile(r'(?:[^;"]|"(?:[^"]|"")*")*')
@@ -38,14 +41,15 @@ def split_units(line: str, separator: str) -> list[str]:
     """
     if '"' not in line:
         return [unit.strip() for unit in line.split(separator)]
-    units, start, quoted = [], 0, False
-    for at, character in enumerate(line):
-        if character == '"':
-            quoted = not quoted
-        elif character == separator and not quoted:
-            units.append(line[start:at].strip())
-            start = at + 1
-    return [*units, line[start:].strip()]
+    units = [""]
+    for at, piece in enumerate(line.split('"')):
+        if at % 2:  # between quotes
+            units[-1] += f'"{piece}"'
+        else:
+            first, *others = piece.split(separator)
+            units[-1] += first
+            units += others
+    return [unit.strip() for unit in units]
 
 
 def parse_number(text: str, units: Mapping[str, float] | None = None) -> float:
@@ -61,17 +65,17 @@ def parse_number(text: str, units: Mapping[str, float] | None = None) -> float:
     Raises:
         ValueError: it is no number, or has a unit that is not among `units`.
     """
-    word = text.strip().upper()
-    if word in ("NAN", "INF", "NINF", "+INF", "-INF"):
-        return {"NAN": math.nan, "INF": math.inf, "+INF": math.inf}.get(word, -math.inf)
+    if "_" not in text:  # which Python takes for a part of a number
+        try:
+            return _meant(float(text))
+        except ValueError:
+            pass
+    if text.strip().upper() == "NINF":
+        return -math.inf
     found = _NUMBER.fullmatch(text)
     if found is None:
         raise ValueError(f"{text!r} is no number")
-    value, unit = float(found[1].replace(" ", "")), found[2]
-    # As float64: 9.91E37 is above 9.9E37. A float32 on the way moves both by a few parts in 1e8, hence the
-    # half-way.
-    if abs(value) >= INFINITY * (1 - 1e-6):
-        return math.nan if value > (INFINITY + NOT_A_NUMBER) / 2 else math.copysign(math.inf, value)
+    value, unit = _meant(float(found[1].replace(" ", ""))), found[2]
     if not unit:
         return value
     if units is None or unit not in units:
@@ -84,3 +88,9 @@ def parse_numbers(text: str, units: Mapping[str, float] | None = None) -> tuple[
     """Numbers with commas between; a channel list `(@101,201)` is read as its numbers. No text gives none."""
     inner = text.strip().removeprefix("(@").removesuffix(")").strip()
     return tuple(parse_number(item, units) for item in inner.split(",")) if inner else ()
+
+
+def _meant(value: float) -> float:
+    if abs(value) < _FIRST_THAT_IS_NONE or math.isinf(value):
+        return value
+    return math.copysign(math.inf, value) if value < _BETWEEN else math.nan

@@ -2,7 +2,7 @@
 
 VISA errors, and the bare socket errors that pyvisa-py lets through, become ours here and nowhere else; so do
 seconds become milliseconds. On sockets and serial lines a reply ends with a terminator, on other interfaces
-with the bus's own END. Blocks are read by count with the termination character switched off, since their
+with the bus's own END. Blocks are read with the termination character switched off, since their
 bytes may contain it: with it on, pyvisa-py cuts a 40 kB block at every 256th byte on average and copies the
 rest each time.
 """
@@ -26,8 +26,8 @@ _LOST = {
     constants.StatusCode.error_invalid_object,
     constants.StatusCode.error_io,
 }
-# What one read may bring. pyvisa-py asks its socket for 4096 bytes at a time unless told otherwise.
-_CHUNK = 1 << 20
+# What one read may bring: more than a socket's buffer holds at a time, less than what is slow to allocate.
+_CHUNK = 1 << 16
 
 
 @functools.cache
@@ -77,6 +77,7 @@ class VisaSession:
         self._serial = serial
         self._library = library
         self._sent = b""
+        self._arrived = bytearray()
         self._visa: MessageBasedResource | None = None
         self._connect()
 
@@ -88,31 +89,26 @@ class VisaSession:
         try:
             visa.write_raw(message)
         except (pyvisa.Error, OSError) as why:
-            self._fail(why, arrived=False)
+            self._fail(why)
 
     def read_line(self) -> bytes:
-        visa = self._opened()
-        self._stop_at_terminator(True)
-        line = b""
-        while True:
-            arrived = bool(line) or self._wait_for_bytes()
-            try:
-                line += visa.read_raw(_CHUNK)
-            except (pyvisa.Error, OSError) as why:
-                self._fail(why, arrived=arrived)
-            if line.endswith(self._terminator):
-                return line[: -len(self._terminator)]
-            if not self._is_stream:
-                return line
+        while (end := self._arrived.find(self._terminator)) < 0:
+            if self._socket is not None:
+                self._take_what_is_there()
+            else:
+                self._take_message()
+                if not self._is_stream and not self._arrived.endswith(self._terminator):
+                    end = len(self._arrived)  # the bus said that the message is over
+                    break
+        return self._cut(end, skip=len(self._terminator))
 
     def read_exactly(self, count: int) -> bytes:
-        visa = self._opened()
-        self._stop_at_terminator(False)
-        arrived = self._wait_for_bytes()
-        try:
-            return bytes(visa.read_bytes(count, chunk_size=min(count, _CHUNK) or 1))
-        except (pyvisa.Error, OSError) as why:
-            self._fail(why, arrived=arrived)
+        while len(self._arrived) < count:
+            if self._socket is not None:
+                self._take_what_is_there()
+            else:
+                self._take(count - len(self._arrived))
+        return self._cut(count)
 
     def reopen(self) -> None:
         self.close()
@@ -122,7 +118,7 @@ class VisaSession:
             try:
                 self._opened().clear()
             except (pyvisa.Error, OSError) as why:
-                self._fail(why, arrived=False)
+                self._fail(why)
 
     def close(self) -> None:
         visa, self._visa = self._visa, None
@@ -143,6 +139,7 @@ class VisaSession:
             visa.close()
             raise self._unreachable("that is no instrument that takes messages")
         self._visa = visa
+        self._arrived.clear()
         kind = visa.interface_type
         is_socket = visa.resource_class == "SOCKET"
         self._is_stream = is_socket or kind == constants.InterfaceType.asrl
@@ -150,7 +147,10 @@ class VisaSession:
         self._socket = _socket_below(visa) if is_socket else None
         try:
             visa.timeout = timeout_ms
-            if is_socket:
+            if self._socket is not None:
+                # pyvisa-py knows the VISA attribute for this and refuses to set it.
+                self._socket.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
+            elif is_socket:
                 visa.set_visa_attribute(constants.ResourceAttribute.tcpip_nodelay, True)
             if kind == constants.InterfaceType.asrl and self._serial is not None:
                 _set_serial(visa, self._serial)
@@ -167,40 +167,58 @@ class VisaSession:
             raise self._unreachable("the session is closed")
         return self._visa
 
+    # ---- taking bytes
+
+    def _take_what_is_there(self) -> None:
+        """Waits for bytes on a socket that can be seen, and takes them all.
+
+        Asked for more than there is, pyvisa-py waits for the rest, and takes the end of a stream for "nothing yet": it spins
+        until its timeout. Asked for what is there it answers at once, in one read, a closed connection is found when it
+        happens, and no reply can be told from half of one.
+        """
+        assert self._socket is not None
+        ready, _, _ = select.select([self._socket], [], [], self.timeout)
+        if not ready:
+            raise self._half() if self._arrived else self._no_reply()
+        try:
+            there = len(self._socket.recv(_CHUNK, socket.MSG_PEEK))
+        except OSError as why:
+            raise self._lost(str(why)) from why
+        if not there:
+            raise self._lost("the instrument closed it")
+        self._take(there)
+
+    def _take(self, count: int) -> None:
+        self._stop_at_terminator(False)
+        try:
+            self._arrived += self._opened().read_bytes(count, chunk_size=min(count, _CHUNK))
+        except (pyvisa.Error, OSError) as why:
+            self._fail(why)
+
+    def _take_message(self) -> None:
+        """One message where the bus marks its end; up to the terminator's last byte on a stream."""
+        self._stop_at_terminator(self._is_stream)
+        try:
+            self._arrived += self._opened().read_raw(_CHUNK)
+        except (pyvisa.Error, OSError) as why:
+            self._fail(why)
+
+    def _cut(self, count: int, skip: int = 0) -> bytes:
+        taken = bytes(self._arrived[:count])
+        del self._arrived[: count + skip]
+        return taken
+
     def _stop_at_terminator(self, stop: bool) -> None:
         if self._is_stream and self._stops_at_terminator is not stop:
             self._opened().set_visa_attribute(constants.ResourceAttribute.termchar_enabled, stop)
             self._stops_at_terminator = stop
 
-    def _wait_for_bytes(self) -> bool:
-        """Waits for the reply to begin, where the socket below can be seen; says whether it surely has.
-
-        pyvisa-py takes the end of a stream for "nothing yet" and spins until its timeout. Looking first finds
-        a closed connection at once, and tells no reply from half of one.
-        """
-        if self._socket is None or self._is_buffered():
-            return self._socket is not None
-        ready, _, _ = select.select([self._socket], [], [], self.timeout)
-        if not ready:
-            raise self._no_reply()
-        if not _peek(self._socket):
-            raise self._lost("the instrument closed the connection")
-        return True
-
-    def _is_buffered(self) -> bool:
-        """Whether pyvisa-py already holds bytes of the reply."""
-        visa = self._opened()
-        below = getattr(visa.visalib, "sessions", {}).get(visa.session)
-        return bool(getattr(below, "_pending_buffer", b""))
-
     # ---- what went wrong
 
-    def _fail(self, why: Exception, *, arrived: bool) -> NoReturn:
+    def _fail(self, why: Exception) -> NoReturn:
         code = why.error_code if isinstance(why, pyvisa.errors.VisaIOError) else None
         if code == constants.StatusCode.error_timeout:
-            if self._socket is not None and not _peek(self._socket, otherwise=b"?"):
-                raise self._lost("the instrument closed the connection in the middle of its reply") from why
-            raise (self._half() if arrived else self._no_reply()) from why
+            raise (self._half() if self._arrived else self._no_reply()) from why
         if isinstance(why, OSError | pyvisa.errors.InvalidSession) or code in _LOST:
             raise self._lost(str(why)) from why
         raise Garbled(
@@ -249,18 +267,8 @@ def _socket_below(visa: MessageBasedResource) -> socket.socket | None:
     found = getattr(below, "interface", None)
     if not isinstance(found, socket.socket):
         return None
-    below.max_recv_size = _CHUNK
+    below.max_recv_size = _CHUNK  # pyvisa-py asks for 4096 bytes at a time unless told otherwise
     return found
-
-
-def _peek(found: socket.socket, otherwise: bytes = b"") -> bytes:
-    """The next byte without taking it; empty at the end of the stream, `otherwise` when there is none yet."""
-    try:
-        return found.recv(1, socket.MSG_PEEK | socket.MSG_DONTWAIT)
-    except BlockingIOError:
-        return otherwise
-    except OSError:
-        return b""
 
 
 def _set_serial(visa: MessageBasedResource, serial: Serial) -> None:
