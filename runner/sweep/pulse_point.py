@@ -1,0 +1,198 @@
+"""One pulse point: settings, conditioning, captures, readings around them. What comes out is judged elsewhere."""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from drivers import DigitizerSetup
+from runner.plan import LoadedPlan
+from runner.sweep.bench import Bench, Shots
+from runner.sweep.faults import BadReading
+from runner.sweep.look import Look, look_at
+from runner.sweep.moves import State
+from runner.sweep.ranges import choose, next_larger
+from runner.sweep.retry import Kind
+
+_SHORTEST_SAMPLES = 40  # of a pulse that can be looked at
+_MOST_ENLARGED = 2  # larger ranges tried at one point
+
+
+@dataclass(frozen=True, slots=True)
+class PulsePoint:
+    """One width as measured, before it is judged.
+
+    Attributes:
+        clipped: samples at the end of the codes, in the voltage and in the shunt channel.
+        start, end: UTC [s].
+        rail_before, rail_after: bank before the first and right after the last capture [V].
+    """
+
+    width: float
+    shots: Shots
+    look: Look | None
+    setup: DigitizerSetup
+    clipped: tuple[int, int]
+    start: float
+    end: float
+    rail_before: float
+    rail_after: float
+    body_degC: float
+    air_degC: float
+
+
+class PulseFixture:
+    """The bench wired for pulses on one part.
+
+    Args:
+        bench: in whatever state; it is wired and charged when first needed.
+        loaded: plan and bench file.
+        part: index.
+        resistance: of the winding, about [ohm].
+    """
+
+    def __init__(self, bench: Bench, loaded: LoadedPlan, part: int, resistance: float) -> None:
+        assert loaded.plan.pulse is not None
+        assert loaded.bench.digitizer is not None
+        self._bench = bench
+        self._pulse = loaded.plan.pulse
+        self._digitizer = loaded.bench.digitizer
+        self._channel = loaded.plan.parts[part].channel
+        self._resistance = resistance
+        self._samples = self._digitizer.samples
+        self._pretrigger = max(round(self._digitizer.pretrigger * self._samples), 1)
+        self._least = (0.0, 0.0)  # ranges found too small are not gone back to in this climb
+        self._enlarged = 0
+        self._clipped = (0, 0)
+        self._setup: DigitizerSetup | None = None
+
+    @property
+    def shortest(self) -> float:
+        """Shortest pulse that can be looked at [s]."""
+        return _SHORTEST_SAMPLES * self._digitizer.intervals[0]
+
+    @property
+    def longest(self) -> float:
+        """Longest pulse whose end is still in the capture [s]."""
+        return 0.95 * (self._samples - self._pretrigger) * self._digitizer.intervals[-1]
+
+    def get_ready(self) -> None:
+        """Wired for pulses and charged, from any state."""
+        self._bench.rest()
+        self._bench.wire(self._channel, "pulse")
+        self._bench.charge(self._pulse.rail)
+
+    def fresh_point(self) -> None:
+        self._enlarged = 0
+
+    def take_larger(self) -> None:
+        """Never again the ranges of the last capture in this climb."""
+        if self._setup is None:
+            return
+        ranges = self._digitizer.ranges
+        self._least = (
+            self._larger(self._setup.voltage_range, ranges.voltage, is_clipped=self._clipped[0] > 0),
+            self._larger(self._setup.shunt_range, ranges.shunt, is_clipped=self._clipped[1] > 0),
+        )
+        self._enlarged += 1
+
+    def measure(self, width: float, current: float, *, repeats: int, conditioning: int) -> PulsePoint:
+        """Pulses of `width` [s] that are expected to reach about `current` [A].
+
+        Raises:
+            InstrumentError: an instrument failed.
+            BadReading: no trigger came; or a channel clipped and has a larger range.
+        """
+        bench, rest = self._bench, self._pulse.rest
+        if bench.state is not State.CHARGED:
+            self.get_ready()
+        self._setup = bench.prepare_pulse(width, self._choose(width, current))
+        start = now = bench.clock.now()
+        if conditioning:
+            now = bench.condition(conditioning, rest)
+        rail_before = bench.bank()
+        shots = bench.shoot(repeats, rest, now)
+        if shots is None:
+            raise BadReading(Kind.NO_TRIGGER, "digitizer", f"no trigger in {self._setup.interval:g} s steps")
+        rail_after = bench.bank()
+        end = bench.clock.sleep(rest)
+        self._clipped = _clipped(shots)
+        if any(self._clipped) and self._can_enlarge():
+            raise BadReading(Kind.CLIPPED, "digitizer", "clipped in {} and {} samples".format(*self._clipped))
+        if _repeats_itself(shots):
+            raise BadReading(Kind.STUCK, "digitizer", "two captures are equal to the last bit")
+        look = look_at(
+            shots.voltage,
+            shots.current,
+            interval=self._setup.interval,
+            pretrigger=self._pretrigger,
+            width=width,
+            rail=self._pulse.rail,
+            resistance=self._resistance,
+        )
+        return PulsePoint(
+            width=width,
+            shots=shots,
+            look=look,
+            setup=self._setup,
+            clipped=self._clipped,
+            start=start,
+            end=end,
+            rail_before=rail_before,
+            rail_after=rail_after,
+            body_degC=bench.body(self._channel),
+            air_degC=bench.air(),
+        )
+
+    def _choose(self, width: float, current: float) -> DigitizerSetup:
+        ranges = self._digitizer.ranges
+        choice = choose(
+            width,
+            rail=self._pulse.rail,
+            current=current,
+            shunt=self._bench.ratings.shunt,
+            samples=self._samples,
+            pretrigger_samples=self._pretrigger,
+            intervals=self._digitizer.intervals,
+            voltage_ranges=ranges.voltage,
+            shunt_ranges=ranges.shunt,
+        )
+        return DigitizerSetup(
+            samples=self._samples,
+            interval=choice.interval,
+            pretrigger_samples=self._pretrigger,
+            voltage_range=max(choice.voltage_range, self._least[0]),
+            shunt_range=max(choice.shunt_range, self._least[1]),
+        )
+
+    def _can_enlarge(self) -> bool:
+        assert self._setup is not None
+        ranges = self._digitizer.ranges
+        channels = (
+            (self._clipped[0], self._setup.voltage_range, ranges.voltage),
+            (self._clipped[1], self._setup.shunt_range, ranges.shunt),
+        )
+        return self._enlarged < _MOST_ENLARGED and any(
+            count and next_larger(size, offered) is not None for count, size, offered in channels
+        )
+
+    @staticmethod
+    def _larger(size: float, offered: tuple[float, ...], *, is_clipped: bool) -> float:
+        return (next_larger(size, offered) or size) if is_clipped else size
+
+
+
+def _clipped(shots: Shots) -> tuple[int, int]:
+    counts = [0, 0]
+    for capture in shots.captures:
+        for channel, codes in enumerate((capture.voltage, capture.shunt)):
+            if codes.max() >= capture.code_max or codes.min() <= capture.code_min:
+                counts[channel] += int(np.count_nonzero((codes >= capture.code_max) | (codes <= capture.code_min)))
+    return counts[0], counts[1]
+
+
+def _repeats_itself(shots: Shots) -> bool:
+    """A digitizer has noise: equal captures are one capture read twice."""
+    return any(
+        np.array_equal(one.shunt, other.shunt) and np.array_equal(one.voltage, other.voltage)
+        for one, other in zip(shots.captures, shots.captures[1:], strict=False)
+    )

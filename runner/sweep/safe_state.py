@@ -1,0 +1,181 @@
+"""The way out of every run: pulser off, bias ramped to zero, rail off, bank discharged, relays open, chamber safe.
+
+In this order, because each step makes the next one harmless. No instrument that fails holds up the ones behind it: a
+step is tried, then once more after a reconnect, then the walk goes on and says in the end what could not be confirmed.
+The relays are the exception to "goes on": they are moved only once the bank is known to be discharged, or once so many
+time constants of the bleeder have passed that it must be. Nothing here raises.
+
+The watchdog walks the same way with sessions of its own, so nothing here may count on what a run remembers.
+"""
+
+import contextlib
+import math
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from typing import Any
+
+from runner.sweep.clock import Clock
+
+DISCHARGED = 0.5  # V, below which a bank counts as discharged
+FLOWING = 0.05  # A, below which a bias current counts as zero
+_RAMP_STEPS = 8
+_LONGEST_RAMP = 2.0  # s for the ramp to zero; outputs must be off soon
+_DISCHARGE_LOOKS = 6  # looks at the bank after the computed time, each a fifth of it later
+
+
+@dataclass(frozen=True, slots=True)
+class SafeRule:
+    """What the bench file says about getting safe.
+
+    Attributes:
+        bleed: time constant of the bank's bleeder [s], 0 where there is no bank.
+        highest_rail: most the bank can hold [V].
+        ramp: of the bias current [A/s].
+        chamber_degC: safe set-point.
+    """
+
+    bleed: float
+    highest_rail: float
+    ramp: float
+    chamber_degC: float
+
+
+@dataclass(frozen=True, slots=True)
+class SafeReport:
+    """What was done, and what could not be confirmed."""
+
+    done: tuple[str, ...]
+    unconfirmed: tuple[str, ...]
+
+    @property
+    def is_confirmed(self) -> bool:
+        return not self.unconfirmed
+
+    def __str__(self) -> str:
+        if self.is_confirmed:
+            return "safe state reached: " + ", ".join(self.done)
+        return "safe state NOT confirmed: " + "; ".join(self.unconfirmed) + ". Switch off by hand and check with a meter."
+
+
+def discharge_time(voltage: float, bleed: float) -> float:
+    """How long the bleeder needs from `voltage` [V] to below `DISCHARGED`, with time constant `bleed` [s]."""
+    return bleed * math.log(voltage / DISCHARGED) if voltage > DISCHARGED else 0.0
+
+
+def reach_safe_state(
+    roles: Mapping[str, Any], rule: SafeRule, clock: Clock, *, say: Callable[[str], None] = lambda text: None
+) -> SafeReport:
+    """Walk to the safe state.
+
+    Args:
+        roles: the opened instruments by role; those that are missing were never there.
+        rule: times and set-points.
+        clock: for ramps and the bleeder.
+        say: told each step as it is done, and how long the bank will take.
+
+    Returns:
+        What was done and what could not be confirmed. Never raises for an instrument.
+    """
+    walk = _Walk(roles, say)
+    walk.step("pulser", "pulser off", lambda pulser: pulser.off())
+    walk.step("bias_source", "bias at zero and off", lambda source: _end_bias(source, rule, clock))
+    walk.step("supply", "rail off", lambda supply: supply.off())
+    is_discharged = _discharge(walk, rule, clock)
+    if is_discharged:
+        walk.step("multiplexer", "relays open", lambda multiplexer: multiplexer.open_all())
+    elif "multiplexer" in roles:
+        walk.unconfirmed.append("multiplexer: relays not opened, the bank may still be charged")
+    walk.step("chamber", f"chamber to {rule.chamber_degC:g} degC", lambda chamber: chamber.set(rule.chamber_degC))
+    return SafeReport(tuple(walk.done), tuple(walk.unconfirmed))
+
+
+class _Walk:
+    def __init__(self, roles: Mapping[str, Any], say: Callable[[str], None]) -> None:
+        self.roles = roles
+        self.say = say
+        self.done: list[str] = []
+        self.unconfirmed: list[str] = []
+
+    def step(self, role: str, what: str, action: Callable[[Any], None]) -> bool:
+        """One step with one instrument, tried twice; True if it was done or there is no such instrument."""
+        instrument = self.roles.get(role)
+        if instrument is None:
+            return True
+        for tries_left in (1, 0):
+            try:
+                action(instrument)
+            # Exception: a fault of ours in one step must not keep the steps behind it from being taken.
+            except Exception as error:
+                failure = error
+                if tries_left:
+                    self.reconnect(instrument)
+            else:
+                self.done.append(what)
+                self.say(what)
+                return True
+        # The dialect's own way to the safe state may still work where a set-point is refused.
+        try:
+            instrument.safe()
+        except Exception:  # as above
+            self.unconfirmed.append(f"{what}: {failure}")
+            return False
+        self.done.append(f"{what} (by its safe-state messages)")
+        self.say(what)
+        return True
+
+    @staticmethod
+    def reconnect(instrument: Any) -> None:
+        # Whether it worked is shown by the next try.
+        with contextlib.suppress(Exception):
+            instrument.reconnect()
+
+
+def _end_bias(source: Any, rule: SafeRule, clock: Clock) -> None:
+    """Ramp from what flows to zero, so that the part's energy leaves it gently, then off."""
+    flowing = abs(source.measure()[0])
+    if flowing > FLOWING:
+        pause = min(flowing / rule.ramp, _LONGEST_RAMP) / _RAMP_STEPS
+        sign = math.copysign(1.0, source.measure()[0])
+        for step in range(_RAMP_STEPS - 1, 0, -1):
+            source.set(sign * flowing * step / _RAMP_STEPS)
+            clock.sleep(pause)
+    source.set(0.0)
+    if flowing > FLOWING:
+        clock.sleep(min(flowing / rule.ramp, _LONGEST_RAMP) / _RAMP_STEPS)
+    source.off()
+
+
+def _discharge(walk: _Walk, rule: SafeRule, clock: Clock) -> bool:
+    """Wait for the bleeder; the supply's voltmeter sits on the bank. Without it, wait for the worst case."""
+    supply = walk.roles.get("supply")
+    if supply is None or rule.bleed <= 0:
+        return True
+    voltage = _bank_voltage(walk, supply)
+    seconds = discharge_time(rule.highest_rail if math.isnan(voltage) else voltage, rule.bleed)
+    if seconds:
+        walk.say(f"bank at {voltage:.1f} V, discharged in {seconds:.0f} s")
+        clock.sleep(seconds)
+    for _ in range(_DISCHARGE_LOOKS):
+        if math.isnan(voltage):
+            walk.done.append(f"bank left to its bleeder for {seconds:.0f} s, from at most {rule.highest_rail:g} V")
+            walk.unconfirmed.append("supply: the bank's voltage could not be read")
+            return True
+        voltage = _bank_voltage(walk, supply)
+        if voltage <= DISCHARGED * 1.1:
+            walk.done.append("bank discharged")
+            return True
+        clock.sleep(max(seconds, rule.bleed) / 5)
+    if math.isnan(voltage):
+        return True
+    walk.unconfirmed.append(f"bank still at {voltage:.1f} V; its bleeder may be open")
+    return False
+
+
+def _bank_voltage(walk: _Walk, supply: Any) -> float:
+    for tries_left in (1, 0):
+        try:
+            return abs(float(supply.measure()[0]))
+        except Exception:  # as in `step`
+            if tries_left:
+                walk.reconnect(supply)
+    return math.nan
