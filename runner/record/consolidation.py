@@ -45,7 +45,7 @@ def consolidate(folder: Path | str) -> Path:
                 with hdf.open_to_change(part) as file:
                     add_extraction(file, tables, text, made_from)
             return record if replace(part, record) else part
-        except OSError as error:
+        except (OSError, RuntimeError) as error:
             part.unlink(missing_ok=True)  # gives its room back: the disk may be full
             raise RecordError(
                 f"{record}: could not be rebuilt: {error}. "
@@ -84,7 +84,7 @@ def is_current(folder: Path) -> bool:
     try:
         with hdf.open_to_read(record) as file:
             shown = hdf.read_text(file["entry/run_state"], "journal_mark")
-    except (OSError, KeyError):
+    except hdf.DAMAGE:
         return False
     with reading.snapshot(folder) as journal:
         return shown == reading.mark(journal)
@@ -110,5 +110,5 @@ def _earlier_extractions(record: Path) -> list[tuple[ExtractionTables, str, str]
     try:
         with hdf.open_to_read(record) as file:
             return read_everything(file)
-    except (OSError, KeyError):
+    except hdf.DAMAGE:
         return []

@@ -50,7 +50,7 @@ def write_extraction(path: Path | str, tables: ExtractionTables, result: Mapping
             copy_file(record, part)
             _append(part, tables, text)
             left_behind = not replace(part, record)
-        except OSError as error:
+        except (OSError, RuntimeError) as error:
             part.unlink(missing_ok=True)
             raise RecordError(f"{record}: the extraction could not be added: {error}.") from error
         write_file(record.with_name(RESULT), text.encode() + b"\n")

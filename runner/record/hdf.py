@@ -10,6 +10,9 @@ import numpy as np
 #: Object formats of HDF5 1.8 to 1.10: what every reader of the last ten years opens.
 LIBVER = ("v108", "v110")
 
+#: What h5py raises on a file that is damaged, or not ours.
+DAMAGE = (OSError, KeyError, RuntimeError, ValueError)
+
 TEXT = h5py.string_dtype()
 
 

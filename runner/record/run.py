@@ -8,10 +8,11 @@ stays whole.
 
 import json
 import math
+from collections.abc import Callable
 from dataclasses import dataclass
-from functools import cached_property
+from functools import cached_property, wraps
 from pathlib import Path
-from typing import Any, Self
+from typing import Any, Self, TypeVar
 
 import h5py
 import numpy as np
@@ -75,6 +76,22 @@ def open_run(path: Path | str) -> "Run":
     return Run(record)
 
 
+_T = TypeVar("_T")
+
+
+def _from_the_file(read: "Callable[[Run], _T]") -> "Callable[[Run], _T]":
+    """h5py's complaints about a damaged file become ours."""
+
+    @wraps(read)
+    def reading_or_saying_so(run: "Run") -> _T:
+        try:
+            return read(run)
+        except hdf.DAMAGE as error:
+            raise RecordError(f"{run.path}: damaged: its {read.__name__} cannot be read: {error}.") from error
+
+    return reading_or_saying_so
+
+
 class Run:
     """An open record. Close it, or use it in a ``with`` statement; it can be sent to another process."""
 
@@ -87,7 +104,7 @@ class Run:
         try:
             state = self._file["entry/run_state"]
             version = int(state.attrs["layout_version"])
-        except (KeyError, ValueError):
+        except hdf.DAMAGE:
             self._file.close()
             raise not_a_run(path, "is an HDF5 file, but not a record of kneemap.") from None
         if version > LAYOUT_VERSION:
@@ -106,53 +123,65 @@ class Run:
         return self.path.parent
 
     @cached_property
+    @_from_the_file
     def title(self) -> str:
         return self._text("title")
 
     @cached_property
+    @_from_the_file
     def kind(self) -> str:
         """ "plan" for a plan that was carried out, "captures" for captures taken by hand."""
         return self._text("run_state/kind")
 
     @cached_property
+    @_from_the_file
     def start(self) -> float:
         """UTC seconds since 1970; all other times are relative to it."""
         return hdf.from_iso(self._text("start_time"))
 
     @cached_property
+    @_from_the_file
     def end(self) -> float:
         """The last time at which anything happened [UTC s]."""
         return hdf.from_iso(self._text("end_time"))
 
     @cached_property
+    @_from_the_file
     def state(self) -> str:
         return self._text("run_state/state")
 
     @cached_property
+    @_from_the_file
     def run_id(self) -> str:
         return self._text("entry_identifier_uuid")
 
     @cached_property
+    @_from_the_file
     def raw_sha256(self) -> str:
         return self._text("run_state/raw_sha256")
 
     @cached_property
+    @_from_the_file
     def plan_name(self) -> str:
         return self._text("plan/file_name")
 
     @cached_property
+    @_from_the_file
     def plan_bytes(self) -> bytes:
         return bytes(self._entry["plan/data"][:].tobytes())
 
     @cached_property
+    @_from_the_file
     def bench_name(self) -> str:
         return self._text("bench_description/file_name")
 
     @cached_property
+    @_from_the_file
     def bench_bytes(self) -> bytes:
         return bytes(self._entry["bench_description/data"][:].tobytes())
 
     @cached_property
+    @_from_the_file
     def parts(self) -> tuple[PartRow, ...]:
         names = sorted(name for name in self._entry if name.startswith("part_"))
         return tuple(
@@ -165,11 +194,13 @@ class Run:
         )
 
     @cached_property
+    @_from_the_file
     def instruments(self) -> tuple[InstrumentRow, ...]:
         bench = self._entry["bench"]
         return tuple(_instrument(role, bench[role]) for role in bench if role != "name")
 
     @cached_property
+    @_from_the_file
     def legs(self) -> tuple[LegTimes, ...]:
         state = self._entry["run_state"]
         columns = (
@@ -178,6 +209,7 @@ class Run:
         return tuple(LegTimes(*row) for row in zip(*columns, strict=True))
 
     @cached_property
+    @_from_the_file
     def sessions(self) -> tuple[Session, ...]:
         state = self._entry["run_state"]
         rows = zip(
@@ -192,6 +224,7 @@ class Run:
         )
 
     @cached_property
+    @_from_the_file
     def events(self) -> tuple[EventRow, ...]:
         made = self._entry["events"]
         rows = zip(
@@ -204,11 +237,13 @@ class Run:
         return tuple(EventRow(*row) for row in rows)
 
     @cached_property
+    @_from_the_file
     def chamber_log(self) -> tuple[FloatArray, FloatArray]:
         """Time [n] s and air temperature [n] degC."""
         return _log(self._entry["bench/chamber/air/value_log"])
 
     @cached_property
+    @_from_the_file
     def body_logs(self) -> tuple[tuple[FloatArray, FloatArray], ...]:
         """For each part, time [n] s and body temperature [n] degC."""
         return tuple(
@@ -219,6 +254,7 @@ class Run:
     # ------------------------------------------------------------------- points
 
     @cached_property
+    @_from_the_file
     def all_points(self) -> Columns:
         """Every attempt at every point, in the order of recording; one array a column, see record-layout."""
         points = self._entry["points"]
@@ -228,6 +264,7 @@ class Run:
         }
 
     @cached_property
+    @_from_the_file
     def points(self) -> Columns:
         """The last acceptable attempt at each point, in the order of the plan."""
         everything = self.all_points
@@ -272,12 +309,14 @@ class Run:
     # -------------------------------------------------------------- extraction
 
     @cached_property
+    @_from_the_file
     def extraction(self) -> ExtractionTables | None:
         """The newest extraction made from exactly these data; None when there is none."""
         made = latest_valid(self._file)
         return None if made is None else read_tables(made)
 
     @cached_property
+    @_from_the_file
     def result(self) -> dict[str, Any] | None:
         """What ``result.json`` said when `extraction` was made; None when there is none."""
         made = latest_valid(self._file)
@@ -305,6 +344,7 @@ class Run:
         return hdf.read_text(self._entry, name)
 
     @cached_property
+    @_from_the_file
     def _where(self) -> dict[int, tuple[str, int, int]]:
         """Point to captures group and rows; those of one point stand together, in order."""
         found: dict[int, tuple[str, int, int]] = {}

@@ -62,7 +62,7 @@ def verify_record(path: Path | str) -> str:
         with hdf.open_to_read(path) as file:
             stored = hdf.read_text(file["entry/run_state"], "raw_sha256")
             found = raw_sha256_of(file)
-    except (OSError, KeyError) as error:
+    except hdf.DAMAGE as error:
         raise RecordError(f"{path}: damaged, or not a record: {error}.") from error
     if found != stored:
         raise RecordError(

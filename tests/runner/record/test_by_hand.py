@@ -31,7 +31,9 @@ def ramp(width, *, interval=1e-8, samples=400):
 def folder(tmp_path):
     t, v, shunt = ramp(2e-6)
     np.savez(tmp_path / "cold.npz", t=t, v_part=v, v_shunt=shunt)
-    rows = "\n".join(f"{a!r},{b!r},{c!r}" for a, b, c in zip(*map(np.ndarray.tolist, ramp(3e-6)), strict=True))
+    rows = "\n".join(
+        f"{a!r},{b!r},{c!r}" for a, b, c in zip(*map(np.ndarray.tolist, ramp(3e-6)), strict=True)
+    )
     (tmp_path / "hot.csv").write_text(f"# taken at bench 2\nt,v_part,v_shunt\n{rows}\n")
     (tmp_path / "captures.yaml").write_text(CAPTURES)
     return tmp_path
@@ -58,7 +60,9 @@ def test_every_sample_comes_back_as_it_was(folder):
 
 def test_the_width_shown_is_the_time_in_which_the_current_rose(folder):
     widths = open_run(ingest(folder)).points["pulse_width_setpoint"]
-    np.testing.assert_allclose(widths, [2e-6, 3e-6], rtol=0.06)  # from 2 % to 98 % of the peak, by its definition
+    np.testing.assert_allclose(
+        widths, [2e-6, 3e-6], rtol=0.06
+    )  # from 2 % to 98 % of the peak, by its definition
 
 
 def test_all_bad_waveforms_are_named_at_once_and_nothing_is_written(folder):
