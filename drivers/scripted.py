@@ -39,6 +39,7 @@ class ScriptedSession:
         self._send = send
         self._reply = reply
         self._pending = b""
+        self._has_begun = False  # some of the reply to the last line was read
         self._is_closed = False
 
     @property
@@ -57,6 +58,7 @@ class ScriptedSession:
         expected, reply = self._script.pop(0)
         assert text == expected, f"the script expects {expected!r}, but {text!r} was sent"
         self._is_closed = reply is CLOSED
+        self._has_begun = False
         if isinstance(reply, str):
             self._pending += reply.encode("ascii") + self._reply
         elif isinstance(reply, bytes):
@@ -66,12 +68,14 @@ class ScriptedSession:
         if self._reply not in self._pending:
             self._fail()
         line, self._pending = self._pending.split(self._reply, 1)
+        self._has_begun = True
         return line
 
     def read_exactly(self, count: int) -> bytes:
         if len(self._pending) < count:
             self._fail()
         data, self._pending = self._pending[:count], self._pending[count:]
+        self._has_begun = True
         return data
 
     def reopen(self) -> None:
@@ -84,6 +88,6 @@ class ScriptedSession:
     def _fail(self) -> None:
         if self._is_closed:
             raise Disconnected(self.role, self.resource, "the connection was closed by the instrument")
-        if self._pending:
-            raise Garbled(self.role, self.resource, f"the reply stopped after {len(self._pending)} bytes")
+        if self._pending or self._has_begun:
+            raise Garbled(self.role, self.resource, "the reply broke off")
         raise NoReply(self.role, self.resource, f"no reply in {self.timeout:.1f} s")

@@ -14,7 +14,7 @@ import socket
 from typing import Any, NoReturn
 
 import pyvisa
-from pyvisa import constants
+from pyvisa import constants, rname
 from pyvisa.resources import MessageBasedResource
 
 from drivers.dialect import TERMINATORS, Dialect, Serial
@@ -78,6 +78,7 @@ class VisaSession:
         self._library = library
         self._sent = b""
         self._arrived = bytearray()
+        self._has_begun = False  # some of the reply to what was sent has come
         self._visa: MessageBasedResource | None = None
         self._connect()
 
@@ -86,6 +87,7 @@ class VisaSession:
     def write(self, message: bytes) -> None:
         visa = self._opened()
         self._sent = message
+        self._has_begun = False
         try:
             visa.write_raw(message)
         except (pyvisa.Error, OSError) as why:
@@ -132,8 +134,12 @@ class VisaSession:
     def _connect(self) -> None:
         timeout_ms = max(1, round(self.timeout * 1000))
         try:
+            name = rname.ResourceName.from_string(self.resource)
+            if isinstance(name, rname.TCPIPSocket):
+                # pyvisa-py forgets an open socket when this fails in its hands.
+                socket.getaddrinfo(name.host_address, name.port)
             visa = _manager(self._library).open_resource(self.resource, open_timeout=timeout_ms)
-        except Exception as why:  # pyvisa-py raises a bare Exception when a connection fails
+        except Exception as why:  # what pyvisa-py raises when a connection fails is a bare Exception
             raise self._unreachable(str(why)) from why
         if not isinstance(visa, MessageBasedResource):
             visa.close()
@@ -179,7 +185,7 @@ class VisaSession:
         assert self._socket is not None
         ready, _, _ = select.select([self._socket], [], [], self.timeout)
         if not ready:
-            raise self._half() if self._arrived else self._no_reply()
+            raise self._half() if self._has_begun else self._no_reply()
         try:
             there = len(self._socket.recv(_CHUNK, socket.MSG_PEEK))
         except OSError as why:
@@ -192,6 +198,7 @@ class VisaSession:
         self._stop_at_terminator(False)
         try:
             self._arrived += self._opened().read_bytes(count, chunk_size=min(count, _CHUNK))
+            self._has_begun = True
         except (pyvisa.Error, OSError) as why:
             self._fail(why)
 
@@ -200,6 +207,7 @@ class VisaSession:
         self._stop_at_terminator(self._is_stream)
         try:
             self._arrived += self._opened().read_raw(_CHUNK)
+            self._has_begun = True
         except (pyvisa.Error, OSError) as why:
             self._fail(why)
 
@@ -218,7 +226,7 @@ class VisaSession:
     def _fail(self, why: Exception) -> NoReturn:
         code = why.error_code if isinstance(why, pyvisa.errors.VisaIOError) else None
         if code == constants.StatusCode.error_timeout:
-            raise (self._half() if self._arrived else self._no_reply()) from why
+            raise (self._half() if self._has_begun else self._no_reply()) from why
         if isinstance(why, OSError | pyvisa.errors.InvalidSession) or code in _LOST:
             raise self._lost(str(why)) from why
         raise Garbled(
