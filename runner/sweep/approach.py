@@ -11,7 +11,6 @@ or a slow tail; with it, the tail is believed until the readings say otherwise, 
 """
 
 from dataclasses import dataclass
-from functools import lru_cache
 
 import numpy as np
 
@@ -22,7 +21,9 @@ _OFFSET_SIGMA = 1.5  # K, between chamber sensor and body sensor (sensor classes
 _START_SIGMA = 60.0  # K, the part may come from anywhere in the chamber's range
 _WEIGHT_SIGMA = 2.0  # share of a lag; negative and above one when two lags stand in series
 _NOISE_FLOOR = 0.01  # K, no sensor is better, and a simulated one should not make the fit over-sure
-_ACCEPT = 6.0  # rise of chi-squared still believed: 95 % for the two time constants (chi-squared table, 2 d.o.f.)
+_ACCEPT = (
+    6.0  # rise of chi-squared still believed: 95 % for the two time constants (chi-squared table, 2 d.o.f.)
+)
 _LONGEST = 240  # samples in a fit; a longer trace is thinned, its newest tenth kept whole
 
 
@@ -33,14 +34,12 @@ class Approach:
     Attributes:
         final_degC: where the body will end, from the likeliest pair of time constants.
         rest: largest |final - body| among the pairs not ruled out, at the time asked for [K].
-        expected_end_degC: body now, by the likeliest pair.
         noise: of the body readings, one standard deviation [K].
         time_constants: the likeliest pair [s].
     """
 
     final_degC: float
     rest: float
-    expected_end_degC: float
     noise: float
     time_constants: tuple[float, float]
 
@@ -78,38 +77,65 @@ def fit_approach(
         raise ValueError(f"an approach needs at least 5 readings, got {time.size}")
     noise = reading_noise(body_degC)
     time, body_degC, air_degC = _thinned(time, body_degC, air_degC)
-    lagged, decays = _lagged_air(time, air_degC)
-    first, second = _pairs()
-    # Unknowns: offset, weight of the first lag, what is left of the start in each lag.
-    columns = np.stack(
-        [np.ones((first.size, time.size)), lagged[first] - lagged[second], decays[first], decays[second]], axis=2
-    )
-    target = body_degC - lagged[second]
+    lagged, decays = _lagged_air(time, air_degC - final_air_degC)
+    body = body_degC - final_air_degC
+    first, second = _PAIRS
+    # Everything a pair needs is a quadratic form in the same few columns, so these are multiplied out once for all pairs.
+    columns = np.concatenate([np.ones((1, time.size)), lagged, decays, body[None, :]])
+    products = columns @ columns.T
     prior = noise / np.array([_OFFSET_SIGMA, _WEIGHT_SIGMA, _START_SIGMA, _START_SIGMA])
     expected = np.array([0.0, 0.5, 0.0, 0.0])
-    normal = np.einsum("pni,pnj->pij", columns, columns) + np.diag(prior**2)
-    right = np.einsum("pni,pn->pi", columns, target) + prior**2 * expected
-    unknowns = np.linalg.solve(normal, right[..., None])[..., 0]
-    model = np.einsum("pni,pi->pn", columns, unknowns) + lagged[second]
-    misfit = np.sum((model - body_degC) ** 2, axis=1) + np.sum((prior * (unknowns - expected)) ** 2, axis=1)
+    unknown_columns, target = _COMBINATIONS[..., :4], _COMBINATIONS[..., 4]
+    weighed = products @ _COMBINATIONS
+    normal = unknown_columns.transpose(0, 2, 1) @ weighed[..., :4]
+    right = (unknown_columns.transpose(0, 2, 1) @ weighed[..., 4:])[..., 0]
+    square = np.sum(target * weighed[..., 4], axis=1)
+    unknowns = np.linalg.solve(normal + np.diag(prior**2), (right + prior**2 * expected)[..., None])[..., 0]
+    misfit = (
+        square
+        - 2 * np.sum(unknowns * right, axis=1)
+        + np.sum(unknowns[:, None, :] @ normal * unknowns[:, None, :], axis=(1, 2))
+    )
+    misfit += np.sum((prior * (unknowns - expected)) ** 2, axis=1)
     best = int(np.argmin(misfit))
     # A model that misses by more than the noise is wrong somewhere; then it may not rule out its neighbours by the noise.
     scale = max(noise**2, float(misfit[best]) / max(time.size - 4, 1))
     allowed = misfit <= misfit[best] + _ACCEPT * scale
-    final = unknowns[:, 0] + final_air_degC
-    then = model[:, int(np.argmin(np.abs(time - at)))]
+    then = _model(columns[:, int(np.argmin(np.abs(time - at)))], unknowns)
     return Approach(
-        final_degC=float(final[best]),
-        rest=float(np.max(np.abs(final - then)[allowed])),
-        expected_end_degC=float(model[best, -1]),
+        final_degC=float(unknowns[best, 0]) + final_air_degC,
+        rest=float(np.max(np.abs(unknowns[:, 0] - then)[allowed])),
         noise=noise,
         time_constants=(float(_TIME_CONSTANTS[first[best]]), float(_TIME_CONSTANTS[second[best]])),
     )
 
 
-@lru_cache(maxsize=1)
-def _pairs() -> tuple[np.ndarray, np.ndarray]:
-    return np.triu_indices(_TIME_CONSTANTS.size, k=1)
+def _model(column: FloatArray, unknowns: FloatArray) -> FloatArray:
+    """Modelled body, relative to the final air, at one instant for every pair; `column` holds the columns then."""
+    first, second = _PAIRS
+    count = _TIME_CONSTANTS.size
+    fast, slow = column[1 + first], column[1 + second]
+    left = unknowns[:, 2] * column[1 + count + first] + unknowns[:, 3] * column[1 + count + second]
+    return np.asarray(unknowns[:, 0] + unknowns[:, 1] * (fast - slow) + slow + left)
+
+
+def _combinations() -> FloatArray:
+    """For every pair: offset, difference of the lags, two starts, and the target, in terms of the columns."""
+    first, second = _PAIRS
+    count, pair = _TIME_CONSTANTS.size, np.arange(first.size)
+    made = np.zeros((first.size, 2 * count + 2, 5))
+    made[:, 0, 0] = 1.0
+    made[pair, 1 + first, 1] = 1.0
+    made[pair, 1 + second, 1] = -1.0
+    made[pair, 1 + count + first, 2] = 1.0
+    made[pair, 1 + count + second, 3] = 1.0
+    made[:, -1, 4] = 1.0
+    made[pair, 1 + second, 4] = -1.0
+    return made
+
+
+_PAIRS = np.triu_indices(_TIME_CONSTANTS.size, k=1)
+_COMBINATIONS = _combinations()
 
 
 def _lagged_air(time: FloatArray, air_degC: FloatArray) -> tuple[FloatArray, FloatArray]:

@@ -174,7 +174,9 @@ class Bench:
         if known is None:
             self.identities[role] = found
         elif found.text != known.text:
-            raise BadReading(Kind.IDENTITY, role, f"{found.text!r} answers, the run began with {known.text!r}")
+            raise BadReading(
+                Kind.IDENTITY, role, f"{found.text!r} answers, the run began with {known.text!r}"
+            )
 
     def program_limits(self, role: str) -> None:
         """Limits into the instrument, before anything else is asked of it."""
@@ -402,7 +404,7 @@ class Bench:
 def ramp_steps(start: float, end: float, largest: float) -> tuple[float, ...]:
     """Currents from `start` to `end`, `end` included and `start` not, at most `largest` apart [A]; evenly spaced."""
     count = max(math.ceil(abs(end - start) / largest - 1e-9), 1)
-    return tuple(start + (end - start) * step / count for step in range(1, count)) + (end,)
+    return (*(start + (end - start) * step / count for step in range(1, count)), end)
 
 
 def _finite(role: str, value: float) -> float:

@@ -72,7 +72,8 @@ class _Series:
         self.last_number = -1
         self.last_reading: tuple[float, LcrReading] | None = None
         self.history = [
-            Sought(one.x, one.current, one.inductance) for one in night.behind.history.get((leg, part, "bias"), ())
+            Sought(one.x, one.current, one.inductance)
+            for one in night.behind.history.get((leg, part, "bias"), ())
         ]
         current = plan.bias.current
         self.rule = (
@@ -140,9 +141,7 @@ class _Series:
             self.last_reading = None
             raise BadReading(Kind.STUCK, "lcr", f"repeats itself to the last digit at {current:.4g} A")
         self.last_reading = (current, lcr)
-        return _Reading(
-            lcr, flowing, voltage, bench.body(self.spec.channel), bench.air(), start, clock.now()
-        )
+        return _Reading(lcr, flowing, voltage, bench.body(self.spec.channel), bench.air(), start, clock.now())
 
     def _judge_part(self, current: float, lcr: LcrReading, flowing: float, voltage: float) -> None:
         judgement = judge_bias(
@@ -177,7 +176,7 @@ class _Series:
             (
                 judge_temperature(
                     reading.body_degC,
-                    self.settled.final_degC.get(self.part, reading.body_degC),
+                    self.settled.body_degC.get(self.part, reading.body_degC),
                     night.loaded.plan.temperatures.soak.within,
                     is_settled=self.settled.is_settled.get(self.part, True),
                 ),

@@ -5,18 +5,17 @@ a run: nothing left to do, a limit or a request (`SafeStop`), an instrument that
 (`RecordError`), a second Ctrl-C or SIGTERM (`StopAtOnce`), or a fault of ours, which crashes only after the bench is safe.
 """
 
-import platform
 import uuid
 from contextlib import ExitStack
 from dataclasses import dataclass
 from datetime import UTC, datetime
-from importlib.metadata import version
+from functools import partial
 from pathlib import Path
 from typing import Literal
 
 from drivers import InstrumentError
 from runner.errors import BenchError, Fault, InputError, KneemapError, SafeStop
-from runner.plan import Leg, LoadedPlan, Programme, expand, forecast
+from runner.plan import Leg, LoadedPlan, Point, Programme, expand, forecast
 from runner.record import Journal, PartRow, RunHeader
 from runner.sweep.bench import Bench
 from runner.sweep.biasing import bias_series
@@ -36,10 +35,9 @@ from runner.sweep.resume import NOTHING, Behind, look_behind
 from runner.sweep.retry import Action, Phase
 from runner.sweep.soaking import soak
 from runner.sweep.winding import measure_winding
+from runner.versions import library_versions, software
 
 Status = Literal["finished", "stopped", "failed"]
-_SOFTWARE = "kneemap"
-_LIBRARIES = ("numpy", "scipy", "h5py", "PyVISA", "PyVISA-py", "pydantic")
 _RESUMED_AFTER = 1.0  # s after the last entry of the journal, at which a resumed simulated night goes on
 
 
@@ -99,7 +97,7 @@ def carry_out(loaded: LoadedPlan, folder: Path, *, resume: bool = False, watch: 
         site = stack.enter_context(on_site(loaded, roles_needed(loaded.plan, loaded.bench)))
         clock = site.clock(not_before=not_before, between=lambda: None)
         journal = stack.enter_context(_journal(loaded, programme, folder, clock, resume=resume))
-        journal.session(f"{_SOFTWARE} {version('kneemap')}", _versions(), clock.now())
+        journal.session(software(), library_versions(), clock.now())
         return _Session(loaded, programme, folder, site, clock, journal, requests, behind, watch).run()
 
 
@@ -178,14 +176,16 @@ class _Session:
     def _start(self, bench: Bench, night: Night) -> None:
         """Who is there, is anything wrong with them, limits into them; nothing is switched on yet."""
         for role in bench.roles:
-            night.recovery.carry_out(Phase.START, lambda role=role: bench.meet(role))
+            night.recovery.carry_out(Phase.START, partial(bench.meet, role))
         for row in instrument_rows(
             self.loaded.bench, bench.identities, {reach.role: reach.resource for reach in self.site.reaches}
         ):
             self.journal.instrument(row)
         self.journal.state("acquiring")
         self.log.event("start", f"{len(bench.roles)} instruments answer; limits are set in them")
-        self.notifier.tell("kneemap: started", f"{self.loaded.plan.title}: {len(self.programme.points)} points")
+        self.notifier.tell(
+            "kneemap: started", f"{self.loaded.plan.title}: {len(self.programme.points)} points"
+        )
 
     # ---- the night
 
@@ -214,7 +214,7 @@ class _Session:
         parts = range(len(self.loaded.plan.parts))
         night.leg_points = (0, sum(len(self._left(night, leg.index, part)) for part in parts))
         for role in night.bench.roles:
-            night.recovery.carry_out(Phase.SOAK, lambda role=role: night.bench.check_identity(role))
+            night.recovery.carry_out(Phase.SOAK, partial(night.bench.check_identity, role))
         settled = soak(night, leg)
         night.is_soaked = True
         night.seen_soak += self.clock.now() - night.soak_started
@@ -242,17 +242,20 @@ class _Session:
         return any(self._left(night, leg.index, part) for part in range(len(self.loaded.plan.parts)))
 
     @staticmethod
-    def _left(night: Night, leg: int, part: int) -> list:  # type: ignore[type-arg]
+    def _left(night: Night, leg: int, part: int) -> list[Point]:
         return night.to_do(leg, part, "pulse") + night.to_do(leg, part, "bias")
 
     # ---- the end
 
-    def _end(self, bench: Bench, night: Night, status: Status, reason: str, crash: BaseException | None) -> Outcome:
+    def _end(
+        self, bench: Bench, night: Night, status: Status, reason: str, crash: BaseException | None
+    ) -> Outcome:
         with self.requests.shielded():
             level: Literal["info", "error"] = "info" if status == "finished" else "error"
             self.log.best_effort("end" if status == "finished" else "stop", reason, level)
             report = bench.make_safe(
-                safe_rule(self.loaded.plan, self.loaded.bench), lambda text: self.log.best_effort("safe_state", text)
+                safe_rule(self.loaded.plan, self.loaded.bench),
+                lambda text: self.log.best_effort("safe_state", text),
             )
             self.log.best_effort("safe_state", str(report), "info" if report.is_confirmed else "error")
             if not report.is_confirmed:
@@ -264,7 +267,8 @@ class _Session:
                 status, self.behind.points + night.points, self.behind.flagged + night.flagged, reason
             )
             self.notifier.tell(
-                f"kneemap: {status}", f"{self.loaded.plan.title}: {outcome.points} points, {outcome.flagged} flagged. {reason}"
+                f"kneemap: {status}",
+                f"{self.loaded.plan.title}: {outcome.points} points, {outcome.flagged} flagged. {reason}",
             )
             self.notifier.close()
         if isinstance(crash, KneemapError) and night.points == 0 and isinstance(crash, BenchError):
@@ -296,7 +300,9 @@ def _behind(folder: Path) -> tuple[Behind, float]:
     return behind, behind.last_time + _RESUMED_AFTER
 
 
-def _journal(loaded: LoadedPlan, programme: Programme, folder: Path, clock: Clock, *, resume: bool) -> Journal:
+def _journal(
+    loaded: LoadedPlan, programme: Programme, folder: Path, clock: Clock, *, resume: bool
+) -> Journal:
     if resume:
         return Journal.reopen(folder, plan=loaded.plan_bytes, bench=loaded.bench_bytes)
     header = RunHeader(
@@ -308,7 +314,10 @@ def _journal(loaded: LoadedPlan, programme: Programme, folder: Path, clock: Cloc
         plan_bytes=loaded.plan_bytes,
         bench_name=str(loaded.bench_path.absolute()),
         bench_bytes=loaded.bench_bytes,
-        parts=tuple(PartRow(part.label, _description(part.inductance, part.rated_current), part.channel) for part in loaded.plan.parts),
+        parts=tuple(
+            PartRow(part.label, _description(part.inductance, part.rated_current), part.channel)
+            for part in loaded.plan.parts
+        ),
         leg_setpoints=tuple(leg.setpoint_degC for leg in programme.legs),
     )
     return Journal.create(folder, header)
@@ -316,7 +325,3 @@ def _journal(loaded: LoadedPlan, programme: Programme, folder: Path, clock: Cloc
 
 def _description(inductance: float, rated_current: float) -> str:
     return f"{inductance * 1e6:g} uH, {rated_current:g} A"
-
-
-def _versions() -> dict[str, str]:
-    return {"python": platform.python_version(), **{name: version(name) for name in _LIBRARIES}}

@@ -7,6 +7,7 @@ instrument gives up. Sought widths take the same way: the seeker proposes, the p
 
 import math
 from collections.abc import Sequence
+from functools import partial
 
 from runner.errors import SafeStop
 from runner.plan import Point
@@ -80,7 +81,8 @@ class _Climb:
         self.last_number = -1
         self.ceiling = math.inf
         self.history = [
-            Sought(one.x, one.current, one.inductance) for one in night.behind.history.get((leg, part, "pulse"), ())
+            Sought(one.x, one.current, one.inductance)
+            for one in night.behind.history.get((leg, part, "pulse"), ())
         ]
         self.rule = _seek_rule(night)
 
@@ -108,7 +110,12 @@ class _Climb:
                 return self._end(proposal.why)
             width, seeking = proposal.x, proposal.why
         halt = self._approach(width)
-        if halt is not None and self.rule is not None and self.last is not None and self.ceiling > self.last.width:
+        if (
+            halt is not None
+            and self.rule is not None
+            and self.last is not None
+            and self.ceiling > self.last.width
+        ):
             self.ceiling = self.last.width
             return self._point(point)
         if halt is not None:
@@ -125,19 +132,23 @@ class _Climb:
             step = self._next(width)
             if isinstance(step, Halt):
                 return step.why
-            expected = step.prediction.current if step.prediction else self.pulse.rail * step.width / self.spec.inductance
+            expected = (
+                step.prediction.current
+                if step.prediction
+                else self.pulse.rail * step.width / self.spec.inductance
+            )
             if step.width >= width:
                 self.expected = expected
                 return None
             if self.scouts >= _MOST_SCOUTS:
                 return f"{self.scouts} scouting pulses did not get to {width * 1e6:.4g} us"
             self.scouts += 1
-            self.night.log.event("climb", f"scouting pulse of {step.width * 1e6:.4g} us on the way to {width * 1e6:.4g} us")
+            self.night.log.event(
+                "climb", f"scouting pulse of {step.width * 1e6:.4g} us on the way to {width * 1e6:.4g} us"
+            )
             seen = self.night.recovery.carry_out(
                 Phase.CLIMB,
-                lambda step=step, expected=expected: self._checked(
-                    self.fixture.measure(step.width, expected, repeats=_SCOUT_REPEATS, conditioning=0)
-                ),
+                partial(self._shoot, step.width, expected, repeats=_SCOUT_REPEATS, conditioning=0),
                 larger=self.fixture.take_larger,
             )
             if (why := self._learn(seen)) is not None:
@@ -154,8 +165,9 @@ class _Climb:
             )
         return next_step(self.last, width, self.limits, period=self.pulse.rest)
 
-    def _checked(self, seen: PulsePoint) -> PulsePoint:
-        """The point, unless it says that the part is open or shorted."""
+    def _shoot(self, width: float, expected: float, *, repeats: int, conditioning: int) -> PulsePoint:
+        """Measure a width; a part that is open or shorted is a bad reading."""
+        seen = self.fixture.measure(width, expected, repeats=repeats, conditioning=conditioning)
         judgement = judge_part_pulse(
             seen.look, width=seen.width, rail=self.pulse.rail, nominal_inductance=self.spec.inductance
         )
@@ -176,9 +188,13 @@ class _Climb:
         assert look is not None
         label, limit = self.night.label(self.part), self.limits
         if look.peak > limit.current:
-            raise SafeStop(f"{label}: {look.peak:.3g} A in a pulse of {seen.width * 1e6:.4g} us, limit {limit.current:g} A")
+            raise SafeStop(
+                f"{label}: {look.peak:.3g} A in a pulse of {seen.width * 1e6:.4g} us, limit {limit.current:g} A"
+            )
         if look.energy > limit.energy:
-            raise SafeStop(f"{label}: {look.energy * 1e3:.3g} mJ taken by a pulse, limit {limit.energy * 1e3:g} mJ")
+            raise SafeStop(
+                f"{label}: {look.energy * 1e3:.3g} mJ taken by a pulse, limit {limit.energy * 1e3:g} mJ"
+            )
         if self.last is None or look.width >= self.last.width:
             self.last = look
         if math.isnan(self.initial_slope):
@@ -195,10 +211,12 @@ class _Climb:
         """Measure and record one point; gives why the climb ends with it."""
         seen = self.night.recovery.carry_out(
             Phase.CLIMB,
-            lambda: self._checked(
-                self.fixture.measure(
-                    width, self.expected, repeats=self.pulse.repeats, conditioning=self.pulse.conditioning
-                )
+            partial(
+                self._shoot,
+                width,
+                self.expected,
+                repeats=self.pulse.repeats,
+                conditioning=self.pulse.conditioning,
             ),
             larger=self.fixture.take_larger,
         )
@@ -227,7 +245,7 @@ class _Climb:
                 judge_pulse(look, rail=self.pulse.rail, rail_before=seen.rail_before, full_scale=full_scale),
                 judge_temperature(
                     seen.body_degC,
-                    self.settled.final_degC.get(self.part, seen.body_degC),
+                    self.settled.body_degC.get(self.part, seen.body_degC),
                     night.loaded.plan.temperatures.soak.within,
                     is_settled=self.settled.is_settled.get(self.part, True),
                 ),
@@ -260,7 +278,9 @@ class _Climb:
         ]
         if seeking:
             night.log.event("seek", f"{seen.width * 1e6:.4g} us: {seeking}")
-        self.last_number = night.record(row, judgement, captures, ends=None if ends is None else ("climb_end", ends))
+        self.last_number = night.record(
+            row, judgement, captures, ends=None if ends is None else ("climb_end", ends)
+        )
 
     def _end(self, why: str) -> str:
         """The climb ends before a point was measured; the event belongs to the last one that was."""

@@ -10,7 +10,9 @@ _SAG = 0.05  # of the rail: a bank that falls further in a pulse, or has not com
 _START_OF_PEAK = 0.03  # a start current above this share of the peak moves Isat noticeably
 _START_OF_RANGE = 0.01  # below this share of full scale it is the digitizer's own offset
 _OPEN = 0.05  # of the current that the nominal inductance would let through
-_SHORT = 0.15  # of the nominal inductance: no core leaves so little at the start of a pulse or at little current
+_SHORT = (
+    0.15  # of the nominal inductance: no core leaves so little at the start of a pulse or at little current
+)
 _LITTLE = 0.3  # of the rated current: no part is saturated there
 _SHORT_RESISTANCE = 0.3  # of the nominal winding resistance
 _OPEN_RESISTANCE = 5.0
@@ -20,14 +22,14 @@ _OPEN_RESISTANCE = 5.0
 class Judgement:
     """Flags of a point and their sentences."""
 
-    flags: Flag = Flag(0)
+    flags: Flag
     texts: tuple[str, ...] = ()
 
     def __or__(self, other: "Judgement") -> "Judgement":
         return Judgement(self.flags | other.flags, self.texts + other.texts)
 
 
-GOOD = Judgement()
+GOOD = Judgement(Flag(0))
 
 
 def all_of(judgements: Iterable[Judgement]) -> Judgement:
@@ -38,7 +40,9 @@ def all_of(judgements: Iterable[Judgement]) -> Judgement:
     return together
 
 
-def judge_clipping(voltage_clipped: int, current_clipped: int, voltage_range: float, shunt_range: float) -> Judgement:
+def judge_clipping(
+    voltage_clipped: int, current_clipped: int, voltage_range: float, shunt_range: float
+) -> Judgement:
     """From the number of samples at the end of each channel's codes; ranges are +- full scale [V]."""
     texts = [
         f"{name} channel clipped in {count} samples; its range is {size:g} V"
@@ -65,19 +69,22 @@ def judge_pulse(look: Look, *, rail: float, rail_before: float, full_scale: floa
         sag = 1 - look.end_drive / look.drive
         found.append(Judgement(Flag.BANK_SAGGED, (f"voltage fell by {sag:.1%} during the pulse",)))
     elif rail_before < (1 - _SAG) * rail:
-        found.append(Judgement(Flag.BANK_SAGGED, (f"bank at {rail_before:.2f} V before the pulse, {rail:g} V asked",)))
+        found.append(
+            Judgement(Flag.BANK_SAGGED, (f"bank at {rail_before:.2f} V before the pulse, {rail:g} V asked",))
+        )
     if abs(look.start_current) > max(_START_OF_PEAK * look.peak, _START_OF_RANGE * full_scale):
         found.append(Judgement(Flag.OFFSET_CURRENT, (f"{look.start_current:.3g} A before the pulse",)))
     return all_of(found)
 
 
-def judge_temperature(body_degC: float, final_degC: float, within: float, *, is_settled: bool) -> Judgement:
-    """Body against where the soak said it would end; a point of a leg that did not settle says so instead."""
+def judge_temperature(body_degC: float, soaked_degC: float, within: float, *, is_settled: bool) -> Judgement:
+    """Body against where it was when the soak ended; a point of a leg that did not settle says so instead."""
     if not is_settled:
-        return Judgement(Flag.NOT_SETTLED, ("soak had given up",))
-    if abs(body_degC - final_degC) > within:
+        return Judgement(Flag.NOT_SETTLED, ("the soak had given up",))
+    if abs(body_degC - soaked_degC) > within:
         return Judgement(
-            Flag.TEMPERATURE_DRIFTED, (f"body at {body_degC:.2f} degC, soak promised {final_degC:.2f} degC",)
+            Flag.TEMPERATURE_DRIFTED,
+            (f"body at {body_degC:.2f} degC, {soaked_degC:.2f} degC when the soak ended",),
         )
     return GOOD
 
@@ -123,5 +130,7 @@ def judge_bias(
     if inductance < _SHORT * nominal_inductance and wanted <= _LITTLE * rated_current:
         return Judgement(Flag.PART_SHORT, (f"{inductance:.3g} H left of {nominal_inductance:.3g} H",))
     if resistance < _SHORT_RESISTANCE * nominal_resistance:
-        return Judgement(Flag.PART_SHORT, (f"winding {resistance:.4g} ohm, {nominal_resistance:.4g} ohm expected",))
+        return Judgement(
+            Flag.PART_SHORT, (f"winding {resistance:.4g} ohm, {nominal_resistance:.4g} ohm expected",)
+        )
     return GOOD

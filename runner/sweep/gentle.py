@@ -8,7 +8,9 @@ OVERSHOOT = 2.0  # K, of a large step; common practice for climatic chambers, no
 _SHORT_OF = 4.0  # K that are left for the second step
 
 
-def approach_setpoints(air_degC: float, setpoint_degC: float, limits_degC: tuple[float, float]) -> tuple[float, ...]:
+def approach_setpoints(
+    air_degC: float, setpoint_degC: float, limits_degC: tuple[float, float]
+) -> tuple[float, ...]:
     """Set-points to send one after the other, the last being the one wanted.
 
     Args:

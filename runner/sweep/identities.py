@@ -54,7 +54,11 @@ def instrument_rows(
         )
     shunt = bench.fixture.shunt
     if shunt is not None:
-        given = {"resistance": shunt.resistance, "tempco": shunt.tempco, "series_inductance": shunt.series_inductance}
+        given = {
+            "resistance": shunt.resistance,
+            "tempco": shunt.tempco,
+            "series_inductance": shunt.series_inductance,
+        }
         yield InstrumentRow(role="shunt", nx_class="NXsensor", name="current shunt", calibration=_rows(given))
 
 

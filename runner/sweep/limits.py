@@ -98,7 +98,9 @@ def first_step(
     """
     slope = drive / (_FIRST_LEFT * nominal_inductance)  # A/s
     by_current = _MARGIN * limits.current / slope
-    by_energy = (_MARGIN * limits.energy / (drive * slope)) ** 0.5  # all of drive * slope * t * t, not half of it
+    by_energy = (
+        _MARGIN * limits.energy / (drive * slope)
+    ) ** 0.5  # all of drive * slope * t * t, not half of it
     width = min(target, by_current, by_energy)
     if width < shortest:
         # A part's own inductance may be trusted down to a tenth where the bench cannot show anything shorter.
@@ -127,7 +129,9 @@ def next_step(last: Look, target: float, limits: PulseLimits, *, period: float =
     low, high = last.width, target
     for _ in range(_BISECTIONS):
         middle = (low + high) / 2
-        low, high = (middle, high) if _broken(last, predict(last, middle), limits, period) is None else (low, middle)
+        low, high = (
+            (middle, high) if _broken(last, predict(last, middle), limits, period) is None else (low, middle)
+        )
     if low < _SMALLEST_GAIN * last.width:
         return Halt(f"{target * 1e6:.4g} us is not fired: {broken}")
     return Step(low, predict(last, low))
@@ -140,7 +144,9 @@ def _broken(last: Look, prediction: Prediction, limits: PulseLimits, period: flo
     if prediction.worst_energy > _MARGIN * limits.energy:
         return f"pulse energy could reach {prediction.worst_energy * 1e3:.3g} mJ, limit {limits.energy * 1e3:g} mJ"
     if limits.mean_power is not None and prediction.worst_energy / period > limits.mean_power:
-        return f"mean power could reach {prediction.worst_energy / period:.3g} W, limit {limits.mean_power:g} W"
+        return (
+            f"mean power could reach {prediction.worst_energy / period:.3g} W, limit {limits.mean_power:g} W"
+        )
     return None
 
 
@@ -153,8 +159,8 @@ def _rise(last: Look, flux: float, growth: float, slope: float) -> float:
     # Flux linkage, relative to the last, at which the slope is at its ceiling; compared by logarithms, as a growth near
     # zero puts it beyond any number.
     if growth * math.log(flux / end) <= math.log(ceiling / slope):
-        bend = flux / end
+        bend: float = flux / end
     else:
-        bend = (ceiling / slope) ** (1 / growth)
-    rise = slope * end / (growth + 1) * (bend ** (growth + 1) - 1)
-    return rise + ceiling * max(flux - bend * end, 0.0)
+        bend = math.exp(math.log(ceiling / slope) / growth)
+    rise = slope * end / (growth + 1) * float(bend ** (growth + 1) - 1)
+    return float(rise + ceiling * max(flux - bend * end, 0.0))

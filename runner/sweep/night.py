@@ -31,9 +31,9 @@ _HEAT_MARGIN = 2.0  # times the last rise that must fit below the limit on body 
 
 @dataclass(frozen=True, slots=True)
 class Settled:
-    """How a soak ended, by part index: where the body was promised to end [degC], and whether it settled."""
+    """How a soak ended, by part index: the body then [degC], and whether it had settled."""
 
-    final_degC: dict[int, float] = field(default_factory=dict)
+    body_degC: dict[int, float] = field(default_factory=dict)
     is_settled: dict[int, bool] = field(default_factory=dict)
 
 
@@ -195,7 +195,9 @@ class Night:
             return False
         raise given_up
 
-    def skip(self, points: Sequence[Point], why: str, flags: Flag = Flag.SKIPPED, *, dead: bool = False) -> None:
+    def skip(
+        self, points: Sequence[Point], why: str, flags: Flag = Flag.SKIPPED, *, dead: bool = False
+    ) -> None:
         """Note points that are not measured, so that the record says so and a resume knows."""
         for index, point in enumerate(points):
             now = self.clock.now()
@@ -267,4 +269,3 @@ class Night:
         if self.rebuild.returncode:
             self.log.best_effort("record", f"record.h5 could not be rebuilt: {complaint.strip()}", "warning")
         self.rebuild = None
-

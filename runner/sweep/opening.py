@@ -16,8 +16,8 @@ from typing import Any, Self
 from drivers import Dialect, InstrumentError, connect, open_session
 from mock_instruments import launch
 from runner.errors import BenchError
-from runner.plan import LoadedBench, LoadedPlan, Plan, load_model, simulation_spec
 from runner.plan import Bench as BenchFile
+from runner.plan import LoadedBench, LoadedPlan, Plan, load_model, simulation_spec
 from runner.sweep.bench import Ratings
 from runner.sweep.clock import BenchClock, Clock, WallClock
 from runner.sweep.safe_state import SafeRule
@@ -87,7 +87,9 @@ def on_site(loaded: LoadedPlan | LoadedBench, roles: Iterable[str]) -> Iterator[
     bench = loaded.bench
     roles = [role for role in bench.instruments if role in set(roles)]
     if bench.simulation is None:
-        yield Site(tuple(_reach(loaded, role, bench.instruments[role].resource or "") for role in roles), None)
+        yield Site(
+            tuple(_reach(loaded, role, bench.instruments[role].resource or "") for role in roles), None
+        )
         return
     try:
         launched = launch(simulation_spec(bench))
@@ -95,7 +97,9 @@ def on_site(loaded: LoadedPlan | LoadedBench, roles: Iterable[str]) -> Iterator[
         raise BenchError(f"{loaded.bench_path}: {error}") from error
     try:
         yield Site(
-            tuple(_reach(loaded, role, f"TCPIP::127.0.0.1::{launched.ports[role]}::SOCKET") for role in roles),
+            tuple(
+                _reach(loaded, role, f"TCPIP::127.0.0.1::{launched.ports[role]}::SOCKET") for role in roles
+            ),
             launched.control,
         )
     finally:
@@ -143,7 +147,9 @@ def ratings(plan: Plan, bench: BenchFile) -> Ratings:
         supply_protection=supply.maximum.current if supply is not None else 0.0,
         supply_current=_SUPPLY_SHARE * supply.maximum.current if supply is not None else 0.0,
         current_limit=limits.current,
-        bias_protection=min(limits.current * _PROTECTION, source.maximum.current) if source is not None else 0.0,
+        bias_protection=min(limits.current * _PROTECTION, source.maximum.current)
+        if source is not None
+        else 0.0,
         chamber_high_degC=limits.chamber_degC[1],
         bias_voltage=compliance if most is None else min(compliance, most),
         bank_capacitance=fixture.bank.capacitance if fixture.bank is not None else 0.0,

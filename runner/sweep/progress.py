@@ -56,7 +56,9 @@ class Pace:
     seen_points: float
 
 
-_TRUST = 600.0  # s of forecast that count as already seen, so that the first minutes do not swing the estimate
+_TRUST = (
+    600.0  # s of forecast that count as already seen, so that the first minutes do not swing the estimate
+)
 _NEVER_OVER = 0.05  # of a soak that takes longer than forecast is always still to come
 
 

@@ -180,13 +180,14 @@ class PulseFixture:
         return (next_larger(size, offered) or size) if is_clipped else size
 
 
-
 def _clipped(shots: Shots) -> tuple[int, int]:
     counts = [0, 0]
     for capture in shots.captures:
         for channel, codes in enumerate((capture.voltage, capture.shunt)):
             if codes.max() >= capture.code_max or codes.min() <= capture.code_min:
-                counts[channel] += int(np.count_nonzero((codes >= capture.code_max) | (codes <= capture.code_min)))
+                counts[channel] += int(
+                    np.count_nonzero((codes >= capture.code_max) | (codes <= capture.code_min))
+                )
     return counts[0], counts[1]
 
 

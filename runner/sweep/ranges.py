@@ -17,7 +17,9 @@ class DigitizerChoice:
     shunt_range: float
 
 
-def choose_interval(width: float, *, intervals: Sequence[float], samples: int, pretrigger_samples: int) -> float:
+def choose_interval(
+    width: float, *, intervals: Sequence[float], samples: int, pretrigger_samples: int
+) -> float:
     """Shortest interval that shows the whole pulse and some of what follows; the longest there is if none does.
 
     Args:

@@ -35,7 +35,9 @@ class Recovery:
     def fresh_point(self) -> None:
         self.flags = Flag(0)
 
-    def carry_out(self, phase: Phase, action: Callable[[], Result], *, larger: Callable[[], None] | None = None) -> Result:
+    def carry_out(
+        self, phase: Phase, action: Callable[[], Result], *, larger: Callable[[], None] | None = None
+    ) -> Result:
         """Do it, and do it again as often as the policy allows.
 
         Args:

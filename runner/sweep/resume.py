@@ -95,8 +95,12 @@ def look_behind(folder: Path) -> Behind:
     pending -= done
     return Behind(
         done=frozenset(done),
-        complete=frozenset(places[one.point] for one in events if one.kind == "climb_end" and one.point in places),
-        dead_parts=frozenset(places[one.point][1] for one in events if one.kind == "part_end" and one.point in places),
+        complete=frozenset(
+            places[one.point] for one in events if one.kind == "climb_end" and one.point in places
+        ),
+        dead_parts=frozenset(
+            places[one.point][1] for one in events if one.kind == "part_end" and one.point in places
+        ),
         # A leg with skipped points is taken up again: what kept them from being measured may be mended.
         ended_legs=ended - {columns["leg"][row] for row in rows if columns["plan_index"][row] in pending},
         history={place: tuple(points) for place, points in history.items()},
@@ -138,10 +142,21 @@ def loaded_from_run(folder: Path) -> LoadedPlan:
 def _refuse_changes(started: LoadedPlan, now: LoadedPlan) -> None:
     faults = []
     for path, was, became in (
-        (now.plan_path, started.plan.model_dump(mode="json", serialize_as_any=True), now.plan.model_dump(mode="json", serialize_as_any=True)),
-        (now.bench_path, started.bench.model_dump(mode="json", serialize_as_any=True), now.bench.model_dump(mode="json", serialize_as_any=True)),
+        (
+            now.plan_path,
+            started.plan.model_dump(mode="json", serialize_as_any=True),
+            now.plan.model_dump(mode="json", serialize_as_any=True),
+        ),
+        (
+            now.bench_path,
+            started.bench.model_dump(mode="json", serialize_as_any=True),
+            now.bench.model_dump(mode="json", serialize_as_any=True),
+        ),
     ):
-        faults += [Fault(str(path), f"{what}; put it back to resume, or start a new run") for what in _differences(was, became)]
+        faults += [
+            Fault(str(path), f"{what}; put it back to resume, or start a new run")
+            for what in _differences(was, became)
+        ]
     if faults:
         raise InputError(faults)
 
@@ -155,5 +170,9 @@ def _differences(was: object, became: object, where: str = "") -> list[str]:
             for one in _differences(was.get(key), became.get(key), f"{where}.{key}" if where else str(key))
         ]
     if isinstance(was, list) and isinstance(became, list) and len(was) == len(became):
-        return [one for at, (a, b) in enumerate(zip(was, became, strict=True)) for one in _differences(a, b, f"{where}[{at}]")]
+        return [
+            one
+            for at, (a, b) in enumerate(zip(was, became, strict=True))
+            for one in _differences(a, b, f"{where}[{at}]")
+        ]
     return [] if was == became else [f"{where} was {was!r} when the run was started and is {became!r} now"]

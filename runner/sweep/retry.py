@@ -130,7 +130,9 @@ def decide(kind: Kind, role: str, phase: Phase, *, tried: int, spent: int) -> De
     ladder = TRY[kind]
     if tried < len(ladder) and spent < BUDGET:
         return Decision(ladder[tried], f"{role}: {kind.value} ({phase.value}); {ladder[tried].value}")
-    action = GIVE_UP_READING.get((kind, role)) or GIVE_UP_KIND.get(kind) or GIVE_UP_ROLE.get(role, Action.STOP)
+    action = (
+        GIVE_UP_READING.get((kind, role)) or GIVE_UP_KIND.get(kind) or GIVE_UP_ROLE.get(role, Action.STOP)
+    )
     if phase is Phase.SHUTDOWN:
         action = Action.FLAG
     elif phase is Phase.START and action is not Action.FLAG and kind not in (Kind.OPEN, Kind.SHORT):

@@ -54,7 +54,11 @@ class SafeReport:
     def __str__(self) -> str:
         if self.is_confirmed:
             return "safe state reached: " + ", ".join(self.done)
-        return "safe state NOT confirmed: " + "; ".join(self.unconfirmed) + ". Switch off by hand and check with a meter."
+        return (
+            "safe state NOT confirmed: "
+            + "; ".join(self.unconfirmed)
+            + ". Switch off by hand and check with a meter."
+        )
 
 
 def discharge_time(voltage: float, bleed: float) -> float:
@@ -85,7 +89,9 @@ def reach_safe_state(
         walk.step("multiplexer", "relays open", lambda multiplexer: multiplexer.open_all())
     elif "multiplexer" in roles:
         walk.unconfirmed.append("multiplexer: relays not opened, the bank may still be charged")
-    walk.step("chamber", f"chamber to {rule.chamber_degC:g} degC", lambda chamber: chamber.set(rule.chamber_degC))
+    walk.step(
+        "chamber", f"chamber to {rule.chamber_degC:g} degC", lambda chamber: chamber.set(rule.chamber_degC)
+    )
     return SafeReport(tuple(walk.done), tuple(walk.unconfirmed))
 
 
@@ -157,7 +163,9 @@ def _discharge(walk: _Walk, rule: SafeRule, clock: Clock) -> bool:
         clock.sleep(seconds)
     for _ in range(_DISCHARGE_LOOKS):
         if math.isnan(voltage):
-            walk.done.append(f"bank left to its bleeder for {seconds:.0f} s, from at most {rule.highest_rail:g} V")
+            walk.done.append(
+                f"bank left to its bleeder for {seconds:.0f} s, from at most {rule.highest_rail:g} V"
+            )
             walk.unconfirmed.append("supply: the bank's voltage could not be read")
             return True
         voltage = _bank_voltage(walk, supply)

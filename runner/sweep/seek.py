@@ -13,10 +13,15 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from runner.arrays import FloatArray
+
 _GROW = 1.35  # of x while bracketing: five steps from a quarter of the range to its end
 _BIAS_STEPS = 8  # a bias current starts from zero, where no factor helps
-_OVERSHOOT = 1.06  # the first point past a drop should be a little past it, not on it
 _COVERAGE = 2.0  # standard uncertainties on each side of an interval
+_NEAR = 7  # points that a crossing is found from
+_FOR_A_PARABOLA = 5
+_UNKNOWN_SCATTER = 5e-3  # of the inductance, until the points themselves tell
+_LEAST_SCATTER = 5e-4
 
 
 @dataclass(frozen=True, slots=True)
@@ -109,7 +114,9 @@ def next_point(history: Sequence[Sought], rule: SeekRule, *, ceiling: float = ma
     if widest is None:
         reached = sum(find_crossing(points, drop) is not None for drop in rule.drops)
         if reached < len(rule.drops):
-            return Done(f"{reached} of {len(rule.drops)} drops lie below what may be reached; their intervals are met")
+            return Done(
+                f"{reached} of {len(rule.drops)} drops lie below what may be reached; their intervals are met"
+            )
         return Done("every interval asked for is reached")
     interval, crossing, drop = widest
     x = _beside(points, crossing.x, high, sequence=len(points))
@@ -124,42 +131,70 @@ def find_crossing(points: Sequence[Sought], drop: float) -> Crossing | None:
         drop: fraction.
 
     Returns:
-        The crossing with its uncertainty: noise of the points near it, the reference's own, and how far a straight line
-        through the gap may be wrong (a quarter of the difference to the neighbouring gaps' slopes). None if no crossing.
+        The crossing, from a parabola through the points near it (a line through fewer than five). Its uncertainty is the
+        points' scatter, carried through the fit, and half of what parabola and line disagree by. None if no crossing.
     """
     current = np.array([one.current for one in points])
     ratio = np.array([one.inductance for one in points]) / points[0].inductance
-    noise = np.array([one.uncertainty for one in points])
     level = 1 - drop
     below = np.flatnonzero(ratio < level)
     if below.size == 0 or below[0] == 0:
         return None
     right = int(below[0])
     left = right - 1
-    slope = (ratio[right] - ratio[left]) / (current[right] - current[left])
-    if not slope < 0:
+    gap = float(current[right] - current[left])
+    if gap <= 0:
         return None
-    share = (level - ratio[left]) / (ratio[right] - ratio[left])
-    at = float(current[left] + share * (current[right] - current[left]))
-    near = np.argsort(np.abs(current - at))[: max(3, len(points) // 3)]
-    statistical = math.sqrt(float(np.mean(noise[near] ** 2)) / near.size + float(noise[0] ** 2) * level**2)
-    bend = _bend(current, ratio, left, right)
-    sag = abs(bend) * (at - current[left]) * (current[right] - at) / 2
-    uncertainty = math.hypot(statistical, sag / 3**0.5) / abs(slope)
+    share = float((level - ratio[left]) / (ratio[right] - ratio[left]))
+    straight = float(current[left]) + share * gap
     x = points[left].x + share * (points[right].x - points[left].x)
-    return Crossing(at, uncertainty, float(x))
+    noise = _scatter(current, ratio)
+    near = np.sort(np.argsort(np.abs(current - straight), kind="stable")[:_NEAR])
+    slope = float(ratio[right] - ratio[left]) / gap
+    if near.size < _FOR_A_PARABOLA or np.ptp(current[near]) <= 0:
+        return Crossing(straight, math.hypot(noise / abs(slope), gap / 4), float(x))
+    span = float(np.ptp(current[near]))
+    scaled = (current[near] - straight) / span
+    columns = np.vander(scaled, 3)
+    solution = np.asarray(np.linalg.lstsq(columns, ratio[near] - level, rcond=None)[0], dtype=float)
+    curved = _root(
+        solution, (float(current[left]) - straight) / span, (float(current[right]) - straight) / span
+    )
+    at = straight if curved is None else straight + curved * span
+    leverage = float(np.linalg.pinv(columns.T @ columns)[-1, -1])
+    statistical = (
+        noise * math.sqrt(leverage + level**2) / abs(slope)
+    )  # level: the reference point's own scatter
+    model = gap / 4 if curved is None else abs(at - straight) / 2
+    return Crossing(at, math.hypot(statistical, model), float(x))
 
 
-def _bend(current: np.ndarray, ratio: np.ndarray, left: int, right: int) -> float:
-    """Largest second derivative seen in the gap's neighbourhood; the gap's own slope squared over its drop if alone."""
-    bends = []
-    for middle in (left, right):
-        if 0 < middle < len(current) - 1:
-            first = (ratio[middle] - ratio[middle - 1]) / (current[middle] - current[middle - 1])
-            second = (ratio[middle + 1] - ratio[middle]) / (current[middle + 1] - current[middle])
-            bends.append(abs(2 * (second - first) / (current[middle + 1] - current[middle - 1])))
-    gap = current[right] - current[left]
-    return max(bends, default=abs(ratio[right] - ratio[left]) / gap**2)
+def _root(parabola: FloatArray, low: float, high: float) -> float | None:
+    """Root of a parabola between `low` and `high`, by bisection; None if it has the same sign at both ends."""
+    first, last = np.polyval(parabola, low), np.polyval(parabola, high)
+    if first * last > 0:
+        return None
+    for _ in range(60):
+        middle = (low + high) / 2
+        low, high = (middle, high) if np.polyval(parabola, middle) * first > 0 else (low, middle)
+    return (low + high) / 2
+
+
+def _scatter(current: FloatArray, ratio: FloatArray) -> float:
+    """Scatter of the points about a smooth curve: residuals of parabolas through five neighbours, their median."""
+    if current.size < _FOR_A_PARABOLA + 1:
+        return _UNKNOWN_SCATTER
+    found = []
+    for first in range(current.size - _FOR_A_PARABOLA + 1):
+        part = slice(first, first + _FOR_A_PARABOLA)
+        span = float(np.ptp(current[part]))
+        if span > 0:
+            columns = np.vander((current[part] - current[part][0]) / span, 3)
+            solution, *_ = np.linalg.lstsq(columns, ratio[part], rcond=None)
+            found.append(
+                float(np.linalg.norm(columns @ solution - ratio[part])) / (_FOR_A_PARABOLA - 3) ** 0.5
+            )
+    return max(float(np.median(found)) if found else _UNKNOWN_SCATTER, _LEAST_SCATTER)
 
 
 def _step_up(points: Sequence[Sought], rule: SeekRule, high: float) -> float:

@@ -18,7 +18,9 @@ _FEWEST = 8  # readings before anything is judged
 _SHORTEST_WINDOW = 120.0  # s over which a drift can be told from noise
 _STILL = 6  # equal readings in a row before a sensor may be called stuck
 _AIR_MOVED = 1.0  # K of air, during which a live body sensor must have changed its reading
-_AGREE = 5.0  # K between where the body ends and the set-point; beyond it one sensor is not where it should be
+_AGREE = (
+    5.0  # K between where the body ends and the set-point; beyond it one sensor is not where it should be
+)
 _AIR_NEAR = 3.0  # K, air farther than this from the set-point is still ramping
 
 
@@ -133,16 +135,19 @@ def _judge(rule: SoakRule, trace: Trace) -> Verdict:
     ]
     approach = max(approaches, key=lambda one: one.rest)
     drift = _steepest(time[recent], body[recent])
-    found = {"rest": approach.rest, "drift": drift, "final_degC": approach.final_degC}
+
+    def verdict(soak: Soak, why: str, *, is_stuck: bool = False) -> Verdict:
+        return Verdict(soak, why, approach.rest, drift, approach.final_degC, is_stuck)
+
     if (stuck := _why_stuck(rule, trace.setpoint_degC, time, body, air)) is not None:
-        return Verdict(Soak.WAIT, stuck, is_stuck=True, **found)
+        return verdict(Soak.WAIT, stuck, is_stuck=True)
     if abs(approach.final_degC - trace.setpoint_degC) > max(_AGREE, 3 * rule.within):
-        return Verdict(Soak.WAIT, f"body heads for {approach.final_degC:.1f} degC, far from the set-point", **found)
+        return verdict(Soak.WAIT, f"body heads for {approach.final_degC:.1f} degC, far from the set-point")
     if approach.rest > rule.within:
-        return Verdict(Soak.WAIT, f"up to {approach.rest:.2f} K of drift to come", **found)
+        return verdict(Soak.WAIT, f"up to {approach.rest:.2f} K of drift to come")
     if drift > rule.drift:
-        return Verdict(Soak.WAIT, f"drifting {drift * 60:.2f} K/min", **found)
-    return Verdict(Soak.SETTLED, _settled_why(approach, drift), **found)
+        return verdict(Soak.WAIT, f"drifting {drift * 60:.2f} K/min")
+    return verdict(Soak.SETTLED, _settled_why(approach, drift))
 
 
 def _settled_why(approach: Approach, drift: float) -> str:
@@ -170,7 +175,9 @@ def _steepest(time: FloatArray, values: FloatArray) -> float:
     return max(slopes, default=float("inf"))
 
 
-def _why_stuck(rule: SoakRule, setpoint: float, time: FloatArray, body: FloatArray, air: FloatArray) -> str | None:
+def _why_stuck(
+    rule: SoakRule, setpoint: float, time: FloatArray, body: FloatArray, air: FloatArray
+) -> str | None:
     """A sensor that repeats itself to the last digit is stuck if the part must have moved meanwhile.
 
     Standing still is no fault by itself: a coarse sensor in a settled chamber does just that. So either the air has
@@ -183,7 +190,9 @@ def _why_stuck(rule: SoakRule, setpoint: float, time: FloatArray, body: FloatArr
     if np.ptp(air[first:]) > _AIR_MOVED:
         return f"body sensor stands at {body[-1]:.2f} degC while the air moved {np.ptp(air[first:]):.1f} K"
     if first >= _FEWEST:
-        before = fit_approach(time[:first], body[:first], air[:first], final_air_degC=setpoint, at=time[first - 1])
+        before = fit_approach(
+            time[:first], body[:first], air[:first], final_air_degC=setpoint, at=time[first - 1]
+        )
         noise = reading_noise(body[:first])
         travelled = min(before.rest, abs(before.final_degC - body[-1]))
         left = np.exp(-(time[-1] - time[first]) / max(before.time_constants))
