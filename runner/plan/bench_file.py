@@ -29,6 +29,7 @@ from runner.plan.quantity import (
     FRACTION,
     INDUCTANCE,
     RESISTANCE,
+    SKEW,
     TEMPCO,
     TEMPERATURE,
     TIME,
@@ -214,7 +215,7 @@ class Digitizer(Instrument):
     ] = Field(examples=[["5 ns", "10 ns", "20 ns", "50 ns"]])
     ranges: Ranges = Field(examples=[{"voltage": ["10 V", "20 V"], "shunt": ["100 mV", "200 mV"]}])
     calibration: _calibration(  # type: ignore[valid-type]
-        "Digitizer", voltage_gain=GAIN, shunt_gain=GAIN, skew=constant(TIME)
+        "Digitizer", voltage_gain=GAIN, shunt_gain=GAIN, skew=constant(SKEW)
     )
 
     @field_validator("intervals")

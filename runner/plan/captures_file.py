@@ -6,7 +6,7 @@ from pydantic import Field, model_validator
 
 from runner.plan.bench_file import Constant, Shunt, Temperature, Uncertainty, constant
 from runner.plan.plan_file import Extract, Part
-from runner.plan.quantity import INDUCTANCE, RESISTANCE, TEMPCO, TEMPERATURE, TIME, Kind, Quantity
+from runner.plan.quantity import INDUCTANCE, RESISTANCE, SKEW, TEMPCO, TEMPERATURE, Kind, Quantity
 from runner.plan.shapes import FileModel, Words, Written, fault, one_of
 
 
@@ -84,7 +84,7 @@ class CapturesFile(FileModel):
     shunt: Annotated[Shunt, Written(CapturesShunt, _as_shunt)] | None = Field(
         default=None, examples=[{"resistance": "10 mohm", "uncertainty": "0.1 %"}]
     )
-    skew: _perhaps_exact(TIME) | None = Field(  # type: ignore[valid-type]
+    skew: _perhaps_exact(SKEW) | None = Field(  # type: ignore[valid-type]
         default=None, description="Voltage channel later than current channel; estimated when left out."
     )
     columns: Columns = Field(examples=[{"time": "t", "voltage": "v_part", "shunt_voltage": "v_shunt"}])

@@ -3,7 +3,8 @@
 from collections.abc import Iterator
 
 from runner.plan.finding import Check, Finding, in_plan
-from runner.plan.plan_file import Bias, Extract, Limits, Part, Pulse, Temperatures, WidthSeek
+from runner.plan.plan_file import Bias, Extract, Limits, Part, Pulse, Temperatures
+from runner.plan.quantity import shown
 
 NEAR_ROOM = 10.0  # K: a leg this near 25 degC can be brought to it
 
@@ -30,7 +31,7 @@ def temperatures_keep_the_limit(temperatures: Temperatures, limits: Limits) -> I
 def body_limit_is_above_the_legs(temperatures: Temperatures, limits: Limits) -> Iterator[Finding]:
     hottest = max(temperatures.at_degC)
     if limits.body_degC <= hottest:
-        what = f"{limits.body_degC:g} degC is not above the hottest leg ({hottest:g} degC); raise the limit or leave that leg out"
+        what = f"{limits.body_degC:g} degC is not above the hottest leg ({hottest:g} degC); raise it or leave that leg out"
         yield in_plan("limits", "body", what=what)
 
 
@@ -81,8 +82,8 @@ def stop_at_reaches_the_drops(pulse: Pulse | None, extract: Extract) -> Iterator
     drop = pulse.stop_at.drop if pulse and pulse.stop_at else None
     if drop is not None and drop <= max(extract.drops):
         what = (
-            f"the climb would stop at a drop of {drop * 100:g} %, but 'extract.drops' asks for {max(extract.drops) * 100:g} %;"
-            " stop at a larger drop"
+            f"the climb would stop at a drop of {drop * 100:g} %, but 'extract.drops' asks for"
+            f" {max(extract.drops) * 100:g} %; stop at a larger drop"
         )
         yield in_plan("pulse", "stop_at", "drop", what=what)
 
@@ -90,9 +91,11 @@ def stop_at_reaches_the_drops(pulse: Pulse | None, extract: Extract) -> Iterator
 def repeats_have_time(pulse: Pulse | None) -> Iterator[Finding]:
     if pulse is None:
         return
-    longest = pulse.width.to if isinstance(pulse.width, WidthSeek) else pulse.width[-1]
-    if pulse.rest < 10 * longest:
-        what = f"{pulse.rest:g} s is less than ten times the longest pulse ({longest:g} s); the part needs longer to rest"
+    if pulse.rest < 10 * pulse.longest:
+        what = (
+            f"{shown(pulse.rest, 's')} is less than ten times the longest pulse ({shown(pulse.longest, 's')});"
+            " the part needs longer to rest, so write a longer time"
+        )
         yield in_plan("pulse", "rest", what=what)
 
 
@@ -108,7 +111,7 @@ def bias_keeps_the_parts_limits(
     for index, part in enumerate(parts):
         limit = part.limits.current if part.limits else None
         if bias and limit is not None and bias.largest > limit <= limits.current:
-            what = f"{limit:g} A is below the largest bias current ({bias.largest:g} A); lower 'bias.current' or raise this limit"
+            what = f"{limit:g} A is below the largest bias current ({bias.largest:g} A); lower 'bias.current' or raise it"
             yield in_plan("parts", index, "limits", "current", what=what)
 
 
@@ -135,7 +138,8 @@ def parts_differ(parts: tuple[Part, ...]) -> Iterator[Finding]:
                 "parts", index, "label", what=f"the label {part.label!r} stands twice; give each part its own"
             )
         if part.channel in [other.channel for other in before]:
-            what = f"channel {part.channel} is taken by {next(o.label for o in before if o.channel == part.channel)!r} already"
+            owner = next(other.label for other in before if other.channel == part.channel)
+            what = f"channel {part.channel} is taken by {owner!r} already"
             yield in_plan("parts", index, "channel", what=f"{what}; give each part a channel of its own")
 
 

@@ -1,7 +1,6 @@
 """Checks of a plan against its bench."""
 
 from collections.abc import Iterator, Mapping
-from typing import Any
 
 from runner.plan.bench_file import (
     BiasSource,
@@ -14,7 +13,8 @@ from runner.plan.bench_file import (
     Supply,
 )
 from runner.plan.finding import Check, Finding, in_plan
-from runner.plan.plan_file import Bias, Part, Pulse, Remanence, Temperatures, WidthSeek
+from runner.plan.plan_file import Bias, Part, Pulse, Remanence, Temperatures
+from runner.plan.quantity import shown
 
 PULSE_ROLES = ("supply", "pulser", "digitizer")
 BIAS_ROLES = ("lcr", "bias_source")
@@ -67,23 +67,24 @@ def supply_reaches_the_rail(pulse: Pulse | None, supply: Supply | None) -> Itera
 def pulser_reaches_the_widths(pulse: Pulse | None, pulser: Pulser | None) -> Iterator[Finding]:
     if pulse is None or pulser is None:
         return
-    longest = pulse.width.to if isinstance(pulse.width, WidthSeek) else pulse.width[-1]
-    if longest > pulser.maximum.width:
-        what = f"a pulse of {longest:g} s is longer than the pulser's maximum ({pulser.maximum.width:g} s); shorten it"
-        yield in_plan("pulse", "width", what=what)
+    if pulse.longest > pulser.maximum.width:
+        most = shown(pulser.maximum.width, "s")
+        what = (
+            f"a pulse of {shown(pulse.longest, 's')} is longer than the pulser's maximum ({most}); shorten it"
+        )
+        yield in_plan("pulse", "width", "to", what=what)
 
 
 def digitizer_holds_the_widths(pulse: Pulse | None, digitizer: Digitizer | None) -> Iterator[Finding]:
     if pulse is None or digitizer is None:
         return
-    longest = pulse.width.to if isinstance(pulse.width, WidthSeek) else pulse.width[-1]
     window = digitizer.samples * (1 - digitizer.pretrigger) * digitizer.intervals[-1]
-    if longest > window:
+    if pulse.longest > window:
         what = (
-            f"a pulse of {longest:g} s does not fit into the digitizer's longest capture ({window:.3g} s after the trigger);"
-            " shorten it, or give the bench more samples or a longer interval"
+            f"a pulse of {shown(pulse.longest, 's')} does not fit into the digitizer's longest capture"
+            f" ({shown(window, 's')} after the trigger); shorten it, or give the bench more samples or longer intervals"
         )
-        yield in_plan("pulse", "width", what=what)
+        yield in_plan("pulse", "width", "to", what=what)
 
 
 def digitizer_sees_the_rail(pulse: Pulse | None, digitizer: Digitizer | None) -> Iterator[Finding]:
@@ -98,7 +99,7 @@ def digitizer_sees_the_rail(pulse: Pulse | None, digitizer: Digitizer | None) ->
 
 
 def shunt_range_sees_the_current(
-    pulse: Pulse | None, limits: Any, digitizer: Digitizer | None, fixture: Fixture
+    pulse: Pulse | None, digitizer: Digitizer | None, fixture: Fixture
 ) -> Iterator[Finding]:
     if pulse is None or digitizer is None or fixture.shunt is None:
         return
@@ -111,7 +112,8 @@ def shunt_range_sees_the_current(
 
 def source_reaches_the_bias(bias: Bias | None, bias_source: BiasSource | None) -> Iterator[Finding]:
     if bias and bias_source and bias.largest > bias_source.maximum.current:
-        what = f"a bias of {bias.largest:g} A is above the bias source's maximum ({bias_source.maximum.current:g} A); lower it"
+        most = bias_source.maximum.current
+        what = f"a bias of {bias.largest:g} A is above the bias source's maximum ({most:g} A); lower it"
         yield in_plan("bias", "current", "to", what=what)
 
 

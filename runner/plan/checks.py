@@ -7,6 +7,7 @@ A section that may be left out and is, comes as None. The checks stand in `check
 """
 
 import inspect
+import re
 from collections.abc import Iterable, Mapping
 from pathlib import Path
 from typing import Annotated, Any, TypeVar
@@ -48,7 +49,7 @@ def judge(
         document = documents[finding.file]
         if document is not None:
             faults[finding.file].append(document.fault(finding.keys, finding.what))
-    return plan_read, bench_read, [*_in_order(faults["plan"]), *_in_order(faults["bench"])]
+    return plan_read, bench_read, [*in_order(faults["plan"]), *in_order(faults["bench"])]
 
 
 def _asked(check: Check, sections: Sections) -> Iterable[Any]:
@@ -80,7 +81,7 @@ def _readable(document: Document, model: type[BaseModel]) -> dict[str, Any]:
         if name == "instruments" and isinstance(document.value[key], dict):
             found |= _readable_roles(document.value[key])
             continue
-        annotation: Any = Annotated[field.annotation, *field.metadata]
+        annotation: Any = Annotated[field.annotation, *field.metadata, None]  # None: may stand alone
         adapter: TypeAdapter[Any] = TypeAdapter(annotation)
         try:
             found[name] = adapter.validate_python(_numbered(name, document.value[key]))
@@ -115,11 +116,17 @@ def _sections_of(found: dict[str, Any]) -> dict[str, Any]:
     return found
 
 
-def _in_order(faults: list[Fault]) -> list[Fault]:
-    """In the order in which they stand in the file, each once."""
-    return sorted(dict.fromkeys(faults), key=_place)
+def in_order(faults: list[Fault]) -> list[Fault]:
+    """In the order in which they stand in their files, those of the first file first, each once."""
+    files = list(dict.fromkeys(_place(fault)[0] for fault in faults))
+    return sorted(
+        dict.fromkeys(faults), key=lambda fault: (files.index(_place(fault)[0]), *_place(fault)[1:])
+    )
 
 
-def _place(fault: Fault) -> tuple[int, int]:
-    numbers = [int(number) for number in fault.where.rsplit(": ", 1)[0].split(":") if number.isdigit()]
-    return (numbers[-2], numbers[-1]) if len(numbers) >= 2 else (0, 0)
+_WHERE = re.compile(r"(?P<file>.*?):(?P<line>\d+):(?P<column>\d+)(: .*)?", re.DOTALL)
+
+
+def _place(fault: Fault) -> tuple[str, int, int]:
+    match = _WHERE.fullmatch(fault.where)
+    return (match["file"], int(match["line"]), int(match["column"])) if match else (fault.where, 0, 0)

@@ -55,7 +55,9 @@ def charging_energy(voltage: float, resistance: float, inductance: float, time: 
     return voltage * final * (time + decay * math.expm1(-time / decay))
 
 
-def saturated_current(voltage: float, resistance: float, inductance: float, time: float, *, knee: float) -> float:
+def saturated_current(
+    voltage: float, resistance: float, inductance: float, time: float, *, knee: float
+) -> float:
     """Current of a part that has `inductance` up to `knee` [A] and `SATURATED_SHARE` of it beyond [A]."""
     final = voltage / resistance
     if final <= knee:
@@ -93,7 +95,9 @@ def width_forecasts(plan: Plan, fixture: Fixture, part: Part) -> tuple[WidthFore
                 part=part.label,
                 width=width,
                 linear_current=linear,
-                saturated_current=saturated_current(rail, resistance, inductance, width, knee=part.rated_current),
+                saturated_current=saturated_current(
+                    rail, resistance, inductance, width, knee=part.rated_current
+                ),
                 energy=charging_energy(rail, resistance, inductance, width),
                 is_fired=is_fired,
             )

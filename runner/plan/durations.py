@@ -7,6 +7,7 @@ runner sees readings, not the truth, and waits until the readings exclude a larg
 
 import math
 from dataclasses import dataclass
+from itertools import pairwise
 
 from runner.plan.bench_file import Bench
 from runner.plan.plan_file import CurrentSeek, Plan, Pulse
@@ -92,7 +93,9 @@ def _soak_time(plan: Plan, lags: list[float], time_constants: tuple[float, ...])
     soak = plan.temperatures.soak
 
     def is_inside(time: float) -> bool:
-        terms = [lag * math.exp(-time / tau) / len(lags) for lag, tau in zip(lags, time_constants, strict=True)]
+        terms = [
+            lag * math.exp(-time / tau) / len(lags) for lag, tau in zip(lags, time_constants, strict=True)
+        ]
         drift = sum(term / tau for term, tau in zip(terms, time_constants, strict=True))
         return abs(sum(terms)) <= DOUBT * soak.within and abs(drift) <= soak.drift
 
@@ -144,7 +147,7 @@ def _bias_time(plan: Plan, bench: Bench) -> float:
     else:
         steps = (0.0, *bias.current, 0.0)
         count = len(bias.current)
-        travel = sum(abs(after - before) for before, after in zip(steps, steps[1:], strict=False))
+        travel = sum(abs(after - before) for before, after in pairwise(steps))
     readings = LCR_READING + THERMOMETER_READING + CHAMBER_READING + 3 * MESSAGE
     return count * (bias.settle + readings) + travel / source.ramp + _path_time(bench)
 

@@ -34,13 +34,18 @@ def validate(document: Document, model: type[Model]) -> Model:
 
 def faults_of(error: ValidationError, document: Document, model: type[BaseModel]) -> list[Fault]:
     """The faults in ``error``, in the order in which they stand in the file, each place told once."""
-    faults: dict[tuple[str, str], tuple[Place, Fault]] = {}
-    for detail in error.errors(include_url=False):
-        keys = _followed(detail["loc"], document)
-        located = _fault(detail["type"], keys, detail, document, model)
-        faults.setdefault((located.where, located.what), (document.places[_known(keys, document)], located))
-    ordered = sorted(faults.values(), key=lambda found: (found[0].line, found[0].column))
-    return [located for _, located in ordered]
+    details = [(_followed(detail["loc"], document), detail) for detail in error.errors(include_url=False)]
+    found: dict[Fault, Place] = {}
+    for keys, detail in details:
+        # A list whose items are all wrong counts as too short as well; only the items are worth a word.
+        if detail["type"] == "too_short" and any(_is_below(other, keys) for other, _ in details):
+            continue
+        found.setdefault(_fault(detail["type"], keys, detail, document, model), document.nearest(keys))
+    return sorted(found, key=lambda fault: (found[fault].line, found[fault].column))
+
+
+def _is_below(keys: Keys, above: Keys) -> bool:
+    return len(keys) > len(above) and keys[: len(above)] == above
 
 
 def near(word: str, known: Iterable[str]) -> str | None:
@@ -57,7 +62,11 @@ def _fault(kind: str, keys: Keys, detail: Any, document: Document, model: type[B
     written = detail.get("input")
     if kind == "missing":
         # What stands at the place of the missing key is the mapping that lacks it.
-        name = str(detail["loc"][-1])
+        name = detail["loc"][-1]
+        if isinstance(name, int):
+            return document.fault(
+                keys, f"a value is missing; write for example {_example(model, detail['loc'][:-1])}"
+            )
         example = _example(model, detail["loc"])
         what = f"the key '{name}' is missing; add '{name}: {example}'"
         return document.fault(keys, what)
@@ -84,19 +93,14 @@ def _standard(kind: str, written: object, context: Mapping[str, Any], message: s
         return f"{shown} is neither true nor false; write one of them"
     if kind in ("literal_error", "enum"):
         return _choice(shown, written, str(context.get("expected", "")))
-    if kind in ("greater_than", "greater_than_equal", "less_than", "less_than_equal"):
-        word = (
-            kind.replace("_", " ")
-            .replace("equal", "or equal")
-            .replace("greater than or", "at least or")
-            .split(" or ")[0]
-        )
-        bound = next((context[k] for k in ("gt", "ge", "lt", "le") if k in context), "")
-        return f"{shown} must be {word} {bound}; change it"
-    if kind in ("too_short", "too_long"):
-        bound = context.get("min_length", context.get("max_length"))
-        word = "few" if kind == "too_short" else "many"
-        return f"{context.get('actual_length')} values are too {word}; write {'at least' if word == 'few' else 'at most'} {bound}"
+    if kind in ("greater_than", "greater_than_equal"):
+        return f"{shown} is too small; write at least {context.get('ge', context.get('gt'))}"
+    if kind in ("less_than", "less_than_equal"):
+        return f"{shown} is too large; write at most {context.get('le', context.get('lt'))}"
+    if kind == "too_short":
+        return f"{_count(context)} too few; write at least {context.get('min_length')}"
+    if kind == "too_long":
+        return f"{_count(context)} too many; write at most {context.get('max_length')}"
     if kind in ("date_type", "date_parsing", "date_from_datetime_parsing", "date_from_datetime_inexact"):
         return f"{shown} is no date; write it as 2026-03-02"
     if kind in ("union_tag_invalid", "union_tag_not_found"):
@@ -104,6 +108,11 @@ def _standard(kind: str, written: object, context: Mapping[str, Any], message: s
     if kind in ("value_error", "assertion_error"):
         return str(context.get("error", message)).removeprefix("Value error, ")
     return f"{shown}: {message[:1].lower()}{message[1:]}; copy this value from a shipped example"
+
+
+def _count(context: Mapping[str, Any]) -> str:
+    count = int(context.get("actual_length") or 0)
+    return {0: "no value is", 1: "1 value is"}.get(count, f"{count} values are")
 
 
 def _choice(shown: str, written: object, expected: str) -> str:
@@ -139,12 +148,6 @@ def _as_int(step: str | int) -> int | None:
     return int(step) if isinstance(step, str) and step.isdigit() else None
 
 
-def _known(keys: Keys, document: Document) -> Keys:
-    while not document.has(keys):
-        keys = keys[:-1]
-    return keys
-
-
 def _keys_at(model: type[BaseModel], keys: Keys, document: Document) -> list[str]:
     """The keys that a mapping at ``keys`` may have, by the models that could stand there."""
     written: Any = document.value
@@ -172,9 +175,9 @@ def _below(candidates: Iterable[Any], key: str | int) -> Iterator[Any]:
                     yield from _spread(written[0] if written else field.annotation)
         else:
             origin, arguments = typing.get_origin(candidate), typing.get_args(candidate)
-            if origin in (tuple, list) and arguments:
-                yield from _spread(arguments[0])
-            elif origin is not None and len(arguments) == 2:  # a mapping
+            if origin in (tuple, list):
+                yield from _spread(arguments[0]) if isinstance(key, int) else ()
+            elif isinstance(origin, type) and issubclass(origin, Mapping):
                 yield from _spread(arguments[1])
 
 

@@ -110,10 +110,14 @@ def forecast(plan: Plan, bench: Bench) -> Forecast:
         widths=widths,
         saturated_share=SATURATED_SHARE,
         bank_energy=bank_energy,
-        part_energy=max(0.5 * part.inductance * load.current**2 for part, load in zip(plan.parts, loads, strict=True)),
+        part_energy=max(
+            0.5 * part.inductance * load.current**2 for part, load in zip(plan.parts, loads, strict=True)
+        ),
         pulse_energy=max(load.pulse_energy for load in loads),
         mean_power=max(load.mean_power for load in loads),
-        disk_bytes=_disk_bytes(plan, bench, points=len(programme.points), captures=captures, seconds=times.total),
+        disk_bytes=_disk_bytes(
+            plan, bench, points=len(programme.points), captures=captures, seconds=times.total
+        ),
         limits=tuple(_limits(plan, loads, bank_energy=bank_energy, duration=times.total)),
         notes=tuple(_notes(plan)),
     )
@@ -142,7 +146,9 @@ class _Load:
         return _Load(max(pulse, bias), cause, saturated, energy, max(heating, copper))
 
 
-def _limits(plan: Plan, loads: list[_Load], *, bank_energy: float, duration: float) -> Iterator[LimitForecast]:
+def _limits(
+    plan: Plan, loads: list[_Load], *, bank_energy: float, duration: float
+) -> Iterator[LimitForecast]:
     limits, at = plan.limits, plan.temperatures.at_degC
     worst = max(loads, key=lambda load: load.current)
     yield _limit("limits.current", limits.current, worst.current, "A", _current_text(worst))
@@ -152,12 +158,16 @@ def _limits(plan: Plan, loads: list[_Load], *, bank_energy: float, duration: flo
             yield _limit(name, part.limits.current, load.current, "A", _current_text(load))
         if part.limits and part.limits.pulse_energy is not None:
             name = f"parts[{index}].limits.pulse_energy"
-            yield _limit(name, part.limits.pulse_energy, load.pulse_energy, "J", "taken from the bank by one pulse")
+            yield _limit(
+                name, part.limits.pulse_energy, load.pulse_energy, "J", "taken from the bank by one pulse"
+            )
     yield _limit("limits.body", limits.body_degC, max(at), "degC", "hottest leg; heating comes on top")
     if plan.pulse:
         energy = max(load.pulse_energy for load in loads)
         yield _limit("limits.rail", limits.rail, plan.pulse.rail, "V", "on the bank")
-        yield _limit("limits.pulse_energy", limits.pulse_energy, energy, "J", "taken from the bank by one pulse")
+        yield _limit(
+            "limits.pulse_energy", limits.pulse_energy, energy, "J", "taken from the bank by one pulse"
+        )
     low, high = limits.chamber_degC
     yield _limit("limits.chamber[1]", high, max(at), "degC", "hottest leg")
     yield LimitForecast("limits.chamber[0]", low, min(at), "degC", min(at) >= low, "coldest leg")

@@ -68,7 +68,7 @@ def load_plan(path: Path, bench: Path | None = None) -> LoadedPlan:
     Raises:
         InputError: all the faults of both files and between them.
     """
-    from runner.plan.checks import judge
+    from runner.plan.checks import in_order, judge
 
     plan_bytes = read_bytes(path, kind="test plan")
     document = plan_document(plan_bytes, str(path))
@@ -81,7 +81,7 @@ def load_plan(path: Path, bench: Path | None = None) -> LoadedPlan:
     except InputError as error:
         faults += error.faults
     plan_read, bench_read, found = judge(document, bench_document, bench_path)
-    faults = [*found, *faults]
+    faults = in_order([*found, *faults])
     if faults or plan_read is None or bench_read is None or bench_path is None:
         raise InputError(faults)
     return LoadedPlan(plan_read, bench_read, path, bench_path, plan_bytes, bench_bytes)

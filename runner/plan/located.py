@@ -46,13 +46,15 @@ class Document:
 
     def fault(self, keys: Keys, what: str) -> Fault:
         """A fault at the value under ``keys``, or at the nearest value above it that stands in the file."""
-        place, called = self._nearest(keys)
-        return self._fault(place.line, place.column, called, what)
+        place = self.nearest(keys)
+        if place.line != place.key_line:  # a section whose lines stand below its key
+            return self._fault(place.key_line, place.key_column, place.called, what)
+        return self._fault(place.line, place.column, place.called, what)
 
     def fault_at_key(self, keys: Keys, what: str) -> Fault:
         """A fault at the key of the value under ``keys``."""
-        place, called = self._nearest(keys)
-        return self._fault(place.key_line, place.key_column, called, what)
+        place = self.nearest(keys)
+        return self._fault(place.key_line, place.key_column, place.called, what)
 
     def has(self, keys: Keys) -> bool:
         return keys in self.places
@@ -63,14 +65,15 @@ class Document:
         for keys, place in self.places.items():
             if keys[: len(old)] == old:
                 places[new + keys[len(old) :]] = place
+        for length in range(1, len(new)):
+            places.setdefault(new[:length], self.places[old])
         return Document(self.name, value, places)
 
-    def _nearest(self, keys: Keys) -> tuple[Place, str]:
-        known = keys
-        while known not in self.places:
-            known = known[:-1]
-        place = self.places[known]
-        return place, dotted(keys[len(known) :], place.called)
+    def nearest(self, keys: Keys) -> Place:
+        """The place of the value under ``keys``, or of the nearest one above it that stands in the file."""
+        while keys not in self.places:
+            keys = keys[:-1]
+        return self.places[keys]
 
     def _fault(self, line: int, column: int, called: str, what: str) -> Fault:
         where = f"{self.name}:{line}:{column}"
@@ -239,9 +242,11 @@ def _syntax_fault(name: str, error: yaml.MarkedYAMLError) -> Fault:
         )
     if "single document" in (error.context or ""):
         return Fault(where, "a second document begins here ('---'); keep one document in a file")
-    context = f" {error.context}" if error.context and error.context != problem else ""
-    what = f"not readable as YAML{context}: {problem}; check indentation, quotes, brackets and colons just before this place"
-    return Fault(where, what)
+    opened = error.context_mark
+    context = f" {error.context}" if error.context else ""
+    since = f" that begins in line {opened.line + 1}" if opened and mark and opened.line < mark.line else ""
+    advice = "check indentation, quotes, brackets and colons just before this place"
+    return Fault(where, f"not readable as YAML{context}{since}: {problem}; {advice}")
 
 
 def _line_and_column(text: str, position: int) -> tuple[int, int]:

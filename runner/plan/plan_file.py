@@ -23,14 +23,16 @@ from runner.plan.quantity import (
     LENGTH,
     POWER,
     RESISTANCE,
+    SMALL_VOLTAGE,
     TEMPERATURE,
     TIME,
     VOLTAGE,
+    WIDTH,
     Quantity,
 )
 from runner.plan.shapes import FileModel, Whole, Words, Written, fault, one_of
 
-Width = Annotated[float, Quantity(TIME, above=0)]
+Width = Annotated[float, Quantity(WIDTH, above=0)]
 Time = Annotated[float, Quantity(TIME, least=0)]
 Duration = Annotated[float, Quantity(DURATION, above=0)]
 Voltage = Annotated[float, Quantity(VOLTAGE, above=0)]
@@ -266,12 +268,17 @@ class Pulse(FileModel):
     ] = 3
     stop_at: StopAt | None = None
 
+    @property
+    def longest(self) -> float:
+        """Longest width that may be fired [s]."""
+        return self.width[-1] if isinstance(self.width, tuple) else self.width.to
+
 
 class Signal(FileModel):
     """The small signal of the bias method."""
 
     frequency: Annotated[float, Quantity(FREQUENCY, above=0)]
-    level: Annotated[float, Quantity(VOLTAGE, above=0, help="Root mean square.")]
+    level: Annotated[float, Quantity(SMALL_VOLTAGE, above=0, help="Root mean square.")]
 
 
 class Bias(FileModel):
@@ -409,7 +416,7 @@ def evenly(first: float, last: float, count: int) -> tuple[float, ...]:
     """``count`` values from ``first`` to ``last``, both included, evenly spaced."""
     step = (last - first) / (count - 1)
     # Twelve digits: 2 us + 6 steps of a third of a microsecond is 4 us to the user.
-    return tuple(float(f"{first + index * step:.12g}") for index in range(count - 1)) + (last,)
+    return (*(float(f"{first + index * step:.12g}") for index in range(count - 1)), last)
 
 
 def climbing(values: tuple[float, ...], unit: str, scale: float) -> tuple[float, ...]:

@@ -51,9 +51,17 @@ turn = 1 = turn = turns
 
 _PATTERN = re.compile(r"\s*(?P<number>[-+\u2212]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?)\s*(?P<unit>\S.*?)?\s*")
 _SPELLINGS = str.maketrans(
-    {"µ": "u", "μ": "u", "Ω": "ohm", "Ω": "ohm", "℃": "degC", "²": "^2", "³": "^3", "·": "*"}
+    {
+        "\N{MICRO SIGN}": "u",
+        "\N{GREEK SMALL LETTER MU}": "u",
+        "\N{GREEK CAPITAL LETTER OMEGA}": "ohm",
+        "\N{OHM SIGN}": "ohm",
+        "\N{DEGREE CELSIUS}": "degC",
+        "\N{SUPERSCRIPT TWO}": "^2",
+        "\N{MIDDLE DOT}": "*",
+    }
 )
-JSON_PATTERN = r"^\s*[-+]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][-+]?[0-9]+)?\s*\S.*$"
+JSON_PATTERN = r"^\s*[-+]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][-+]?[0-9]+)?(\s*[^\s0-9.eE+,-].*|\s+1/.*)$"
 
 
 @dataclass(frozen=True, slots=True)
@@ -64,10 +72,18 @@ class Kind:
     unit: str
     example: str
 
+    @property
+    def is_plain(self) -> bool:
+        """Whether users write it in its own unit, so that a bare number leaves little doubt about what was meant."""
+        return self.example.endswith(f" {self.unit}")
 
-TIME = Kind("a time", "s", "40 us")
+
+TIME = Kind("a time", "s", "500 ms")
+WIDTH = Kind("a time", "s", "40 us")
+SKEW = Kind("a time", "s", "12 ns")
 DURATION = Kind("a time", "s", "5 min")
 VOLTAGE = Kind("a voltage", "V", "12 V")
+SMALL_VOLTAGE = Kind("a voltage", "V", "50 mV")
 CURRENT = Kind("a current", "A", "6 A")
 INDUCTANCE = Kind("an inductance", "H", "22 uH")
 RESISTANCE = Kind("a resistance", "ohm", "18 mohm")
@@ -128,22 +144,17 @@ class Quantity:
         return value
 
     def _check(self, value: float, written: object) -> None:
+        broken = None
         if self.above is not None and not value > self.above:
-            raise ValueError(
-                f"{_shown(written)} is not above {self._bound(self.above)}; write for example '{self.kind.example}'"
-            )
-        if self.least is not None and not value >= self.least:
-            raise ValueError(
-                f"{_shown(written)} is below {self._bound(self.least)}; write for example '{self.kind.example}'"
-            )
-        if self.below is not None and not value < self.below:
-            raise ValueError(
-                f"{_shown(written)} is not below {self._bound(self.below)}; write for example '{self.kind.example}'"
-            )
-        if self.most is not None and not value <= self.most:
-            raise ValueError(
-                f"{_shown(written)} is above {self._bound(self.most)}; write for example '{self.kind.example}'"
-            )
+            broken = f"not above {self._bound(self.above)}"
+        elif self.least is not None and not value >= self.least:
+            broken = f"below {self._bound(self.least)}"
+        elif self.below is not None and not value < self.below:
+            broken = f"not below {self._bound(self.below)}"
+        elif self.most is not None and not value <= self.most:
+            broken = f"above {self._bound(self.most)}"
+        if broken:
+            raise ValueError(f"{_shown(written)} is {broken}; write for example '{self.kind.example}'")
 
     def _bound(self, bound: float) -> str:
         if self.kind is FACTOR:
@@ -193,7 +204,9 @@ def read_quantity(written: object, kind: Kind) -> float:
     Raises:
         ValueError: no unit, another dimension, an unknown unit or no number; the text says what to write.
     """
-    if isinstance(written, bool) or written is None or isinstance(written, (list, dict)):
+    if written is None:
+        raise ValueError(f"nothing stands here; write {kind.name}, for example '{kind.example}'")
+    if isinstance(written, (bool, list, dict)):
         raise ValueError(f"{_shown(written)} is no value; write {kind.name}, for example '{kind.example}'")
     if isinstance(written, (int, float)):
         if not math.isfinite(written):
@@ -206,20 +219,15 @@ def read_quantity(written: object, kind: Kind) -> float:
     return _read_text(str(written), kind)
 
 
-def read_any(written: str) -> tuple[float, bool]:
-    """The SI value of a text with any unit, and whether it is a temperature (then in degC).
-
-    Raises:
-        ValueError: the text has no number with a unit that is known here.
-    """
-    match = _PATTERN.fullmatch(written)
-    if match is None or match["unit"] is None:
-        raise ValueError(f"{written!r} is no number with a unit")
-    unit = _parsed(match["unit"])
-    if str(unit) in ("degree_Celsius", "degree_Fahrenheit"):
-        return read_quantity(written, TEMPERATURE), True
-    base = _registry().Quantity(float(match["number"].replace("\u2212", "-")), unit).to_base_units()
-    return float(f"{base.magnitude:.15g}"), False
+def shown(value: float, unit: str) -> str:
+    """A value as users write it, with a prefix where one helps: ``shown(2e-5, "s")`` is ``20 us``."""
+    if unit in ("degC", "K", "%") or value == 0 or not math.isfinite(value):
+        return f"{value:.4g} {unit}"
+    thousands = max(-3, min(2, math.floor(math.log10(abs(value)) / 3 + 1e-9)))
+    if unit == "s":
+        thousands = min(thousands, 0)
+    prefix = {-3: "n", -2: "u", -1: "m", 0: "", 1: "k", 2: "M"}[thousands]
+    return f"{value / 1000.0**thousands:.4g} {prefix}{unit}"
 
 
 def _in_unit(number: float, unit_text: str, text: str, kind: Kind) -> float:
@@ -248,7 +256,7 @@ def _parsed(text: str) -> "pint.Unit":
     import pint
 
     spelled = text.translate(_SPELLINGS).replace("°C", "degC").replace("°F", "degF").replace("%", "percent")
-    if re.search(r"[^A-Za-z0-9_ ^*/().-]", spelled) or re.match(r"[\d-]", spelled):
+    if re.search(r"[^A-Za-z0-9_ ^*/().-]", spelled) or re.match(r"(?!1/)[\d-]", spelled):
         raise ValueError(f"{text!r} is no unit")
     try:
         return _registry().parse_units(spelled)
@@ -298,8 +306,15 @@ def _kind_named(unit: "pint.Unit") -> str:
 
 
 def _bare(text: str, number: str, kind: Kind) -> str:
+    value = float(number)
+    if kind is FRACTION and 0 < value < 1:
+        return f"{text} has no unit; write '{value * 100:g} %'"
     unit = kind.example.split(" ", 1)[1]
-    return f"{text} has no unit; write '{number} {unit}'"
+    if kind.is_plain or kind is FRACTION:
+        return f"{text} has no unit; write '{number} {unit}'"
+    return (
+        f"{text} has no unit; write '{number} {kind.unit}' if that is meant, or for example '{kind.example}'"
+    )
 
 
 def _unreadable(text: str, kind: Kind) -> str:

@@ -18,7 +18,11 @@ def schemas() -> dict[str, dict[str, Any]]:
     plan["properties"]["part"] = {"$ref": "#/$defs/Part", "description": "The one part, instead of 'parts'."}
     plan["required"] = [key for key in plan["required"] if key != "parts"]
     plan["oneOf"] = [{"required": ["part"]}, {"required": ["parts"]}]
-    return {"plan": plan, "bench": _schema(Bench, "Bench"), "captures": _schema(CapturesFile, "Captures file")}
+    return {
+        "plan": plan,
+        "bench": _schema(Bench, "Bench"),
+        "captures": _schema(CapturesFile, "Captures file"),
+    }
 
 
 def _schema(model: Any, title: str) -> dict[str, Any]:

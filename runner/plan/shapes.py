@@ -38,8 +38,9 @@ class Written:
 
 def one_of(choose: Callable[[Any], str], **shapes: Any) -> Any:
     """A union whose member is chosen by ``choose`` from what is written, so that only its faults are shown."""
-    union: Any = Union[tuple(Annotated[shape, Tag(tag)] for tag, shape in shapes.items())]  # noqa: UP007
-    return Annotated[union, Discriminator(choose)]
+    # Tags appear in the path of an error; angle brackets keep them apart from keys that users write.
+    union: Any = Union[tuple(Annotated[shape, Tag(f"<{name}>")] for name, shape in shapes.items())]  # noqa: UP007
+    return Annotated[union, Discriminator(lambda written: f"<{choose(written)}>")]
 
 
 def fault(what: str) -> PydanticCustomError:
