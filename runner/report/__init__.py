@@ -1,7 +1,8 @@
-"""The report: takes a run that is on disk and writes one page a colleague can read, with its pictures and numbers.
+"""The report: takes a run that is on disk and writes one page a colleague can read, with its pictures and
+numbers.
 
-It knows how results are shown, never how they were measured or computed: whatever it says stands in the run's record and
-in its result.
+It knows how results are shown, never how they were measured or computed: whatever it says stands in the run's
+record and in its result.
 """
 
 from runner.report.page import write_report

@@ -1,8 +1,9 @@
 """The raw captures of chosen points: what the digitizer saw, before anybody made numbers of it.
 
-Of each part three points are shown at up to three temperatures: the shortest pulse, the one whose peak comes nearest to
-the saturation current, and the longest; at the coldest, the hottest and the temperature nearest to 25 °C. Only the
-first repeat is drawn, thinned so that spikes survive: of each bucket of samples the extremes of both channels stay.
+Of each part three points are shown at up to three temperatures: the shortest pulse, the one whose peak comes
+nearest to the saturation current, and the longest; at the coldest, the hottest and the temperature nearest to
+25 °C. Only the first repeat is drawn, thinned so that spikes survive: of each bucket of samples the extremes
+of both channels stay.
 """
 
 import math
@@ -57,9 +58,8 @@ def draw_captures(run: Run, part: PartFacts, knees: Mapping[int, float]) -> Pict
     names = dict(zip(temperatures, temperature_names(temperatures), strict=True))
     times = scale_for([float(t) for trace in traces for t in trace.time[[0, -1]]], "s")
     currents = scale_for([float(np.abs(trace.current).max()) for trace in traces], "A")
-    figure, axes = new_figure(
-        4.6, rows=2, columns=len(places), right=0.985, top=0.90, wspace=0.06, hspace=0.08
-    )
+    layout = {"right": 0.985, "top": 0.90, "wspace": 0.06, "hspace": 0.08}
+    figure, axes = new_figure(4.6, rows=2, columns=len(places), layout=layout)
     for trace in traces:
         column = places.index(trace.place)
         pen = {
@@ -147,7 +147,9 @@ def _chosen_legs(temperatures: Mapping[int, float]) -> list[int]:
 
 
 def _chosen_points(points: Mapping[str, np.ndarray], rows: IntArray, knee: float) -> list[tuple[int, int]]:
-    """(place, row) of the shortest pulse, the one nearest to the knee, and the longest, without repeating one."""
+    """(place, row) of the shortest pulse, the one nearest to the knee, and the longest, without repeating
+    one.
+    """
     width = points["pulse_width_setpoint"][rows]
     peak = points["peak_current"][rows]
     # Captures taken by hand have no width that anybody set; the peak current orders them as well.

@@ -7,6 +7,7 @@ import matplotlib
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.colors import ListedColormap
+from matplotlib.lines import Line2D
 from matplotlib.ticker import MaxNLocator
 
 from runner.arrays import FloatArray
@@ -39,22 +40,20 @@ def draw_curves(facts: Facts, part: PartFacts, method: MethodFacts) -> Picture |
     figure, (axes,) = new_figure(3.9)
     colours = temperature_colours(family.temperature_degC)
     names = temperature_names(family.temperature_degC)
-    ends, shown = [], []
+    lines: list[Line2D] = []
     for row, colour in enumerate(colours):
         seen = np.flatnonzero(np.isfinite(family.inductance[row]))
         if seen.size == 0:
             continue
-        thin = seen[:: max(1, seen.size // MOST_SAMPLES)]
-        current = currents.of(family.current[thin])
-        inductance = inductances.of(family.inductance[row, thin])
-        margin = facts.coverage_factor * inductances.of(family.errors[row, thin])
+        kept = np.union1d(seen[:: max(1, seen.size // MOST_SAMPLES)], seen[-1:])
+        current = currents.of(family.current[kept])
+        inductance = inductances.of(family.inductance[row, kept])
+        margin = facts.coverage_factor * inductances.of(family.errors[row, kept])
         axes.fill_between(
             current, inductance - margin, inductance + margin, color=colour, alpha=0.22, linewidth=0
         )
-        axes.plot(current, inductance, color=colour, linestyle=LINE_STYLES[row % len(LINE_STYLES)],
-                  marker=_marker(seen.size), markersize=3, gid="curve")  # fmt: skip
-        ends.append((float(current[-1]), float(inductance[-1])))
-        shown.append(row)
+        lines += axes.plot(current, inductance, color=colour, linestyle=LINE_STYLES[row % len(LINE_STYLES)],
+                           marker=_marker(method.name, seen.size), markersize=3, label=names[row])  # fmt: skip
     axes.set_ylim(bottom=0)
     axes.set_xlim(
         0, float(currents.of(family.current[np.isfinite(family.inductance).any(axis=0)][-1])) * 1.02
@@ -63,7 +62,7 @@ def draw_curves(facts: Facts, part: PartFacts, method: MethodFacts) -> Picture |
     axes.set_ylabel(f"{INDUCTANCE[method.name].capitalize()} ({inductances.unit})")
     _mark_knees(axes, family, method, colours, currents, inductances)
     _mark_rated(axes, part, currents)
-    _name_lines(axes, ends, [names[row] for row in shown], [colours[row] for row in shown])
+    _name_lines(axes, lines)
     return Picture(
         name=f"{part.slug}_{method.name}_curves",
         caption=_curves_caption(facts, part, method),
@@ -79,7 +78,7 @@ def draw_surface(part: PartFacts, method: MethodFacts) -> Picture | None:
         return None
     currents, inductances = _scales(method.family)
     current, temperature, inductance = currents.of(mesh[0]), mesh[1], inductances.of(mesh[2])
-    figure, (axes,) = new_figure(3.5, right=0.86, top=0.97)
+    figure, (axes,) = new_figure(3.5, layout={"right": 0.86, "top": 0.97})
     axes.grid(False)
     axes.set_facecolor("#f3f3f3")
     levels = MaxNLocator(30).tick_values(float(inductance.min()), float(inductance.max()))
@@ -111,10 +110,12 @@ def draw_surface(part: PartFacts, method: MethodFacts) -> Picture | None:
 
 
 def _mesh(family: Family) -> tuple[FloatArray, FloatArray, FloatArray] | None:
-    """Current, temperature and inductance, each [m, SAMPLES], on a net that spans what was measured and no more.
+    """Current, temperature and inductance, each [m, SAMPLES], on a net that spans what was measured and no
+    more.
 
-    Every row runs from the first to the last current measured at its temperature, so that the map ends where the
-    measurement does, without steps. None where fewer than two different temperatures have two currents each.
+    Every row runs from the first to the last current measured at its temperature, so that the map ends where
+    the measurement does, without steps. None where fewer than two different temperatures have two currents
+    each.
     """
     rows = []
     for temperature, inductance in zip(family.temperature_degC, family.inductance, strict=True):
@@ -135,7 +136,9 @@ def _mesh(family: Family) -> tuple[FloatArray, FloatArray, FloatArray] | None:
 
 
 def _trace_knee(axes: Axes, method: MethodFacts, drop: float, currents: Scale, place: int) -> None:
-    """The saturation current as a dashed line on the map, its drop written on it; ``place`` staggers the labels."""
+    """The saturation current as a dashed line on the map, its drop written on it; ``place`` staggers the
+    labels.
+    """
     reached = [knee for knee in method.knees_at(drop) if knee.is_reached]
     if len(reached) < 2:
         return
@@ -147,14 +150,16 @@ def _trace_knee(axes: Axes, method: MethodFacts, drop: float, currents: Scale, p
                   fontsize=7.5, bbox={"facecolor": "white", "edgecolor": "none", "alpha": 0.85, "pad": 1.2})  # fmt: skip
 
 
-def _name_lines(axes: Axes, ends: list[tuple[float, float]], texts: list[str], colours: list[Any]) -> None:
-    """Labels beside the ends where the lines end together, else a list in the empty corner below the curves."""
-    reach = [x for x, _ in ends]
+def _name_lines(axes: Axes, lines: list[Line2D]) -> None:
+    """Labels beside the ends where the lines end together, else a list in the corner that L(I) leaves empty."""
+    ends = [(float(x), float(y)) for x, y in (np.asarray(line.get_xydata())[-1] for line in lines)]
+    reach = [current for current, _ in ends]
     if min(reach) > 0.97 * max(reach):
-        label_ends(axes, ends, texts, colours)
+        label_ends(
+            axes, ends, [str(line.get_label()) for line in lines], [line.get_color() for line in lines]
+        )
         return
-    lines = [line for line in axes.get_lines() if line.get_gid() == "curve"]
-    axes.legend(lines[::-1], texts[::-1], loc="lower left", frameon=False, fontsize=8, handlelength=3.2,
+    axes.legend(handles=lines[::-1], loc="lower left", frameon=False, fontsize=8, handlelength=3.2,
                 labelspacing=0.35, borderaxespad=0.8)  # fmt: skip
 
 
@@ -163,9 +168,9 @@ def _scales(family: Family) -> tuple[Scale, Scale]:
     return scale_for(measured.tolist(), "A"), scale_for(family.inductance.ravel().tolist(), "H")
 
 
-def _marker(samples: int) -> str:
-    # A bias curve has a point where the source stood; a pulse curve is a fit, and marks on it would feign readings.
-    return "o" if samples <= 60 else ""
+def _marker(method: str, samples: int) -> str:
+    # A bias curve stands on the currents that were set; a pulse curve is a fit, and marks would feign readings.
+    return "o" if method == "bias" and samples <= 60 else ""
 
 
 def _mark_knees(

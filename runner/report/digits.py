@@ -1,9 +1,9 @@
 """Numbers as a practitioner writes them: SI prefixes, and as many digits as the uncertainty supports.
 
-Everything here is text in, or numbers in and text out. The rule for digits is one: the uncertainty is given to two
-significant digits and the value is rounded to the same place (GUM 7.2.6). One prefix serves a whole column, so that
-numbers under each other can be compared by eye. The minus sign is the typographic one, because the result is read by
-people; machines read the CSV files, which are written elsewhere.
+Everything here is text in, or numbers in and text out. The rule for digits is one: the uncertainty is given
+to two significant digits and the value is rounded to the same place (GUM 7.2.6). One prefix serves a whole
+column, so that numbers under each other can be compared by eye. The minus sign is the typographic one,
+because the result is read by people; machines read the CSV files, which are written elsewhere.
 """
 
 import math
@@ -20,8 +20,8 @@ MINUS = "\N{MINUS SIGN}"
 # SI Brochure, 9th edition, table 7; without those that no bench needs.
 _PREFIXES = {-15: "f", -12: "p", -9: "n", -6: "µ", -3: "m", 0: "", 3: "k", 6: "M", 9: "G"}
 _SYMBOLS = {"ohm": "Ω", "degC": "°C", "1": ""}
-# GUM 7.2.6 rounds 10.47 up to 11 but 28.05 down to 28: rounding to the nearest is used unless it would take more than
-# this fraction off the uncertainty, which happens only for leading digits 10 to 19.
+# GUM 7.2.6 rounds 10.47 up to 11 but 28.05 down to 28: rounding to the nearest is used unless it would take
+# more than this fraction off the uncertainty, which happens only for leading digits 10 to 19.
 _LARGEST_UNDERSTATEMENT = 0.025
 
 
@@ -71,13 +71,14 @@ def round_uncertainty(uncertainty: float) -> tuple[float, int]:
         uncertainty: positive and finite, in any unit.
 
     Returns:
-        The rounded uncertainty and the number of decimal places that belongs to it (negative: tens, hundreds).
+        The rounded uncertainty and the number of decimal places that belongs to it (negative: tens,
+        hundreds).
 
     Raises:
         ValueError: ``uncertainty`` is not a positive finite number.
 
-    Source: GUM (JCGM 100:2008) 7.2.6: at most two significant digits; rounding up where rounding to the nearest would
-    noticeably understate.
+    Source: GUM (JCGM 100:2008) 7.2.6: at most two significant digits; rounding up where rounding to the
+        nearest would noticeably understate.
     """
     if not (math.isfinite(uncertainty) and uncertainty > 0):
         raise ValueError(f"an uncertainty must be positive and finite, got {uncertainty!r}")

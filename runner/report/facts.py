@@ -1,8 +1,9 @@
 """What the report knows: a run and its result, sorted by part and method, as plain frozen values.
 
-This is the file that reads a `Run`'s result; pictures, tables and sentences start from what stands here. Whatever is
-missing (no extraction, one method only, a value the extraction could not give) becomes an empty tuple or NaN, never
-an error: a report of a night that went wrong is needed more than one of a night that went well.
+This is the file that reads a `Run`'s result; pictures, tables and sentences start from what stands here.
+Whatever is missing (no extraction, one method only, a value the extraction could not give) becomes an empty
+tuple or NaN, never an error: a report of a night that went wrong is needed more than one of a night that went
+well.
 """
 
 import math
@@ -40,7 +41,9 @@ class AtTemperature:
 
 @dataclass(frozen=True, slots=True)
 class Knee:
-    """A saturation current. Not reached: the value and the upper end are NaN, ``low`` is the largest current seen."""
+    """A saturation current. Not reached: the value and the upper end are NaN, ``low`` is the largest current
+    seen.
+    """
 
     temperature_degC: float
     drop: float
@@ -55,8 +58,8 @@ class Knee:
 
 @dataclass(frozen=True, slots=True)
 class Family:
-    """L(I) at each temperature: ``inductance`` and its standard uncertainty ``errors`` are [m, n], NaN outside what
-    was measured; ``temperature_degC`` is [m], ascending, and ``current`` [n]."""
+    """L(I) at each temperature: ``inductance`` and its standard uncertainty ``errors`` are [m, n], NaN
+    outside what was measured; ``temperature_degC`` is [m], ascending, and ``current`` [n]."""
 
     temperature_degC: FloatArray
     current: FloatArray
@@ -122,7 +125,9 @@ class Facts:
 
     @property
     def coverage_factor(self) -> float:
-        """What one standard uncertainty is multiplied by for a band of the stated coverage (normal distribution)."""
+        """What one standard uncertainty is multiplied by for a band of the stated coverage (normal
+        distribution).
+        """
         from scipy.special import ndtri  # scipy.stats would cost half a second of importing
 
         return float(ndtri((1 + self.coverage) / 2))

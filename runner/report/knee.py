@@ -1,4 +1,6 @@
-"""Pictures of what changes with temperature: the saturation current against the rated one, and the winding."""
+"""Pictures of what changes with temperature: the saturation current against the rated one, and the
+winding.
+"""
 
 import math
 from collections.abc import Sequence
@@ -14,14 +16,16 @@ _STYLE = {"pulse": ("-", "full"), "bias": ((0, (4, 2)), "none")}
 
 
 def draw_knees(facts: Facts, part: PartFacts) -> Picture | None:
-    """Isat(T) for each drop and method, against the rated current; None when there is no saturation current."""
+    """Isat(T) for each drop and method, against the rated current; None when there is no saturation
+    current.
+    """
     methods = [method for method in part.methods if method.knees]
-    if not methods:
+    if len({knee.temperature_degC for method in methods for knee in method.knees}) < 2:
         return None
     drops = sorted({drop for method in methods for drop in method.drops})
     everything = [_shown(knee) for method in methods for knee in method.knees]
     currents = scale_for([*everything, part.rated_current], "A")
-    figure, (axes,) = new_figure(3.7, right=0.83)
+    figure, (axes,) = new_figure(3.7, layout={"right": 0.83})
     ends: list[tuple[float, float]] = []
     texts: list[str] = []
     colours: list[str] = []
@@ -52,7 +56,9 @@ def draw_knees(facts: Facts, part: PartFacts) -> Picture | None:
 
 
 def draw_overview(facts: Facts, drop: float) -> Picture | None:
-    """All parts together: saturation current over rated current at one drop; None for fewer than two such parts."""
+    """All parts together: saturation current over rated current at one drop; None for fewer than two such
+    parts.
+    """
     lines = []
     for part in facts.parts:
         method = next((m for m in part.methods if any(knee.is_reached for knee in m.knees_at(drop))), None)
@@ -60,7 +66,7 @@ def draw_overview(facts: Facts, drop: float) -> Picture | None:
             lines.append((part, method))
     if len(lines) < 2:
         return None
-    figure, (axes,) = new_figure(3.4, right=0.80)
+    figure, (axes,) = new_figure(3.4, layout={"right": 0.80})
     ends, rows = [], []
     for k, (part, method) in enumerate(lines):
         knees = [knee for knee in method.knees_at(drop) if knee.is_reached]
@@ -76,7 +82,7 @@ def draw_overview(facts: Facts, drop: float) -> Picture | None:
     axes.axhline(1.0, color=RATED, linewidth=0.9, linestyle=(0, (1, 2)))
     axes.annotate("rated current", (0.005, 1.0), xycoords=axes.get_yaxis_transform(), xytext=(0, 3),
                   textcoords="offset points", color=RATED, fontsize=8)  # fmt: skip
-    axes.set_ylim(bottom=0)
+    axes.set_ylim(*_limits([1.0, *(float(row[4]) for row in rows)]))
     axes.set_xlabel("Temperature of the part (°C)")
     axes.set_ylabel("Saturation current / rated current (1)")
     colours = [DROP_COLOURS[k % len(DROP_COLOURS)] for k in range(len(lines))]
@@ -98,7 +104,7 @@ def draw_resistance(facts: Facts, part: PartFacts) -> Picture | None:
     if not lines:
         return None
     scale = scale_for([entry.estimate.value for _, entries in lines for entry in entries], "ohm")
-    figure, (axes,) = new_figure(2.7, right=0.90)
+    figure, (axes,) = new_figure(2.7, layout={"right": 0.90})
     ends = []
     for k, (name, entries) in enumerate(lines):
         known = [entry for entry in entries if math.isfinite(entry.estimate.value)]

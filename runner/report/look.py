@@ -1,14 +1,14 @@
 """How every picture of the report looks: colours, sizes, axes, and labels written beside the lines they name.
 
-Colours carry meaning in two ways only. Temperature is ordered, so it takes a perceptually uniform map from dark blue
-(cold) to orange (hot), cut before its palest end so that every line is seen on white paper. Drops are names, so
-they take the palette of Okabe and Ito (https://jfly.uni-koeln.de/color/, 2002), made for colour-blind readers. Nothing rests on
-colour alone: a line style, a marker and a direct label say the same.
+Colours carry meaning in two ways only. Temperature is ordered, so it takes a perceptually uniform map from
+dark blue (cold) to orange (hot), cut before its palest end so that every line is seen on white paper. Drops
+are names, so they take the palette of Okabe and Ito (https://jfly.uni-koeln.de/color/, 2002), made for
+colour-blind readers. Nothing rests on colour alone: a line style, a marker and a direct label say the same.
 
 Figures are made through the object interface: no pyplot, no state shared between figures or threads.
 """
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 import matplotlib
@@ -29,7 +29,7 @@ DROP_COLOURS = ("#0072B2", "#D55E00", "#009E73", "#CC79A7", "#56B4E9", "#E69F00"
 DROP_MARKERS = ("o", "s", "^", "D", "v", "P")
 LINE_STYLES: tuple[Any, ...] = ("-", (0, (6, 1.5)), (0, (4, 1.2, 1, 1.2)), (0, (2, 1)))
 
-_SETTINGS = {
+_SETTINGS: Any = {
     "font.family": "DejaVu Sans",  # comes with matplotlib, so pages do not depend on the fonts of a machine
     "font.size": 8.5,
     "axes.labelsize": 8.5,
@@ -46,6 +46,7 @@ _SETTINGS = {
     "grid.color": GRID,
     "grid.linewidth": 0.6,
     "lines.linewidth": 1.5,
+    "text.parse_math": False,  # a dollar sign in a part's label is a dollar sign
     "svg.fonttype": "path",
     "svg.hashsalt": "kneemap",  # else the identifiers inside an SVG differ from run to run
     "path.simplify_threshold": 0.3,
@@ -63,7 +64,7 @@ def new_figure(
     rows: int = 1,
     columns: int = 1,
     row_heights: Sequence[float] | None = None,
-    **layout: float,
+    layout: Mapping[str, float] | None = None,
 ) -> tuple[Figure, list[Axes]]:
     """A figure of the page's width with plain axes.
 
@@ -71,7 +72,8 @@ def new_figure(
         height: inch.
         rows, columns: of axes, which share x in a column and y in a row.
         row_heights: their ratios, top first; equal when left out.
-        layout: margins for `Figure.subplots_adjust`. They are fixed numbers because the automatic layouts cost
+        layout: margins for `Figure.subplots_adjust`. They are fixed numbers because the automatic layouts
+            cost
             more time than all the drawing.
 
     Returns:
@@ -82,8 +84,8 @@ def new_figure(
     grid = figure.subplots(
         rows, columns, squeeze=False, sharex="col", sharey="row", gridspec_kw={"height_ratios": row_heights}
     )
-    margins = {"left": 0.085, "right": 0.87, "bottom": 0.42 / height, "top": 1 - 0.1 / height, **layout}
-    figure.subplots_adjust(**margins)
+    margins = {"left": 0.085, "right": 0.87, "bottom": 0.42 / height, "top": 1 - 0.1 / height}
+    figure.subplots_adjust(**{**margins, **(layout or {})})
     axes = [axis for row in grid for axis in row]
     for axis in axes:
         axis.spines[["top", "right"]].set_visible(False)
@@ -120,7 +122,8 @@ def spread(wanted: Sequence[float], gap: float) -> list[float]:
         Positions in the order given; their order along the axis is that of ``wanted``.
     """
     order = sorted(range(len(wanted)), key=lambda k: wanted[k])
-    # Labels that would overlap form a block, whose members stand `gap` apart and, on average, where they want to.
+    # Labels that would overlap form a block, whose members stand `gap` apart and, on average, where they want
+    # to.
     blocks: list[list[float]] = []
     for k in order:
         blocks.append([wanted[k]])

@@ -1,7 +1,9 @@
-"""The temperature history of the run: air, parts and set-point, with the legs, the events and the doubtful points.
+"""The temperature history of the run: air, parts and set-point, with the legs, the events and the doubtful
+points.
 
-The history is drawn over time since the start, because a night crosses midnight and what people ask is "how long did
-it take". Events are numbered in the picture and told in words, under the same numbers, in a table below it.
+The history is drawn over time since the start, because a night crosses midnight and what people ask is "how
+long did it take". Events are numbered in the picture and told in words, under the same numbers, in a table
+below it.
 """
 
 import math
@@ -21,8 +23,9 @@ from runner.report.picture import Picture, Sheet
 HOUR = 3600.0
 MOST_SAMPLES = 1200  # of a line
 MOST_NUMBERS = 40  # of events told in the table; a worse night is read in the record
-# Information that a reader of the morning wants to see; the rest of it is the ordinary course of the run.
-NOTABLE = ("stop", "resume", "retry", "reconnect", "restart", "skip", "give", "session", "watchdog", "limit")
+# Information that a reader of the morning wants to see; the rest of it is the ordinary course of the run. Flags have a
+# lane and a table of their own.
+NOTABLE = frozenset({"fault", "limit", "part_end", "request", "resumed", "retry", "skip", "stop", "watchdog"})
 _LANES = ("error", "warning", "info", "flagged")
 _LANE_TITLES = {"error": "errors", "warning": "warnings", "info": "notes", "flagged": "flagged points"}
 _LANE_LOOK = {
@@ -64,7 +67,7 @@ def marks(run: Run) -> tuple[Mark, ...]:
     told: list[Mark] = []
     for event in sorted(run.events, key=lambda e: e.t):
         level = event.level if event.level in ("warning", "error") else "info"
-        if level == "info" and not any(word in event.kind.lower() for word in NOTABLE):
+        if event.kind == "flag" or (level == "info" and event.kind not in NOTABLE):
             continue
         leg = _leg_at(run, event.t)
         last = told[-1] if told else None
@@ -76,7 +79,9 @@ def marks(run: Run) -> tuple[Mark, ...]:
 
 
 def draw_night(run: Run, told: Sequence[Mark]) -> Picture | None:
-    """Temperatures over the time since the start; None when neither the air nor a part was followed in time."""
+    """Temperatures over the time since the start; None when neither the air nor a part was followed in
+    time.
+    """
     lines = _lines(run)
     legs = [leg for leg in run.legs if math.isfinite(leg.start)]
     if not lines:
@@ -89,11 +94,14 @@ def draw_night(run: Run, told: Sequence[Mark]) -> Picture | None:
     margins = {"top": 0.90, "right": 0.89, "left": 0.125}
     if lanes:
         figure, (axes, strip) = new_figure(
-            3.4 + 0.22 * len(lanes), rows=2, row_heights=(12, 0.9 * len(lanes)), hspace=0.05, **margins
+            3.4 + 0.22 * len(lanes),
+            rows=2,
+            row_heights=(12, 0.9 * len(lanes)),
+            layout={**margins, "hspace": 0.05},
         )
         _draw_strip(strip, told, lanes, flagged)
     else:
-        figure, (axes,) = new_figure(3.4, **margins)
+        figure, (axes,) = new_figure(3.4, layout=margins)
         strip = axes
     end = max([run.end - run.start, *(float(line.time[-1]) for line in lines)])
     _draw_legs(axes, legs, end)
@@ -117,7 +125,9 @@ def draw_night(run: Run, told: Sequence[Mark]) -> Picture | None:
 
 
 def _lines(run: Run) -> list[Line]:
-    """What was followed in time: the air, then each part by its log, or by its points where there is no log."""
+    """What was followed in time: the air, then each part by its log, or by its points where there is no
+    log.
+    """
     lines = []
     time, air = _thinned(*run.chamber_log)
     if time.size:

@@ -1,12 +1,12 @@
 """The page: everything gathered, drawn, written into tables, and set into one template.
 
-`write_report` is the only function of this room that touches the disk, apart from saving pictures: it writes into the
-folder ``report/`` of the run, and replaces what an earlier report left there under the same names. The page holds its
-pictures and its style; it asks the network for nothing. Nothing on it depends on the time at which it was made, so the same
-run gives the same page.
+`write_report` is the only function of this room that touches the disk, apart from saving pictures: it writes
+into the folder ``report/`` of the run, and replaces what an earlier report left there under the same names.
+The page holds its pictures and its style; it asks the network for nothing. Nothing on it depends on the time
+at which it was made, so the same run gives the same page.
 """
 
-import math
+import re
 from collections.abc import Iterator, Mapping
 from datetime import UTC, datetime
 from pathlib import Path
@@ -14,18 +14,20 @@ from typing import Any
 
 import jinja2
 import numpy as np
+from markupsafe import Markup, escape
 
 from runner.errors import InputError
 from runner.record import Run, open_run
 from runner.report import look
 from runner.report.captures import draw_captures
 from runner.report.curves import draw_curves, draw_surface
-from runner.report.digits import NOTHING, celsius, duration, fixed, quantity, short
+from runner.report.digits import NOTHING, duration, fixed, quantity, short
+from runner.report.doubts import doubts
 from runner.report.facts import INDUCTANCE, METHOD_TITLES, Facts, MethodFacts, PartFacts, gather
 from runner.report.knee import draw_knees, draw_overview, draw_resistance
 from runner.report.night import MOST_NUMBERS, Mark, draw_night, marks
 from runner.report.picture import Pasted, Picture, save
-from runner.report.tables import Table, budget_table, flag_rows, knee_tables, temperature_table
+from runner.report.tables import Table, budget_table, knee_tables, temperature_table
 from runner.report.words import (
     headline,
     headline_drop,
@@ -96,15 +98,19 @@ def _context(run: Run, into: Path) -> dict[str, Any]:
         "parts": [_part(run, facts, part, paste) for part in facts.parts],
         "together": _together(facts, paste),
         "tested": [(what, hold_together(how)) for what, how in plan_in_words(plan)],
-        "methods": [_METHOD_WORDS[name] for name in _METHOD_WORDS if name in plan or _has(facts, name)],
+        "methods": [
+            _subscripts(_METHOD_WORDS[name]) for name in _METHOD_WORDS if name in plan or _has(facts, name)
+        ],
         "cautions": CAUTIONS,
         "run_in_time": _run_in_time(run),
         "night": paste(draw_night(run, told)),
-        "legs": _leg_rows(run),
+        "legs": _leg_rows(run) if run.kind != "captures" else [],
         "marks": [_mark_row(mark) for mark in told[:MOST_NUMBERS]],
         "marks_left": max(0, len(told) - MOST_NUMBERS),
         "instruments": [
-            (i.role.replace("_", " "), i.vendor, i.model, i.serial, i.firmware) for i in run.instruments
+            (i.role.replace("_", " "), i.vendor, i.model, i.serial, i.firmware)
+            for i in run.instruments
+            if i.vendor or i.model or i.idn
         ],
         "calibration": _calibration(run),
         "versions": list(_versions(run)),
@@ -117,23 +123,24 @@ def _context(run: Run, into: Path) -> dict[str, Any]:
 
 
 def _rated_currents(run: Run) -> dict[int, float]:
-    """Rated current by part, from the plan or the captures file as the record keeps them; empty if they say none."""
+    """Rated current by part, from the plan or the captures file as the record keeps them; empty if they say
+    none.
+    """
     if run.result is not None and all("rated_current" in part for part in run.result.get("parts", [])):
         return {}  # the extraction passed them on; reading a plan would cost more time than the tables do
     from runner.plan import parse_captures, parse_plan
 
     try:
         if run.kind == "captures":
-            parts = (parse_captures(run.plan_bytes, run.plan_name).part,)
+            parts = [parse_captures(run.plan_bytes, run.plan_name).part]
         else:
-            parts = parse_plan(run.plan_bytes, run.plan_name).parts
+            parts = list(parse_plan(run.plan_bytes, run.plan_name).parts)
     except InputError:  # an old plan that today's reader refuses: its text is on the page all the same
         return {}
     return {index: float(part.rated_current) for index, part in enumerate(parts)}
 
 
 def _part(run: Run, facts: Facts, part: PartFacts, paste: Any) -> dict[str, Any]:
-    known = _places(run)
     return {
         "slug": part.slug,
         "label": part.label,
@@ -146,7 +153,7 @@ def _part(run: Run, facts: Facts, part: PartFacts, paste: Any) -> dict[str, Any]
         "resistance_tables": _resistance_tables(facts, part),
         "captures": paste(draw_captures(run, part, _knee_by_leg(run, part))),
         "cross_check": [str(row.get("text", "")) for row in part.extras.get("cross_check") or []],
-        "flags": flag_rows(part, known),
+        "doubts": doubts(run, part),
     }
 
 
@@ -159,7 +166,7 @@ def _method(facts: Facts, part: PartFacts, method: MethodFacts, paste: Any) -> d
     return {
         "title": METHOD_TITLES[method.name],
         "inductance": inductance,
-        "meaning": _MEANINGS[method.name],
+        "meaning": _subscripts(_MEANINGS[method.name]),
         "knees": knee_tables(facts, part, method),
         "curves": paste(draw_curves(facts, part, method)),
         "surface": paste(draw_surface(part, method)),
@@ -218,8 +225,9 @@ def _has(facts: Facts, method: str) -> bool:
 
 def _under(run: Run) -> str:
     when = datetime.fromtimestamp(run.start, UTC).strftime("%Y-%m-%d %H:%M UTC")
-    what = "Captures taken by hand" if run.kind == "captures" else "Measured"
-    return f"{what}, started {when}. Run {run.run_id}."
+    if run.kind == "captures":
+        return f"Captures taken by hand, brought into this record {when}."
+    return f"Measurement begun {when}, lasting {duration(run.end - run.start)}."
 
 
 def _troubles(run: Run, facts: Facts) -> Iterator[tuple[str, str]]:
@@ -242,13 +250,14 @@ def _run_in_time(run: Run) -> str:
     if run.kind != "captures":
         text += f", in {duration(run.end - run.start)}"
     if len(run.sessions) > 1:
-        text += f", in {len(run.sessions)} sessions"
-    return text + "."
+        text += f" and {len(run.sessions)} sessions"
+    repeated = len(run.all_points["point"]) - count
+    return text + "." + (f" {repeated} further attempts were of no use." if repeated else "")
 
 
 def _leg_rows(run: Run) -> list[tuple[str, ...]]:
     points = run.points
-    rows = []
+    rows: list[tuple[str, ...]] = []
     for leg in run.legs:
         mine = points["leg"] == leg.index
         body = points["body_temperature"][mine & np.isfinite(points["body_temperature"])]
@@ -280,7 +289,9 @@ def _mark_row(mark: Mark) -> dict[str, str]:
 
 
 def _knee_by_leg(run: Run, part: PartFacts) -> dict[int, float]:
-    """Saturation current of the pulse method at the headline's drop, by the leg whose temperature is nearest."""
+    """Saturation current of the pulse method at the headline's drop, by the leg whose temperature is
+    nearest.
+    """
     method = part.method("pulse")
     drop = headline_drop(method) if method else None
     if method is None or drop is None:
@@ -294,19 +305,8 @@ def _knee_by_leg(run: Run, part: PartFacts) -> dict[int, float]:
     return {leg: knee.estimate.value for leg, knee in nearest.items()}
 
 
-def _places(run: Run) -> dict[int, str]:
-    """Where a point stands in the plan, in words, by point number."""
-    points = run.all_points
-    places = {}
-    for row, point in enumerate(points["point"]):
-        width, bias = float(points["pulse_width_setpoint"][row]), float(points["bias_current_setpoint"][row])
-        what = short(width, "s") if math.isfinite(width) else short(bias, "A") if math.isfinite(bias) else ""
-        places[int(point)] = f"{celsius(float(points['temperature_setpoint'][row]), 0)}, {what}".strip(", ")
-    return places
-
-
 def _calibration(run: Run) -> list[tuple[str, ...]]:
-    rows = []
+    rows: list[tuple[str, ...]] = []
     for instrument in run.instruments:
         for name, constant in instrument.calibration.items():
             unit = "" if constant.units == "1" else constant.units
@@ -331,6 +331,7 @@ def _constant(value: float, unit: str) -> str:
 
 
 def _versions(run: Run) -> Iterator[tuple[str, str]]:
+    yield "Run", run.run_id
     for number, session in enumerate(run.sessions, start=1):
         when = datetime.fromtimestamp(run.start + session.start, UTC).strftime("%Y-%m-%d %H:%M UTC")
         versions: Mapping[str, str] = session.versions
@@ -348,6 +349,11 @@ def _render(context: Mapping[str, Any]) -> str:
         trim_blocks=False,
     )
     return environment.get_template("page.html.j2").render(context)
+
+
+def _subscripts(text: str) -> Markup:
+    """``L_d`` as the symbol is printed."""
+    return Markup(re.sub(r"\b([A-Zλ])_(\w)\b", r"\1<sub>\2</sub>", str(escape(text))))
 
 
 def _template_text(name: str) -> str:

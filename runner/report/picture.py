@@ -1,4 +1,5 @@
-"""A picture with its numbers: one SVG for the page, one PNG for documents, one CSV for whoever wants to draw it anew.
+"""A picture with its numbers: one SVG for the page, one PNG for documents, one CSV for whoever wants to draw
+it anew.
 
 The SVG is made to stand inside an HTML page beside others: no prologue, no metadata (it would hold a date and
 addresses), and identifiers that begin with the picture's own name, because an HTML page is one name space.
@@ -78,7 +79,8 @@ def inline_svg(document: str, name: str) -> str:
     svg = re.sub(r'href="#([^"]+)"', rf'href="#{name}-\1"', svg)
     svg = re.sub(r"url\(#([^)]+)\)", rf"url(#{name}-\1)", svg)
     # The size in points would fix the size on the page; the view box alone lets it follow the column.
-    return re.sub(r'<svg ([^>]*?)height="[^"]*"([^>]*?)width="[^"]*"', r"<svg \1\2", svg, count=1).strip()
+    head, body = svg.split(">", 1)
+    return re.sub(r'\s+(?:width|height)="[^"]*"', "", head) + ">" + body.strip()
 
 
 def _field(value: float | int | str) -> str:

@@ -1,6 +1,7 @@
 """Tables of the page, as rows of ready text: the template only sets them.
 
-In a column every number has the unit of the head and as many digits as its own interval supports (see `digits`).
+In a column every number has the unit of the head and as many digits as its own interval supports (see
+`digits`).
 """
 
 import math
@@ -116,7 +117,9 @@ def temperature_table(facts: Facts, title: str, entries: Sequence[AtTemperature]
 
 
 def budget_table(entry: Mapping[str, Any]) -> Table | None:
-    """Contributions to the uncertainty of one saturation current, the largest first; None when there are none."""
+    """Contributions to the uncertainty of one saturation current, the largest first; None when there are
+    none.
+    """
     contributions = [
         (str(c.get("name", "")), number(c.get("standard_uncertainty")))
         for c in entry.get("contributions") or []
@@ -138,19 +141,6 @@ def budget_table(entry: Mapping[str, Any]) -> Table | None:
         f"{celsius(number(entry.get('temperature_degC')))}",
         ("Contribution", f"Standard uncertainty ({scale.unit})", "Share of the variance"),
         tuple(rows),
-    )
-
-
-def flag_rows(part: PartFacts, known: Mapping[int, str]) -> tuple[tuple[str, str, str, str], ...]:
-    """(point, where, flag, sentence); ``known`` tells by point where it stands in the plan."""
-    return tuple(
-        (
-            "" if flag.point < 0 else str(flag.point),
-            known.get(flag.point, ""),
-            flag.flag.replace("_", " "),
-            flag.text,
-        )
-        for flag in part.flags
     )
 
 

@@ -1,7 +1,7 @@
 """Sentences: the headline of each part, and the plan as a person would tell it.
 
-The plan is told from its own text, value by value as its author wrote them, with units spelled the way they are printed
-(``10 uH`` becomes ``10 µH``). Nothing is computed here that the result does not hold.
+The plan is told from its own text, value by value as its author wrote them, with units spelled the way they
+are printed (``10 uH`` becomes ``10 µH``). Nothing is computed here that the result does not hold.
 """
 
 import math
@@ -49,7 +49,9 @@ def headline_drop(method: MethodFacts) -> float | None:
 
 
 def headline(facts: Facts, part: PartFacts) -> str:
-    """One sentence with the answer for a part: where its saturation current is lowest, and how far from the rating."""
+    """One sentence with the answer for a part: where its saturation current is lowest, and how far from the
+    rating.
+    """
     method = next((m for m in part.methods if m.knees), None)
     drop = headline_drop(method) if method else None
     if method is None or drop is None:
@@ -97,13 +99,11 @@ def short_margin(knee: Knee, rated_current: float) -> str:
         return f"over {signed_percent(low, 0)}" if math.isfinite(low) else NOTHING
     margin = knee.estimate.value / rated_current - 1
     half_width = 100 * max(high - margin, margin - low)
-    places = round_uncertainty(half_width)[1] - 1 if half_width > 0 else 1
-    text = signed_percent(margin, places)
-    return (
-        f"{text} ({signed_percent(low, places)} to {signed_percent(high, places)})"
-        if low < 0 < high
-        else text
-    )
+    places = round_uncertainty(half_width)[1] if half_width > 0 else 2
+    if low < 0 < high:
+        interval = f"{signed_percent(low, places)} to {signed_percent(high, places)}"
+        return f"{signed_percent(margin, places)} ({interval})"
+    return signed_percent(margin, places - 1)
 
 
 def printed(value: object) -> str:
@@ -122,7 +122,9 @@ def hold_together(text: str) -> str:
 
 
 def read_plan(data: bytes) -> Mapping[str, Any]:
-    """The plan's (or captures file's) text as a mapping; empty where it is not YAML: it is still shown in full."""
+    """The plan's (or captures file's) text as a mapping; empty where it is not YAML: it is still shown in
+    full.
+    """
     try:
         loaded = yaml.safe_load(data)
     except yaml.YAMLError:

@@ -1,10 +1,11 @@
 """Runs for the report's tests, written through the record's own door.
 
-The numbers follow closed forms, so that a test can say what has to stand on the page: a part whose differential inductance
-is ``L0 (0.12 + 0.88 / (1 + (i/k)^8))`` and whose knee current ``k`` falls with temperature. They mean nothing physical
-beyond looking like an inductor.
+The numbers follow closed forms, so that a test can say what has to stand on the page: a part whose
+differential inductance is ``L0 (0.12 + 0.88 / (1 + (i/k)^8))`` and whose knee current ``k`` falls with
+temperature. They mean nothing physical beyond looking like an inductor.
 """
 
+import json
 import math
 from collections.abc import Callable, Sequence
 from pathlib import Path
@@ -50,13 +51,15 @@ pulse:
 bias:
   current: {{from: 0 A, to: 10 A, count: 11, both_ways: true}}
   signal: {{frequency: 100 kHz, level: 50 mV}}
-limits: {{current: 18 A, body: 140 degC, rail: 16 V, pulse_energy: 5 mJ, chamber: [-45 degC, 130 degC], duration: 14 h}}
+limits: {{current: 18 A, body: 140 degC, rail: 16 V, pulse_energy: 5 mJ, chamber: [-45 degC, 130 degC],
+         duration: 14 h}}
 extract: {{drops: [10 %, 20 %, 30 %], reference: same temperature}}
 """
 BENCH = "name: Mock bench\n# a comment with ümlauts & <angles>\n"
 RATED = 6.0
 DROPS = (0.1, 0.2, 0.3)
 BIAS_TOP = 10.0
+VOLT, AMPERE = 20 / 32768, 40 / 32768  # of one code
 
 
 def initial_inductance(temperature: float) -> float:
@@ -65,7 +68,7 @@ def initial_inductance(temperature: float) -> float:
 
 def relative(current: Any, temperature: float) -> Any:
     knee = 9.5 * (1 - 2.2e-3 * (temperature - 25))
-    return (0.12 + 0.88 / (1 + (current / knee) ** 8)) / 1.0
+    return 0.12 + 0.88 / (1 + (current / knee) ** 8)
 
 
 def saturation_current(drop: float, temperature: float) -> float:
@@ -78,8 +81,13 @@ def resistance(temperature: float) -> float:
     return 0.018 * (1 + 3.93e-3 * (temperature - 20))
 
 
+def interval_of(width: float, samples: int) -> float:
+    """So that a capture shows the pulse and half its width again."""
+    return 1.67 * width / samples
+
+
 def _waveform(width: float, temperature: float, samples: int) -> tuple[Any, Any, Any, float]:
-    time = (np.arange(samples) - samples // 10) * 1e-8 * 2000 / samples * width / 14e-6
+    time = (np.arange(samples) - samples // 10) * interval_of(width, samples)
     grid = np.linspace(0, 40, 2000)
     flux = np.concatenate(
         [[0], np.cumsum(np.diff(grid) * initial_inductance(temperature) * relative(grid[1:], temperature))]
@@ -92,6 +100,10 @@ def _waveform(width: float, temperature: float, samples: int) -> tuple[Any, Any,
     return time, voltage, current, peak
 
 
+def _codes(signal: Any, scale: float) -> Any:
+    return np.clip(signal / scale, -32768, 32752).astype("<i2")
+
+
 def _result(labels: Sequence[str], temperatures: Sequence[float], methods: Sequence[str]) -> dict[str, Any]:
     def entry(temperature: float, key: str, value: float, width: float) -> dict[str, float]:
         return {
@@ -102,7 +114,7 @@ def _result(labels: Sequence[str], temperatures: Sequence[float], methods: Seque
         }
 
     def knee(method: str, drop: float, temperature: float, scale: float) -> dict[str, Any]:
-        value = scale * saturation_current(drop, temperature)
+        value = scale * saturation_current(drop, temperature) * (1.0 if method == "pulse" else 1.02)
         reached = method == "pulse" or value <= BIAS_TOP
         return {
             "temperature_degC": temperature + 0.1, "drop": drop, "reference": "same temperature",
@@ -179,11 +191,11 @@ def write_run(
     """A run folder with record and, if ``extracted``, a result, which ``change`` may edit first."""
     rng = np.random.default_rng(SEED)
     described = [
-        f"{{label: {label!r}, inductance: 22 uH, rated_current: {RATED:g} A, resistance: 18 mohm}}"
+        f"{{label: {json.dumps(label)}, inductance: 22 uH, rated_current: {RATED:g} A, resistance: 18 mohm}}"
         for label in labels
     ]
     if kind == "captures":
-        text = f"title: {title}\npart: {described[0]}\nshunt: {{resistance: 10 mohm, uncertainty: 0.1 %}}\n"
+        text = f"title: {json.dumps(title)}\npart: {described[0]}\nshunt: {{resistance: 10 mohm, uncertainty: 0.1 %}}\n"
         text += "columns: {time: t, voltage: v, current: i}\ncaptures:\n"
         text += "  - {file: a.csv, temperature: 25.1 degC}\n" * widths
         bench = b""
@@ -193,7 +205,7 @@ def write_run(
             if len(labels) == 1
             else "parts:\n" + "".join(f"  - {d}\n" for d in described)
         )
-        text, bench = PLAN.format(title=title, parts=parts), BENCH.encode()
+        text, bench = PLAN.format(title=json.dumps(title), parts=parts), BENCH.encode()
     header = RunHeader(
         run_id="1e0e8ac2-0000-4000-8000-000000000001", title=title, kind=kind, start=START,
         plan_name="night.yaml" if kind == "plan" else "captures.yaml", plan_bytes=text.encode(),
@@ -213,33 +225,36 @@ def write_run(
                 InstrumentRow("digitizer", "NXsensor", vendor="Mock bench", model="Digitizer 2", serial="0007",
                               firmware="1.4", calibration=constants)
             )  # fmt: skip
-        setting = journal.setting(
-            SettingRow(samples, 1e-8 * 2000 / samples, -1e-9 * 2000, "int16", 20 / 32768, 0.0, 40 / 32768, 0.0,
-                       {"code_min": -32768, "code_max": 32752})
-        )  # fmt: skip
         index, air = 0, 23.0
         for leg, temperature in enumerate(temperatures if points else ()):
             journal.leg_begin(leg, temperature, t)
+            before = temperatures[leg - 1] if leg else 23.0
             for step in range(90):
                 t += 60
                 air += float(np.clip(temperature - air, -3, 3))
                 if kind == "plan":
                     journal.chamber(t, air + float(rng.normal(0, 0.05)))
                     for part in range(len(labels)):
-                        journal.body(t, part, temperature + (23.0 - temperature) * math.exp(-step / 18))
+                        journal.body(t, part, temperature + (before - temperature) * math.exp(-step / 18))
             for part in range(len(labels)):
                 common: dict[str, Any] = {
                     "leg": leg, "part": part, "temperature_setpoint": temperature,
-                    "body_temperature": temperature + 0.1, "air_temperature": temperature, "resistance": resistance(temperature),
+                    "body_temperature": temperature + 0.1, "air_temperature": temperature,
+                    "resistance": resistance(temperature),
                 }  # fmt: skip
                 for width in np.linspace(2e-6, 20e-6, widths) if "pulse" in methods else ():
                     t += 6
                     _, voltage, current, peak = _waveform(width, temperature, samples)
+                    interval = interval_of(width, samples)
+                    setting = journal.setting(
+                        SettingRow(samples, interval, -(samples // 10) * interval, "int16", VOLT, 0.0, AMPERE, 0.0,
+                                   {"code_min": -32768, "code_max": 32752})
+                    )  # fmt: skip
                     captures = [
                         CaptureRow(
                             repeat, setting, t,
-                            np.clip((voltage + rng.normal(0, 0.03, samples)) / 20 * 32768, -32768, 32752).astype("<i2"),
-                            np.clip((current + rng.normal(0, 0.02, samples)) / 40 * 32768, -32768, 32752).astype("<i2"),
+                            _codes(voltage + rng.normal(0, 0.03, samples), VOLT),
+                            _codes(current + rng.normal(0, 0.02, samples), AMPERE),
                         )
                         for repeat in range(2)
                     ]  # fmt: skip
