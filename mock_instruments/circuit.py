@@ -18,9 +18,9 @@ import numpy as np
 
 from mock_instruments.flux import Branch, FloatArray
 
-STEPS = 240  # over the pulse width when the part is far from saturation; see tests for what they buy
+STEPS = 60  # over the width of an unsaturating pulse; agrees with scipy to 4e-8 (see tests)
 SHORTEST_STEP = 0.12  # of the unsaturated step
-FREEWHEEL_CELLS = 400
+FREEWHEEL_CELLS = 200
 COMPARATOR_DELAY = 100e-9  # s from a current above the comparator's level to an open switch
 
 _NODES, _WEIGHTS = np.polynomial.legendre.leggauss(4)
@@ -108,24 +108,37 @@ class Shot:
     def peak(self) -> float:
         return float(np.max(self.on_current))
 
-    def waveforms(self, time: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
-        """Current [A], voltage across the part [V] and shunt voltage [V] at ``time`` [n] (ascending, s).
-
-        The part is sensed at its own terminals (winding resistance included, switch and leads excluded);
-        the shunt voltage includes its series inductance.
-        """
+    def motion(self, time: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Current [A] and its slope [A/s] at ``time`` [n] (ascending, s from the switch closing)."""
         current = np.full(time.shape, self.initial_current)
         slope = np.zeros(time.shape)
-        inductance = np.zeros(time.shape)
+        first, last, done = self._phases(time)
+        current[first:last], slope[first:last] = _hermite(
+            time[first:last], self.on_time, self.on_current, self.on_slope
+        )
+        current[last:done], slope[last:done] = _hermite(
+            time[last:done], self.off_time, self.off_current, self.off_slope
+        )
+        return current, slope
+
+    def part_voltage(self, time: FloatArray) -> FloatArray:
+        """Voltage [V] across the part's own terminals: winding resistance included, switch and leads excluded."""
+        current, slope = self.motion(time)
+        first, last, done = self._phases(time)
+        voltage = self.loop.winding * current
+        voltage[first:last] += self.rising.slope(current[first:last]) * slope[first:last]
+        voltage[last:done] += self.falling.slope(current[last:done]) * slope[last:done]
+        return voltage
+
+    def shunt_voltage(self, time: FloatArray) -> FloatArray:
+        """Voltage [V] of the shunt, its series inductance included."""
+        current, slope = self.motion(time)
+        return self.loop.shunt * current + self.loop.shunt_inductance * slope
+
+    def _phases(self, time: FloatArray) -> tuple[int, int, int]:
+        """Where in ``time`` the switch closes, opens, and the current is back where it was."""
         first, last, done = np.searchsorted(time, [0.0, self.width, self.end])
-        for part, nodes, branch in (
-            (slice(first, last), (self.on_time, self.on_current, self.on_slope), self.rising),
-            (slice(last, done), (self.off_time, self.off_current, self.off_slope), self.falling),
-        ):
-            current[part], slope[part] = _hermite(time[part], *nodes)
-            inductance[part] = branch.slope(current[part])
-        voltage = self.loop.winding * current + inductance * slope
-        return current, voltage, self.loop.shunt * current + self.loop.shunt_inductance * slope
+        return int(first), int(last), int(done)
 
 
 def fire(
@@ -200,7 +213,10 @@ def _on(
 
     def rates(r: float, i: float, v: float) -> tuple[float, float]:
         feed = (supply_voltage - v) * per_supply
-        feed = 0.0 if feed < 0.0 else min(feed, supply_current)
+        if feed < 0.0:
+            feed = 0.0
+        elif feed > supply_current:
+            feed = supply_current
         net = i - feed
         return (v - esr * net - r * i) / (inductance(i) + stray), (-net - v * per_bleeder) * per_farad
 
@@ -281,9 +297,12 @@ def _crossing(time: list[float], current: list[float], slope: list[float], node:
 
 
 def _integral(t: FloatArray, y: FloatArray) -> float:
-    """Trapezoid with the end-slope correction left out: nodes are dense, 1e-5 of the value is what it is
-    good for."""
-    return float(np.sum(0.5 * (y[1:] + y[:-1]) * np.diff(t))) if len(t) > 1 else 0.0
+    """Trapezoid with its end-slope correction h²/12 (y0' - y1') in every cell, slopes by differences."""
+    if len(t) < 3:
+        return 0.0
+    h = np.diff(t)
+    slope = np.gradient(y, t, edge_order=2)
+    return float(np.sum(h * (0.5 * (y[1:] + y[:-1]) + h / 12.0 * (slope[:-1] - slope[1:]))))
 
 
 def _core_loss(rising: Branch, falling: Branch, low: float, high: float) -> float:

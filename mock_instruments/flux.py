@@ -66,22 +66,22 @@ class Term:
             return np.asarray(self.inductance / (1.0 + x * x))
         return np.asarray(self.inductance * (1.0 - np.tanh(x) ** 2))
 
-    def plain_slope(self) -> Callable[[float], float]:
-        """`slope` for plain floats, as fast as the integrator wants it."""
+    def plain_slope(self, floor: float = 0.0) -> Callable[[float], float]:
+        """`slope` plus ``floor`` [H] for plain floats, as fast as the integrator wants it."""
         inductance, per_knee, p = self.inductance, 1.0 / self.knee, self.sharpness
         power = -1.0 - 1.0 / p
         tanh = math.tanh
 
         def sharp(i: float) -> float:
-            slope: float = inductance * (1.0 + abs(i * per_knee) ** p) ** power
+            slope: float = floor + inductance * (1.0 + abs(i * per_knee) ** p) ** power
             return slope
 
         def soft(i: float) -> float:
             x = i * per_knee
-            return inductance / (1.0 + x * x)
+            return floor + inductance / (1.0 + x * x)
 
         def hyperbolic(i: float) -> float:
-            return inductance * (1.0 - tanh(i * per_knee) ** 2)
+            return floor + inductance * (1.0 - tanh(i * per_knee) ** 2)
 
         return {"sharp": sharp, "soft": soft, "tanh": hyperbolic}[self.shape]
 
@@ -124,7 +124,7 @@ class Memory:
         )
         h = np.where(i <= begin, offset, np.where(i <= flat_from, below, above))
         target = self.limit * np.minimum(1.0, i / self.reach)
-        return h, np.where(i <= begin, 0.0, (target - h) / self.length)
+        return h, np.where(i < begin, 0.0, (target - h) / self.length)
 
 
 @dataclass(frozen=True, slots=True)
@@ -164,9 +164,8 @@ class Branch:
         slopes = [term.plain_slope() for term in self.curve.terms]
         memory, offset = self.curve.memory, self.offset
         if memory is None or (not self.moving and offset == 0.0):
-            if len(slopes) == 1:
-                only = slopes[0]
-                return lambda i: floor + only(i)
+            if len(self.curve.terms) == 1:
+                return self.curve.terms[0].plain_slope(floor)
             return lambda i: floor + sum([slope(i) for slope in slopes])
         if not self.moving or offset >= memory.limit:
             return lambda i: floor + sum([slope(i + offset) for slope in slopes])
@@ -196,7 +195,7 @@ def _moving_slope(
     at_flat = k * (reach - length) + swing * exp(-(reach - begin) / length) if begin < reach else offset
 
     def slope(i: float) -> float:
-        if i <= begin:
+        if i < begin:
             h, growth = offset, 0.0
         elif i < flat_from:
             h = k * (i - length) + swing * exp(-(i - begin) / length)

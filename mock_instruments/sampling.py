@@ -51,9 +51,7 @@ def capture(
     """
     ticks = np.arange(settings.samples, dtype=np.float64) - settings.pretrigger
     time: FloatArray = ticks * settings.interval - delay
-    voltage, shunt = pulse.waveforms(time)
-    if spec.skew:
-        voltage, _ = pulse.waveforms(time - spec.skew)
+    voltage, shunt = pulse.voltage(time - spec.skew), pulse.shunt(time)
     if spec.ringing:
         voltage = voltage + spec.ringing * (_ring(time - spec.skew) - _ring(time - spec.skew - pulse.width))
     if spec.hum:

@@ -62,15 +62,16 @@ class Pulse:
     start: float  # s, world time of the trigger
     width: float
     open_voltage: float  # V across the open fixture while the switch is on
-    shunt: tuple[float, float]
 
-    def waveforms(self, time: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Voltage across the part [V] and shunt voltage [V] at ``time`` [n] s from the switch closing."""
-        if self.shot is None:
-            on = (time >= 0) & (time < self.width)
-            return np.where(on, self.polarity * self.open_voltage, 0.0), np.zeros(time.shape)
-        _, voltage, shunt = self.shot.waveforms(time)
-        return self.polarity * voltage, self.polarity * shunt
+    def voltage(self, time: FloatArray) -> FloatArray:
+        """Voltage across the part [V] at ``time`` [n] s from the switch closing."""
+        if self.shot is not None:
+            return self.polarity * self.shot.part_voltage(time)
+        return np.where((time >= 0) & (time < self.width), self.polarity * self.open_voltage, 0.0)
+
+    def shunt(self, time: FloatArray) -> FloatArray:
+        """Shunt voltage [V] at ``time`` [n] s from the switch closing."""
+        return np.zeros(time.shape) if self.shot is None else self.polarity * self.shot.shunt_voltage(time)
 
 
 class World:
@@ -234,9 +235,7 @@ class World:
         shot = None
         if part is not None and part.fault != "open":
             shot = self._shoot(part, width, polarity, trip_current)
-        pulse = Pulse(
-            shot, polarity, self.now, width, self.bank_voltage, (self.spec.shunt, self.spec.shunt_inductance)
-        )
+        pulse = Pulse(shot, polarity, self.now, width, self.bank_voltage)
         self.ledger.saw_pulse(self.now, shot.delivered if shot else 0.0)
         if shot is not None and part is not None:
             self.bank_voltage = shot.bank_after
