@@ -22,12 +22,13 @@ from runner.sweep.biasing import bias_series
 from runner.sweep.climb import climb
 from runner.sweep.clock import Clock
 from runner.sweep.faults import GivenUp
+from runner.sweep.heart import Heart, NoHeart
 from runner.sweep.identities import instrument_rows
 from runner.sweep.locks import bench_locked
 from runner.sweep.logbook import Logbook
 from runner.sweep.night import Night, Settled
 from runner.sweep.notify import Notifier
-from runner.sweep.opening import Site, on_site, open_all, ratings, roles_needed, safe_rule
+from runner.sweep.opening import Site, on_site, ratings, roles_needed, safe_rule
 from runner.sweep.progress import Progress, Watch
 from runner.sweep.recovery import Recovery
 from runner.sweep.requests import StopAtOnce, StopRequests
@@ -85,7 +86,6 @@ def carry_out(loaded: LoadedPlan, folder: Path, *, resume: bool = False, watch: 
         BenchError: the bench is in use, or an instrument does not answer at the start; nothing is left on.
         RecordError: the journal cannot be begun.
     """
-    programme = expand(loaded.plan)
     _refuse_broken_limits(loaded)
     requests = StopRequests()
     with ExitStack() as stack:
@@ -93,12 +93,36 @@ def carry_out(loaded: LoadedPlan, folder: Path, *, resume: bool = False, watch: 
         resources = [instrument.resource or "" for instrument in loaded.bench.instruments.values()]
         if loaded.bench.simulation is None:
             stack.enter_context(bench_locked(resources))
-        behind, not_before = _behind(folder) if resume else (NOTHING, 0.0)
+        behind = look_behind(folder) if resume else NOTHING
         site = stack.enter_context(on_site(loaded, roles_needed(loaded.plan, loaded.bench)))
-        clock = site.clock(not_before=not_before, between=lambda: None)
-        journal = stack.enter_context(_journal(loaded, programme, folder, clock, resume=resume))
+        return carry_out_at(site, loaded, folder, behind=behind, requests=requests, watch=watch)
+
+
+def carry_out_at(
+    site: Site,
+    loaded: LoadedPlan,
+    folder: Path,
+    *,
+    behind: Behind = NOTHING,
+    requests: StopRequests | None = None,
+    watch: Watch = _nobody,
+) -> Outcome:
+    """As `carry_out`, on a bench that is there already and that nobody else uses.
+
+    Args:
+        behind: what the run has behind it; `NOTHING` for a new one.
+    """
+    # The clock is made before the journal that its first entry needs, and the heart after it: it reports there.
+    beats: list[Heart] = [NoHeart()]
+    not_before = behind.last_time + _RESUMED_AFTER if behind.last_time else 0.0
+    clock = site.clock(not_before=not_before, between=lambda: beats[-1].beat())
+    programme = expand(loaded.plan)
+    with _journal(loaded, programme, folder, clock, resume=behind is not NOTHING) as journal:
         journal.session(software(), library_versions(), clock.now())
-        return _Session(loaded, programme, folder, site, clock, journal, requests, behind, watch).run()
+        session = _Session(
+            loaded, programme, folder, site, clock, journal, requests or StopRequests(), behind, watch, beats
+        )
+        return session.run()
 
 
 class _Session:
@@ -115,15 +139,21 @@ class _Session:
         requests: StopRequests,
         behind: Behind,
         watch: Watch,
+        beats: list[Heart],
     ) -> None:
         self.loaded, self.programme, self.folder = loaded, programme, folder
         self.site, self.clock, self.journal = site, clock, journal
         self.requests, self.behind, self.watch = requests, behind, watch
+        self.beats = beats
         self.log = Logbook(journal, clock)
         self.notifier = Notifier(lambda text: self.log.best_effort("notify", text, "warning"))
 
     def run(self) -> Outcome:
-        opened, lost = open_all(self.site.reaches)
+        rule = safe_rule(self.loaded.plan, self.loaded.bench)
+        self.beats.append(
+            self.site.heart(rule, self.folder, lambda text: self.log.best_effort("watchdog", text, "error"))
+        )
+        opened, lost = self.site.open_all()
         bench = Bench(opened, ratings(self.loaded.plan, self.loaded.bench), self.clock)
         night = self._night(bench)
         status: Status = "finished"
@@ -146,6 +176,9 @@ class _Session:
             status, reason, crash = "stopped", f"{type(error).__name__}: {error}", error
         return self._end(bench, night, status, reason, crash)
 
+    def _beat(self) -> None:
+        self.beats[-1].beat()
+
     # ---- beginning
 
     def _night(self, bench: Bench) -> Night:
@@ -161,13 +194,15 @@ class _Session:
             folder=self.folder,
             journal=self.journal,
             log=self.log,
-            recovery=Recovery(bench, self.log, lambda text: self.notifier.tell("kneemap: fault", text)),
+            recovery=Recovery(
+                bench, self.log, lambda text: self.notifier.tell("kneemap: fault", text), self._beat
+            ),
             requests=self.requests,
             behind=self.behind,
             watch=self.watch,
             forecast_soak=tuple(0.0 if i in ended else leg.ramp + leg.soak for i, leg in enumerate(outlook)),
             forecast_points=tuple(0.0 if i in ended else leg.points for i, leg in enumerate(outlook)),
-            beat=lambda: None,
+            beat=self._beat,
             run_started=with_start,
             started=now,
             dead_parts=set(self.behind.dead_parts),
@@ -177,9 +212,7 @@ class _Session:
         """Who is there, is anything wrong with them, limits into them; nothing is switched on yet."""
         for role in bench.roles:
             night.recovery.carry_out(Phase.START, partial(bench.meet, role))
-        for row in instrument_rows(
-            self.loaded.bench, bench.identities, {reach.role: reach.resource for reach in self.site.reaches}
-        ):
+        for row in instrument_rows(self.loaded.bench, bench.identities, self.site.resources()):
             self.journal.instrument(row)
         self.journal.state("acquiring")
         self.log.event("start", f"{len(bench.roles)} instruments answer; limits are set in them")
@@ -262,6 +295,8 @@ class _Session:
                 status, reason = "failed", f"{reason} {report}"
             for instrument in bench.roles.values():
                 instrument.close()
+            self.beats[-1].stop()
+            self.beats.append(NoHeart())
             self._close_record(night, status)
             outcome = Outcome(
                 status, self.behind.points + night.points, self.behind.flagged + night.flagged, reason
@@ -293,11 +328,6 @@ def _refuse_broken_limits(loaded: LoadedPlan) -> None:
     broken = [one for one in forecast(loaded.plan, loaded.bench).limits if not one.is_kept]
     if broken:
         raise InputError([Fault(f"{loaded.plan_path}: {one.name}", one.text) for one in broken])
-
-
-def _behind(folder: Path) -> tuple[Behind, float]:
-    behind = look_behind(folder)
-    return behind, behind.last_time + _RESUMED_AFTER
 
 
 def _journal(

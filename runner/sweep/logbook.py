@@ -28,6 +28,7 @@ KINDS = (
     "stop",  # why the run ended early
     "end",
     "notify",
+    "watchdog",  # written by the watchdog when it took over, or by the runner about it
     "record",  # consolidation
 )
 

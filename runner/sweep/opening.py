@@ -11,7 +11,7 @@ from collections.abc import Callable, Iterable, Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import asdict, dataclass
 from pathlib import Path
-from typing import Any, Self
+from typing import Any, Protocol, Self
 
 from drivers import Dialect, InstrumentError, connect, open_session
 from mock_instruments import launch
@@ -20,6 +20,7 @@ from runner.plan import Bench as BenchFile
 from runner.plan import LoadedBench, LoadedPlan, Plan, load_model, simulation_spec
 from runner.sweep.bench import Ratings
 from runner.sweep.clock import BenchClock, Clock, WallClock
+from runner.sweep.heart import Heart, WatchedHeart, patience
 from runner.sweep.safe_state import SafeRule
 
 _COMPLIANCE = 3.0  # V of the bias source beyond the drop in the winding, for leads and relays
@@ -36,6 +37,14 @@ class Reach:
     dialect: str
     timeout: float
 
+    def read_dialect(self) -> Dialect:
+        """Its dialect.
+
+        Raises:
+            InputError: the file is wrong.
+        """
+        return load_model(Path(self.dialect), Dialect)
+
     def open(self) -> Any:
         """Connect and give the role object.
 
@@ -43,42 +52,77 @@ class Reach:
             InstrumentError: nobody answers.
             InputError: the dialect file is wrong.
         """
-        dialect = load_model(Path(self.dialect), Dialect)
+        dialect = self.read_dialect()
         return connect(self.role, open_session(self.resource, dialect, self.timeout), dialect)
-
-    def to_json(self) -> dict[str, Any]:
-        return asdict(self)
 
     @classmethod
     def from_json(cls, given: Mapping[str, Any]) -> Self:
         return cls(**given)
 
 
-@dataclass(frozen=True, slots=True)
-class Site:
-    """Where the instruments of a run are.
+class Site(Protocol):
+    """Where the instruments of a run are; in tests, a bench in memory."""
 
-    Attributes:
+    def resources(self) -> Mapping[str, str]:
+        """Resource name of each role."""
+
+    def open_all(self) -> tuple[dict[str, Any], list[InstrumentError]]:
+        """Open every instrument; those that cannot be opened come back as errors, all of them."""
+
+    def clock(self, *, not_before: float, between: Callable[[], None]) -> Clock:
+        """The bench's clock, starting now but after `not_before` [UTC s]; `between` is called in sleeps."""
+
+    def heart(self, rule: SafeRule, folder: Path, complain: Callable[[str], None]) -> Heart:
+        """Start a watchdog for this bench."""
+
+
+class VisaSite:
+    """Instruments reached over VISA.
+
+    Args:
         reaches: one for each role, in the order in which they are opened.
         control: control port of a simulated bench, None for a real one.
     """
 
-    reaches: tuple[Reach, ...]
-    control: int | None
+    def __init__(self, reaches: tuple[Reach, ...], control: int | None) -> None:
+        self._reaches = reaches
+        self._control = control
+        self._start = 0.0
 
-    @property
-    def is_simulated(self) -> bool:
-        return self.control is not None
+    def resources(self) -> Mapping[str, str]:
+        return {reach.role: reach.resource for reach in self._reaches}
+
+    def open_all(self) -> tuple[dict[str, Any], list[InstrumentError]]:
+        opened: dict[str, Any] = {}
+        lost: list[InstrumentError] = []
+        for reach in self._reaches:
+            try:
+                opened[reach.role] = reach.open()
+            except InstrumentError as error:
+                lost.append(error)
+        return opened, lost
 
     def clock(self, *, not_before: float, between: Callable[[], None]) -> Clock:
-        """The bench's clock, starting now but after `not_before` [UTC s]."""
-        if self.control is None:
+        self._start = max(time.time(), not_before)
+        if self._control is None:
             return WallClock(between=between, not_before=not_before)
-        return BenchClock(self.control, start=max(time.time(), not_before), between=between)
+        return BenchClock(self._control, start=self._start, between=between)
+
+    def heart(self, rule: SafeRule, folder: Path, complain: Callable[[str], None]) -> Heart:
+        orders = {
+            "reaches": [asdict(reach) for reach in self._reaches],
+            "control": self._control,
+            "start": self._start,
+            "not_before": self._start,
+            "rule": asdict(rule),
+            "folder": str(folder.absolute()),
+            "patience": patience(max(reach.timeout for reach in self._reaches)),
+        }
+        return WatchedHeart(json.dumps(orders), complain)
 
 
 @contextmanager
-def on_site(loaded: LoadedPlan | LoadedBench, roles: Iterable[str]) -> Iterator[Site]:
+def on_site(loaded: LoadedPlan | LoadedBench, roles: Iterable[str]) -> Iterator[VisaSite]:
     """Say where the instruments are; a simulated bench is served inside, and ends when the last client has gone.
 
     Raises:
@@ -87,7 +131,7 @@ def on_site(loaded: LoadedPlan | LoadedBench, roles: Iterable[str]) -> Iterator[
     bench = loaded.bench
     roles = [role for role in bench.instruments if role in set(roles)]
     if bench.simulation is None:
-        yield Site(
+        yield VisaSite(
             tuple(_reach(loaded, role, bench.instruments[role].resource or "") for role in roles), None
         )
         return
@@ -96,7 +140,7 @@ def on_site(loaded: LoadedPlan | LoadedBench, roles: Iterable[str]) -> Iterator[
     except (RuntimeError, OSError) as error:
         raise BenchError(f"{loaded.bench_path}: {error}") from error
     try:
-        yield Site(
+        yield VisaSite(
             tuple(
                 _reach(loaded, role, f"TCPIP::127.0.0.1::{launched.ports[role]}::SOCKET") for role in roles
             ),
@@ -119,17 +163,6 @@ def roles_needed(plan: Plan, bench: BenchFile) -> tuple[str, ...]:
     if plan.bias is not None:
         needed |= {"lcr", "bias_source"}
     return tuple(role for role in bench.instruments if role in needed)
-
-
-def open_all(reaches: Iterable[Reach]) -> tuple[dict[str, Any], list[InstrumentError]]:
-    """Open every instrument; those that cannot be opened come back as errors, all of them."""
-    opened, lost = {}, []
-    for reach in reaches:
-        try:
-            opened[reach.role] = reach.open()
-        except InstrumentError as error:
-            lost.append(error)
-    return opened, lost
 
 
 def ratings(plan: Plan, bench: BenchFile) -> Ratings:
@@ -170,16 +203,4 @@ def safe_rule(plan: Plan | None, bench: BenchFile) -> SafeRule:
         highest_rail=plan.limits.rail if plan is not None else 0.0,
         ramp=source.ramp if source is not None else 1.0,
         chamber_degC=chamber.safe_degC if chamber is not None else 25.0,
-    )
-
-
-def as_json(site: Site, rule: SafeRule, **more: Any) -> str:
-    """Site and rule in one line, for the watchdog."""
-    return json.dumps(
-        {
-            "reaches": [reach.to_json() for reach in site.reaches],
-            "control": site.control,
-            "rule": asdict(rule),
-            **more,
-        }
     )

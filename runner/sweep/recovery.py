@@ -21,10 +21,13 @@ class Recovery:
         flags: what the tries since the last `fresh_point` mean for the point (retried, restarted).
     """
 
-    def __init__(self, bench: Bench, log: Logbook, tell: Callable[[str], None]) -> None:
+    def __init__(
+        self, bench: Bench, log: Logbook, tell: Callable[[str], None], beat: Callable[[], None] = lambda: None
+    ) -> None:
         self._bench = bench
         self._log = log
         self._tell = tell
+        self._beat = beat
         self._spent: Counter[str] = Counter()
         self.flags = Flag(0)
 
@@ -59,6 +62,7 @@ class Recovery:
     def _answer(self, failure: Failure, phase: Phase, tried: int, larger: Callable[[], None] | None) -> None:
         """One decision and its carrying out; faults of the recovery itself count as further tries."""
         while True:
+            self._beat()
             kind = kind_of(failure)
             decision = decide(kind, failure.role, phase, tried=tried, spent=self._spent[failure.role])
             self._spent[failure.role] += 1

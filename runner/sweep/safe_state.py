@@ -72,7 +72,7 @@ def reach_safe_state(
     """Walk to the safe state.
 
     Args:
-        roles: the opened instruments by role; those that are missing were never there.
+        roles: instruments by role; those that are missing were never there. Asking for one may raise.
         rule: times and set-points.
         clock: for ramps and the bleeder.
         say: told each step as it is done, and how long the bank will take.
@@ -104,36 +104,33 @@ class _Walk:
 
     def step(self, role: str, what: str, action: Callable[[Any], None]) -> bool:
         """One step with one instrument, tried twice; True if it was done or there is no such instrument."""
-        instrument = self.roles.get(role)
-        if instrument is None:
+        if role not in self.roles:
             return True
-        for tries_left in (1, 0):
+        # Exception, here and below: a fault of ours in one step must not keep the steps behind it from being taken.
+        for _ in range(2):
             try:
-                action(instrument)
-            # Exception: a fault of ours in one step must not keep the steps behind it from being taken.
+                action(self.roles[role])
             except Exception as error:
                 failure = error
-                if tries_left:
-                    self.reconnect(instrument)
+                self.reconnect(role)
             else:
                 self.done.append(what)
                 self.say(what)
                 return True
         # The dialect's own way to the safe state may still work where a set-point is refused.
         try:
-            instrument.safe()
-        except Exception:  # as above
+            self.roles[role].safe()
+        except Exception:
             self.unconfirmed.append(f"{what}: {failure}")
             return False
         self.done.append(f"{what} (by its safe-state messages)")
         self.say(what)
         return True
 
-    @staticmethod
-    def reconnect(instrument: Any) -> None:
+    def reconnect(self, role: str) -> None:
         # Whether it worked is shown by the next try.
         with contextlib.suppress(Exception):
-            instrument.reconnect()
+            self.roles[role].reconnect()
 
 
 def _end_bias(source: Any, rule: SafeRule, clock: Clock) -> None:
@@ -153,10 +150,9 @@ def _end_bias(source: Any, rule: SafeRule, clock: Clock) -> None:
 
 def _discharge(walk: _Walk, rule: SafeRule, clock: Clock) -> bool:
     """Wait for the bleeder; the supply's voltmeter sits on the bank. Without it, wait for the worst case."""
-    supply = walk.roles.get("supply")
-    if supply is None or rule.bleed <= 0:
+    if "supply" not in walk.roles or rule.bleed <= 0:
         return True
-    voltage = _bank_voltage(walk, supply)
+    voltage = _bank_voltage(walk)
     seconds = discharge_time(rule.highest_rail if math.isnan(voltage) else voltage, rule.bleed)
     if seconds:
         walk.say(f"bank at {voltage:.1f} V, discharged in {seconds:.0f} s")
@@ -168,7 +164,7 @@ def _discharge(walk: _Walk, rule: SafeRule, clock: Clock) -> bool:
             )
             walk.unconfirmed.append("supply: the bank's voltage could not be read")
             return True
-        voltage = _bank_voltage(walk, supply)
+        voltage = _bank_voltage(walk)
         if voltage <= DISCHARGED * 1.1:
             walk.done.append("bank discharged")
             return True
@@ -179,11 +175,11 @@ def _discharge(walk: _Walk, rule: SafeRule, clock: Clock) -> bool:
     return False
 
 
-def _bank_voltage(walk: _Walk, supply: Any) -> float:
-    for tries_left in (1, 0):
+def _bank_voltage(walk: _Walk) -> float:
+    """Voltage of the bank [V], NaN where it cannot be read."""
+    for _ in range(2):
         try:
-            return abs(float(supply.measure()[0]))
-        except Exception:  # as in `step`
-            if tries_left:
-                walk.reconnect(supply)
+            return abs(float(walk.roles["supply"].measure()[0]))
+        except Exception:  # as in `_Walk.step`
+            walk.reconnect("supply")
     return math.nan
