@@ -23,6 +23,7 @@ from runner.report.captures import draw_captures
 from runner.report.curves import draw_curves, draw_surface
 from runner.report.digits import NOTHING, duration, fixed, quantity, short
 from runner.report.doubts import doubts
+from runner.report.extras import extra_tables, extra_texts
 from runner.report.facts import INDUCTANCE, METHOD_TITLES, Facts, MethodFacts, PartFacts, gather
 from runner.report.knee import draw_knees, draw_overview, draw_resistance
 from runner.report.night import MOST_NUMBERS, Mark, draw_night, marks
@@ -146,12 +147,13 @@ def _part(run: Run, facts: Facts, part: PartFacts, paste: Any) -> dict[str, Any]
         "label": part.label,
         "description": part.description,
         "headline": hold_together(headline(facts, part)),
-        "sentences": [str(text) for text in part.extras.get("sentences") or []],
+        "sentences": [*map(str, part.extras.get("sentences") or []), *extra_texts(part.extras)],
         "methods": [_method(facts, part, method, paste) for method in part.methods],
         "saturation": paste(draw_knees(facts, part)),
         "resistance": paste(draw_resistance(facts, part)),
         "resistance_tables": _resistance_tables(facts, part),
         "captures": paste(draw_captures(run, part, _knee_by_leg(run, part))),
+        "extras": list(extra_tables(part.extras, facts.coverage)),
         "cross_check": [str(row.get("text", "")) for row in part.extras.get("cross_check") or []],
         "doubts": doubts(run, part),
     }
@@ -172,7 +174,8 @@ def _method(facts: Facts, part: PartFacts, method: MethodFacts, paste: Any) -> d
         "surface": paste(draw_surface(part, method)),
         "initial": initial,
         "budgets": [budget for budget in budgets if budget],
-        "extras": [],
+        "extras": list(extra_tables(method.extras, facts.coverage)),
+        "texts": list(extra_texts(method.extras)),
     }
 
 

@@ -1,0 +1,154 @@
+"""Tables: units in the head, digits by the interval, extras of the result without a change to the report."""
+
+import math
+
+import pytest
+
+from runner.report.extras import extra_tables, extra_texts
+from runner.report.facts import AtTemperature, Estimate, Facts, Knee, MethodFacts, PartFacts
+from runner.report.tables import budget_table, knee_tables, temperature_table
+
+FACTS = Facts("title", 0.95, True, ())
+NAN = math.nan
+
+
+def _part(rated, *knees):
+    method = MethodFacts("pulse", None, (), knees, (), {})
+    return PartFacts(0, "part_00", "P", "", rated, (method,), (), {}), method
+
+
+def _knee(drop, value=8.24, low=8.20, high=8.28, status="measured", temperature=25.1):
+    return Knee(temperature, drop, "same temperature", status, Estimate(value, low, high))
+
+
+def test_the_saturation_table_has_a_group_of_columns_for_each_drop():
+    part, method = _part(6.0, _knee(0.1, 6.9, 6.87, 6.93), _knee(0.3))
+    (table,) = knee_tables(FACTS, part, method)
+    assert table.title == "Saturation current of P (A), pulse method"
+    assert table.groups == (("", 1), ("10 % drop", 3), ("30 % drop", 3))
+    assert table.head == (
+        "Temperature (°C)",
+        "Isat",
+        "95 % interval",
+        "margin",
+        "Isat",
+        "95 % interval",
+        "margin",
+    )
+    assert table.rows == (
+        ("25.1", "6.900", "6.870 to 6.930", "+15.0 %", "8.240", "8.200 to 8.280", "+37.3 %"),
+    )
+
+
+def test_what_was_not_reached_is_written_so_with_the_bound():
+    part, method = _part(6.0, _knee(0.3, NAN, 10.0, NAN, "not reached"))
+    (table,) = knee_tables(FACTS, part, method)
+    assert table.rows == (("25.1", "not reached", "above 10.0", "over +67 %"),)
+
+
+def test_without_a_rating_there_is_no_margin():
+    part, method = _part(NAN, _knee(0.3))
+    (table,) = knee_tables(FACTS, part, method)
+    assert table.head == ("Temperature (°C)", "Isat", "95 % interval")
+    assert "Margin" not in table.note
+
+
+def test_a_drop_missing_at_one_temperature_leaves_a_dash():
+    part, method = _part(NAN, _knee(0.1), _knee(0.3, temperature=85.0))
+    (table,) = knee_tables(FACTS, part, method)
+    assert table.rows[0] == ("25.1", "8.240", "8.200 to 8.280", "–", "–")
+    assert table.rows[1] == ("85.0", "–", "–", "8.240", "8.200 to 8.280")
+
+
+def test_more_than_three_drops_go_into_further_tables():
+    part, method = _part(NAN, *(_knee(d / 10) for d in range(1, 6)))
+    tables = knee_tables(FACTS, part, method)
+    assert [[text for text, _ in t.groups[1:]] for t in tables] == [
+        ["10 % drop", "20 % drop", "30 % drop"],
+        ["40 % drop", "50 % drop"],
+    ]
+
+
+def test_one_prefix_serves_a_column():
+    entries = [
+        AtTemperature(-40.0, Estimate(0.9e-3, 0.89e-3, 0.91e-3)),
+        AtTemperature(25.0, Estimate(0.018, 0.0179, 0.0181)),
+    ]
+    table = temperature_table(FACTS, "Winding resistance", entries, "ohm")
+    assert table.head == ("Temperature (°C)", "Winding resistance (mΩ)", "95 % interval (mΩ)")
+    assert table.rows == (("−40.0", "0.900", "0.890 to 0.910"), ("25.0", "18.00", "17.90 to 18.10"))
+
+
+def test_a_budget_lists_its_contributions_by_size_and_combines_them():
+    """Two independent contributions of 3 mA and 4 mA combine to 5 mA; their shares are 9/25 and 16/25."""
+    table = budget_table(
+        {
+            "temperature_degC": 25.1, "drop": 0.3, "ampere": 8.2,
+            "contributions": [
+                {"name": "noise", "standard_uncertainty": 0.003},
+                {"name": "shunt", "standard_uncertainty": 0.004},
+                {"name": "nothing", "standard_uncertainty": 0.0},
+            ],
+        }
+    )  # fmt: skip
+    assert table.title == "Uncertainty of the saturation current at 30 % drop, 25.1 °C"
+    assert table.rows == (
+        ("shunt", "4.0", "64.0 %"),
+        ("noise", "3.0", "36.0 %"),
+        ("combined", "5.0", "100.0 %"),
+    )
+
+
+def test_a_budget_without_contributions_is_no_table():
+    assert budget_table({"temperature_degC": 25.0, "drop": 0.3, "contributions": []}) is None
+
+
+@pytest.mark.parametrize(
+    ("extras", "title", "head", "row"),
+    [
+        (
+            {"core_view": [{"temperature_degC": 25.1, "drop": 0.3, "tesla": 0.3456, "low": 0.3446, "high": 0.3466,
+                            "relative_permeability": 60.123}]},
+            "Seen from the core",
+            ("Temperature (°C)", "Drop", "Flux density (mT)", "95 % interval (mT)", "Relative permeability"),
+            ("25.1", "30 %", "345.6", "344.6 to 346.6", "60.12"),
+        ),
+        (
+            {"derating": [{"temperature_degC": 125.0, "guard_band": 0.2, "ampere": 5.459}]},
+            "Derating: largest current advised",
+            ("Temperature (°C)", "Guard band", "Current (A)"),
+            ("125.0", "20.0 %", "5.459"),
+        ),
+        (
+            {"a_new_study": {"shots": 12, "remembers": True, "note": "first shot lower", "ampere": None}},
+            "A new study",
+            ("Shots", "Remembers", "Note", "Current (A)"),
+            ("12", "yes", "first shot lower", "–"),
+        ),
+        (
+            {"margin": [{"drop": 0.3, "fraction": 0.15, "low": 0.14, "high": 0.16}]},
+            "Margin to the rated current",
+            ("Drop", "Fraction (%)", "95 % interval (%)"),
+            ("30 %", "15.0", "14.0 to 16.0"),
+        ),
+    ],
+    ids=["core", "derating", "unknown", "margin"],
+)  # fmt: skip
+def test_an_extra_becomes_a_table_by_its_keys(extras, title, head, row):
+    (table,) = extra_tables(extras, 0.95)
+    assert (table.title, table.head, table.rows[0]) == (title, head, row)
+
+
+@pytest.mark.parametrize("value", [[], [1, 2], "text", 3.0, None, [{}], [{"nested": {"a": 1}}]])
+def test_what_is_no_list_of_records_makes_no_table(value):
+    assert list(extra_tables({"extra": value, "saturation_current": [{"ampere": 1.0}]}, 0.95)) == []
+
+
+def test_sentences_and_single_numbers_are_told():
+    extras = {
+        "remark": "It remembers.",
+        "left_out_error": 0.0123456,
+        "is_monotone": True,
+        "sentences": "shown elsewhere",
+    }
+    assert list(extra_texts(extras)) == ["It remembers.", "Left out error: 0.01235.", "Is monotone: yes."]
