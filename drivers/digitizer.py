@@ -92,6 +92,11 @@ class Digitizer(Instrument):
         super().__init__(session, dialect)
         self._setup: DigitizerSetup | None = None
         self._scaling: Scaling | None = None
+        self._set_after = 0  # how many restarts there had been by then
+
+    def reset(self) -> None:
+        self._setup = None
+        super().reset()
 
     def set(self, setup: DigitizerSetup) -> DigitizerSetup:
         """Sets everything a capture depends on; returns what the instrument made of it."""
@@ -120,6 +125,7 @@ class Digitizer(Instrument):
             raise self._disagrees(f"asked for {setup}, it says that it is set to {accepted}")
         self._scaling = self._ask_scaling(accepted)
         self._setup = accepted
+        self._set_after = self._talk.restarts
         return accepted
 
     def arm(self) -> None:
@@ -130,9 +136,9 @@ class Digitizer(Instrument):
         """Both channels of the pulse since `arm`, in one round trip; None when no trigger came.
 
         Raises:
-            RuntimeError: `set` was not called, so nobody knows what the codes mean.
+            RuntimeError: `set` was not called, or not since a restart, so nobody knows what the codes mean.
         """
-        if self._setup is None or self._scaling is None:
+        if self._setup is None or self._scaling is None or self._set_after != self._talk.restarts:
             raise RuntimeError("a digitizer is set before anything is fetched from it")
         if not self._is_done():
             return None

@@ -111,6 +111,19 @@ def test_a_broken_exchange_is_followed_by_a_new_connection(
     assert session.reopened == 1
 
 
+def test_an_exchange_that_was_interrupted_is_out_of_step(
+    shipped: Shipped, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    # Ctrl-C between question and reply: the reply is still on its way when the safe state is asked for.
+    talk, session = supply(shipped, (MEASURE, f"11;22;{NONE};0"), (MEASURE, f"1;2;{NONE};0"))
+    with monkeypatch.context() as patch:
+        patch.setattr(session, "read_line", lambda: (_ for _ in ()).throw(KeyboardInterrupt))
+        with pytest.raises(KeyboardInterrupt):
+            talk.carry_out("measure")
+    assert talk.carry_out("measure").numbers == {"voltage": 1.0, "current": 2.0}
+    assert session.reopened == 1
+
+
 def test_a_line_without_reply_that_was_refused_is_told_at_the_next(shipped: Shipped) -> None:
     # Some instruments drop a whole line at its first error, the query for the error with it.
     talk, _ = supply(

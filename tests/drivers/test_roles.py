@@ -489,6 +489,20 @@ def test_settings_that_cannot_be_are_refused(role, reply: str) -> None:
         role("digitizer", (SET, reply + OK)).set(SETUP)
 
 
+def test_a_digitizer_that_restarted_has_to_be_set_anew(role) -> None:
+    arm = "ABOR;:INIT" + TAIL
+    digitizer = role(
+        "digitizer", (SET, SET_REPLY), (arm, '0,"";128'), (SET, SET_REPLY), (STATE, "0" + OK), (FETCH, both())
+    )
+    digitizer.set(SETUP)
+    with pytest.raises(Restarted):
+        digitizer.arm()
+    with pytest.raises(RuntimeError, match="set before"):
+        digitizer.fetch()
+    digitizer.set(SETUP)
+    assert digitizer.fetch() is not None
+
+
 def test_nothing_can_be_fetched_before_it_is_known_what_it_means(role) -> None:
     with pytest.raises(RuntimeError, match="set before"):
         role("digitizer").fetch()

@@ -4,6 +4,8 @@ import socket
 import time
 
 import pytest
+from pyvisa import constants
+from pyvisa.resources import TCPIPSocket
 
 from drivers import Disconnected, Garbled, NoReply, VisaSession
 
@@ -11,7 +13,7 @@ PATIENCE = 0.05  # s; how long these sessions wait for what will not come
 
 
 @pytest.fixture
-def session(request: pytest.FixtureRequest):
+def session():
     made = []
 
     def make(resource: str, terminator: bytes = b"\n", timeout: float = 5.0) -> VisaSession:
@@ -127,3 +129,44 @@ def test_a_closed_session_says_so_and_closes_twice(peer, session) -> None:
     talk.close()
     with pytest.raises(Disconnected, match="closed"):
         talk.write(b"A\n")
+
+
+# ---- by VISA calls alone, as with a library whose sockets cannot be seen
+
+
+@pytest.fixture
+def unseen(monkeypatch: pytest.MonkeyPatch) -> None:
+    by_visa = TCPIPSocket.set_visa_attribute
+
+    def without_nodelay(resource, attribute, value):  # which pyvisa-py, standing in for the library, refuses
+        if attribute != constants.ResourceAttribute.tcpip_nodelay:
+            by_visa(resource, attribute, value)
+
+    monkeypatch.setattr("drivers.visa._socket_below", lambda visa: None)
+    monkeypatch.setattr(TCPIPSocket, "set_visa_attribute", without_nodelay)
+
+
+@pytest.mark.usefixtures("unseen")
+@pytest.mark.parametrize("terminator", [b"\n", b"\r", b"\r\n"])
+def test_lines_and_blocks_come_by_visa_calls_alone(peer, session, terminator: bytes) -> None:
+    block = bytes(range(256)) * 40
+    talk = session(
+        peer(b"12.5" + terminator, b"#510240" + block + b";0" + terminator, b"a\rb\r\n").resource, terminator
+    )
+    talk.write(b"MEAS:VOLT?" + terminator)
+    assert talk.read_line() == b"12.5"
+    talk.write(b"TRAC?" + terminator)
+    assert talk.read_exactly(7) == b"#510240"
+    assert talk.read_exactly(len(block)) == block
+    assert talk.read_line() == b";0"
+
+
+@pytest.mark.usefixtures("unseen")
+def test_silence_is_no_reply_by_visa_calls_alone(peer, session) -> None:
+    talk = session(peer(b"", b"12\n").resource, timeout=PATIENCE)
+    talk.write(b"A\n")
+    with pytest.raises(NoReply, match="no reply to 'A'"):
+        talk.read_line()
+    talk.reopen()
+    talk.write(b"B\n")
+    assert talk.read_line() == b"12"
