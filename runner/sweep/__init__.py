@@ -6,6 +6,7 @@ never knows HDF5 or what extraction makes of a point.
 
 from runner.sweep.carry_out import Outcome, carry_out, new_run_folder
 from runner.sweep.clock import BenchClock, Clock, WallClock
+from runner.sweep.probe import Probed, probe
 from runner.sweep.progress import Progress, Watch
 from runner.sweep.resume import loaded_from_run
 
@@ -13,10 +14,12 @@ __all__ = [
     "BenchClock",
     "Clock",
     "Outcome",
+    "Probed",
     "Progress",
     "WallClock",
     "Watch",
     "carry_out",
     "loaded_from_run",
     "new_run_folder",
+    "probe",
 ]

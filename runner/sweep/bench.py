@@ -10,11 +10,8 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from typing import Any
 
-import numpy as np
-
 from drivers import (
     BiasSource,
-    Capture,
     Chamber,
     Digitizer,
     DigitizerSetup,
@@ -27,7 +24,6 @@ from drivers import (
     Supply,
     Thermometer,
 )
-from runner.arrays import FloatArray
 from runner.sweep.clock import Clock
 from runner.sweep.faults import BadReading
 from runner.sweep.moves import Move, State, after
@@ -68,22 +64,6 @@ class Ratings:
     path_relays: Mapping[str, int] = field(default_factory=dict)
 
 
-@dataclass(frozen=True, slots=True)
-class Shots:
-    """The captures of one point in volts and amperes, with what came before and after.
-
-    Attributes:
-        captures: as fetched.
-        times: of each capture's trigger [UTC s].
-        voltage, current: [repeats, n]; current by the shunt's nominal resistance.
-    """
-
-    captures: tuple[Capture, ...]
-    times: tuple[float, ...]
-    voltage: FloatArray
-    current: FloatArray
-
-
 class Bench:
     """Opened instruments and their state.
 
@@ -104,6 +84,7 @@ class Bench:
         self._rail = 0.0
         self._bias = 0.0
         self._width: float | None = None
+        self._trip: float | None = None
         self._setup: DigitizerSetup | None = None
         self._asked: DigitizerSetup | None = None
         self._signal: tuple[float, float] | None = None
@@ -212,6 +193,8 @@ class Bench:
         if role == "multiplexer" and self.state is State.WIRED:
             self._close_relays()
         elif role == "pulser":
+            if self._trip is not None:
+                self.pulser.protect(self._trip)
             if self._width is not None:
                 self.pulser.set(self._width)
             if self.state is State.CHARGED:
@@ -342,52 +325,38 @@ class Bench:
         self.state = state
         return report
 
-    # ---- measuring
+    # ---- what the measuring is set to; only what has changed is sent
 
-    def prepare_pulse(self, width: float, setup: DigitizerSetup) -> DigitizerSetup:
-        """Width and digitizer settings; only what has changed is sent. Gives the settings as read back."""
+    def set_pulse(self, width: float, setup: DigitizerSetup, trip: float) -> DigitizerSetup:
+        """Width, comparator level of the fixture [A] and digitizer settings. Gives the settings as read back."""
         if self._setup is None or self._asked != setup:
             self._setup = None
             self._setup = self.digitizer.set(setup)
             self._asked = setup
+        if self._trip != trip:
+            self._trip = None
+            self.pulser.protect(trip)
+            self._trip = trip
         if self._width != width:
             self._width = None
             self.pulser.set(width)
             self._width = width
         return self._setup
 
-    def shoot(self, repeats: int, rest: float, start: float) -> Shots | None:
-        """Recorded pulses, `rest` [s] apart; None if a trigger was missed. `start` is the time now [UTC s]."""
-        self.state = after(self.state, Move.FIRE)
-        captures, times = [], []
-        for shot in range(repeats):
-            if shot:
-                start = self.clock.sleep(rest)
-            self.digitizer.arm()
-            self.pulser.fire()
-            capture = self.digitizer.fetch()
-            if capture is None:
-                return None
-            captures.append(capture)
-            times.append(start)
-        voltage = np.stack([one.voltage * one.voltage_scale + one.voltage_offset for one in captures])
-        shunt = np.stack([one.shunt * one.shunt_scale + one.shunt_offset for one in captures])
-        return Shots(tuple(captures), tuple(times), voltage, shunt / self.ratings.shunt)
-
-    def condition(self, pulses: int, rest: float) -> float:
-        """Pulses that nobody records; gives the time afterwards [UTC s], NaN if there were none."""
-        self.state = after(self.state, Move.FIRE)
-        now = math.nan
-        for _ in range(pulses):
-            self.pulser.fire()
-            now = self.clock.sleep(rest)
-        return now
-
-    def signal(self, frequency: float, level: float) -> None:
+    def set_signal(self, frequency: float, level: float) -> None:
         """Small signal of the bias method."""
         if self._signal != (frequency, level):
+            self._signal = None
             self.lcr.set(frequency, level)
             self._signal = (frequency, level)
+
+    def may_fire(self) -> None:
+        """Make sure that a pulse is legal now.
+
+        Raises:
+            IllegalMove: the bank is not charged on the pulse path.
+        """
+        self.state = after(self.state, Move.FIRE)
 
     def _close_relays(self) -> None:
         if self.multiplexer is None:

@@ -87,7 +87,7 @@ class _Series:
         bench = self.night.bench
         bench.rest()
         bench.wire(self.spec.channel, "bias")
-        bench.signal(self.plan.signal.frequency, self.plan.signal.level)
+        bench.set_signal(self.plan.signal.frequency, self.plan.signal.level)
         bench.bias(0.0)
 
     def go(self, points: Sequence[Point]) -> None:

@@ -67,10 +67,14 @@ class _Climb:
         self.pulse, self.spec = plan.pulse, plan.parts[part]
         self.resistance = resistance
         nominal = self.spec.resistance_at(night.setpoint_degC)
-        self.fixture = PulseFixture(
-            night.bench, night.loaded, part, nominal if math.isnan(resistance) else resistance
-        )
         self.limits = night.pulse_limits(part)
+        self.fixture = PulseFixture(
+            night.bench,
+            night.loaded,
+            part,
+            resistance=nominal if math.isnan(resistance) else resistance,
+            limit=self.limits.current,
+        )
         stop = self.pulse.stop_at
         self.stop = StopAt() if stop is None else StopAt(stop.current, stop.drop)
         self.last: Look | None = None
@@ -201,6 +205,8 @@ class _Climb:
             self.initial_slope = look.start_slope
         hot = self.night.watch_body(self.part, seen.body_degC, self.body_degC)
         self.body_degC = seen.body_degC
+        if look.peak >= self.fixture.trip:
+            return f"{look.peak:.3g} A: the fixture's comparator stands at {self.fixture.trip:.3g} A"
         if seen.clipped[1]:
             return "current beyond the digitizer's largest range; wider pulses cannot be predicted"
         return hot

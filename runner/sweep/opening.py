@@ -92,6 +92,14 @@ class VisaSite:
     def resources(self) -> Mapping[str, str]:
         return {reach.role: reach.resource for reach in self._reaches}
 
+    def open(self, role: str) -> Any:
+        """Open one instrument.
+
+        Raises:
+            InstrumentError: nobody answers.
+        """
+        return next(reach for reach in self._reaches if reach.role == role).open()
+
     def open_all(self) -> tuple[dict[str, Any], list[InstrumentError]]:
         opened: dict[str, Any] = {}
         lost: list[InstrumentError] = []

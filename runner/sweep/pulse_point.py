@@ -4,9 +4,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from drivers import DigitizerSetup
+from drivers import Capture, DigitizerSetup
+from runner.arrays import FloatArray
 from runner.plan import LoadedPlan
-from runner.sweep.bench import Bench, Shots
+from runner.sweep.bench import Bench
 from runner.sweep.faults import BadReading
 from runner.sweep.look import Look, look_at
 from runner.sweep.moves import State
@@ -14,7 +15,26 @@ from runner.sweep.ranges import choose, next_larger
 from runner.sweep.retry import Kind
 
 _SHORTEST_SAMPLES = 40  # of a pulse that can be looked at
+_COMPARATOR_DELAY = 100e-9  # s from a current above the fixture's comparator level to an open switch
+_SHORTED = 0.05  # of the nominal inductance, left by shorted turns
+_LOWEST_TRIP = 0.5  # of the limit; below that the comparator would be in the way of ordinary pulses
 _MOST_ENLARGED = 2  # larger ranges tried at one point
+
+
+@dataclass(frozen=True, slots=True)
+class Shots:
+    """The captures of one point in volts and amperes, with what came before and after.
+
+    Attributes:
+        captures: as fetched.
+        times: of each capture's trigger [UTC s].
+        voltage, current: [repeats, n]; current by the shunt's nominal resistance.
+    """
+
+    captures: tuple[Capture, ...]
+    times: tuple[float, ...]
+    voltage: FloatArray
+    current: FloatArray
 
 
 @dataclass(frozen=True, slots=True)
@@ -48,9 +68,12 @@ class PulseFixture:
         loaded: plan and bench file.
         part: index.
         resistance: of the winding, about [ohm].
+        limit: largest current of a pulse on this part [A].
     """
 
-    def __init__(self, bench: Bench, loaded: LoadedPlan, part: int, resistance: float) -> None:
+    def __init__(
+        self, bench: Bench, loaded: LoadedPlan, part: int, *, resistance: float, limit: float
+    ) -> None:
         assert loaded.plan.pulse is not None
         assert loaded.bench.digitizer is not None
         self._bench = bench
@@ -58,6 +81,7 @@ class PulseFixture:
         self._digitizer = loaded.bench.digitizer
         self._channel = loaded.plan.parts[part].channel
         self._resistance = resistance
+        self.trip = trip_level(limit, rail=self._pulse.rail, inductance=loaded.plan.parts[part].inductance)
         self._samples = self._digitizer.samples
         self._pretrigger = max(round(self._digitizer.pretrigger * self._samples), 1)
         self._least = (0.0, 0.0)  # ranges found too small are not gone back to in this climb
@@ -105,12 +129,13 @@ class PulseFixture:
         bench, rest = self._bench, self._pulse.rest
         if bench.state is not State.CHARGED:
             self.get_ready()
-        self._setup = bench.prepare_pulse(width, self._choose(width, current))
+        self._setup = bench.set_pulse(width, self._choose(width, current), self.trip)
+        bench.may_fire()
         start = now = bench.clock.now()
         if conditioning:
-            now = bench.condition(conditioning, rest)
+            now = self._condition(conditioning)
         rail_before = bench.bank()
-        shots = bench.shoot(repeats, rest, now)
+        shots = self._shoot(repeats, now)
         if shots is None:
             raise BadReading(Kind.NO_TRIGGER, "digitizer", f"no trigger in {self._setup.interval:g} s steps")
         rail_after = bench.bank()
@@ -142,6 +167,31 @@ class PulseFixture:
             body_degC=bench.body(self._channel),
             air_degC=bench.air(),
         )
+
+    def _condition(self, pulses: int) -> float:
+        """Pulses that nobody records; gives the time afterwards [UTC s]."""
+        for _ in range(pulses):
+            self._bench.pulser.fire()
+            now = self._bench.clock.sleep(self._pulse.rest)
+        return now
+
+    def _shoot(self, repeats: int, now: float) -> Shots | None:
+        """Recorded pulses, a rest apart; None if a trigger was missed. `now` is the time at the first [UTC s]."""
+        bench = self._bench
+        captures, times = [], []
+        for shot in range(repeats):
+            if shot:
+                now = bench.clock.sleep(self._pulse.rest)
+            bench.digitizer.arm()
+            bench.pulser.fire()
+            capture = bench.digitizer.fetch()
+            if capture is None:
+                return None
+            captures.append(capture)
+            times.append(now)
+        voltage = np.stack([one.voltage * one.voltage_scale + one.voltage_offset for one in captures])
+        shunt = np.stack([one.shunt * one.shunt_scale + one.shunt_offset for one in captures])
+        return Shots(tuple(captures), tuple(times), voltage, shunt / bench.ratings.shunt)
 
     def _choose(self, width: float, current: float) -> DigitizerSetup:
         ranges = self._digitizer.ranges
@@ -178,6 +228,15 @@ class PulseFixture:
     @staticmethod
     def _larger(size: float, offered: tuple[float, ...], *, is_clipped: bool) -> float:
         return (next_larger(size, offered) or size) if is_clipped else size
+
+
+def trip_level(limit: float, *, rail: float, inductance: float) -> float:
+    """Level of the fixture's comparator [A] that keeps a part which shorts in mid-pulse below `limit` [A].
+
+    Until the switch is open the current of a shorted part goes on rising by rail / inductance times the delay.
+    """
+    rise = rail * _COMPARATOR_DELAY / (_SHORTED * inductance)
+    return max(0.98 * limit - rise, _LOWEST_TRIP * limit)
 
 
 def _clipped(shots: Shots) -> tuple[int, int]:
