@@ -30,7 +30,7 @@ class Ledger:
 
     def saw_current(self, channel: int, ampere: float) -> None:
         ampere = abs(ampere)
-        if ampere > self.part_current.get(channel, 0.0):
+        if ampere > self.part_current.get(channel, -1.0):
             self.part_current[channel] = ampere
             self.current = max(self.current, ampere)
 
