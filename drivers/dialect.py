@@ -226,7 +226,9 @@ def _fault(where: tuple[str | int, ...], what: str) -> InitErrorDetails:
 def _nearest(name: str, known: Iterable[str]) -> str:
     known = list(known)
     close = difflib.get_close_matches(name, known, n=1)
-    return f"; did you mean {close[0]!r}?" if close else f"; there are {', '.join(known) or 'none'}"
+    if close:
+        return f"; did you mean {close[0]!r}?"
+    return f"; there are {', '.join(known)}" if known else "; nothing can be filled in here"
 
 
 def _intent_faults(dialect: Dialect) -> Iterator[InitErrorDetails]:

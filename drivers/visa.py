@@ -180,7 +180,7 @@ class VisaSession:
 
         Asked for more than there is, pyvisa-py waits for the rest, and takes the end of a stream for "nothing yet": it spins
         until its timeout. Asked for what is there it answers at once, in one read, a closed connection is found when it
-        happens, and no reply can be told from half of one.
+        happens, and silence can be told from half a reply.
         """
         assert self._socket is not None
         ready, _, _ = select.select([self._socket], [], [], self.timeout)

@@ -89,7 +89,7 @@ def test_a_whole_dialect_is_taken(base: dict) -> None:
             ("safe",),
             ["S={temperature_degC}"],
             ("safe", 0),
-            "unknown placeholder {temperature_degC}; there are none",
+            "unknown placeholder {temperature_degC}; nothing can",
         ),
         (
             CHAMBER,
