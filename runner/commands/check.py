@@ -10,8 +10,7 @@ from runner.errors import Fault, InputError
 if TYPE_CHECKING:
     from rich.table import Table
 
-    from runner.plan import Forecast, LoadedPlan
-    from runner.plan.forecast import LimitForecast
+    from runner.plan import Forecast, LimitForecast, LoadedPlan
 
 # Of a long list of widths, the first and last few tell the story; --json has them all.
 _SHOWN_WIDTHS = 8

@@ -52,11 +52,15 @@ def _standing(live: "Live", path: Path) -> list[str]:
     total = (
         len(expand(parse_plan(header.plan_bytes, header.plan_name)).points) if header.kind == "plan" else done
     )
-    is_alive = is_being_acquired(path)
+    is_alive, state = is_being_acquired(path), live.state()
+    unfired = (
+        f" ({total - done} of the plan were not needed: a climb or a search ended)" if done < total else ""
+    )
     lines = [
         header.title,
-        f"state     {live.state()}{' (a process is measuring now)' if is_alive else ''}",
-        f"points    {done} of {total} recorded, {doubtful} flagged, {unusable} not usable",
+        f"state     {state}{' (a process is measuring now)' if is_alive else ''}",
+        f"points    {done} of {total} recorded{unfired if state == 'finished' else ''}, "
+        f"{doubtful} flagged, {unusable} not usable",
         f"time      {span(live.last_time() - header.start)} of bench time in {len(live.sessions())} session(s), "
         f"last entry {_clock(live.last_time())} UTC",
     ]
@@ -77,7 +81,7 @@ def _standing(live: "Live", path: Path) -> list[str]:
     ]
     if len(air):
         lines.append(f"chamber   air {air[-1]:.1f} °C" + "".join(f", {text}" for text in bodies))
-    if not is_alive and done < total:
+    if not is_alive and state != "finished":
         lines.append(f"next      kneemap resume {path}")
     return lines
 

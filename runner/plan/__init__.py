@@ -7,7 +7,7 @@ one `InputError`, each located.
 
 from runner.plan.bench_file import Bench
 from runner.plan.captures_file import CapturesFile
-from runner.plan.forecast import Forecast, forecast
+from runner.plan.forecast import Forecast, LimitForecast, forecast
 from runner.plan.load import (
     LoadedBench,
     LoadedCaptures,
@@ -30,6 +30,7 @@ __all__ = [
     "CapturesFile",
     "Forecast",
     "Leg",
+    "LimitForecast",
     "LoadedBench",
     "LoadedCaptures",
     "LoadedPlan",

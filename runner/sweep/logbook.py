@@ -5,8 +5,7 @@ on the way to the safe state after that, `best_effort` events are tried and forg
 """
 
 from runner.errors import KneemapError
-from runner.record import EventRow, Journal
-from runner.record.rows import Level
+from runner.record import EventRow, Journal, Level
 from runner.sweep.clock import Clock
 
 # Kinds of events, so that a reader of the code sees what a reader of the record can filter by.
