@@ -1,0 +1,128 @@
+"""The bias method: readings of a meter with direct current through the part, corrected, and a curve through them.
+
+What it gives is the incremental (reversible) inductance, which is not the pulse method's differential inductance in a
+core with hysteresis: the two are never merged. Readings on the way up and on the way down are separate branches.
+"""
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+import numpy as np
+
+from runner.arrays import FloatArray
+from runner.extraction.calibration import Calibration
+from runner.extraction.curve import LegCurve, Scale, leg_curve
+from runner.extraction.curve_data import Noise
+from runner.extraction.curve_fit import Fit, fit_curve
+from runner.extraction.curve_model import CurveModel, Shape
+
+FEWEST_READINGS = 5
+ROWS = slice(None)
+
+
+@dataclass(frozen=True, slots=True)
+class Readings:
+    """Corrected readings of one branch: ``current`` [n] A, ``inductance`` [n] H, ``frequency`` [Hz]."""
+
+    current: FloatArray
+    inductance: FloatArray
+    frequency: float
+    temperature_degC: FloatArray
+
+
+def correct(
+    current: FloatArray,
+    inductance: FloatArray,
+    resistance: FloatArray,
+    frequency: FloatArray,
+    calibration: Calibration,
+) -> tuple[FloatArray, FloatArray]:
+    """Open, short and load correction of meter readings, and the gain of the bias source.
+
+    Args:
+        current: bias as read [n] A; ``inductance`` and ``resistance``: series values as read [n] H, ohm;
+            ``frequency`` [n] Hz.
+        calibration: ``meter_gain`` (load), ``fixture_inductance`` and ``fixture_resistance`` (short),
+            ``open_capacitance`` (open).
+
+    Returns:
+        Current through the part [n] A and its inductance [n] H.
+
+    The fixture is a series impedance with a capacitance across the part behind it: Z = 1/(1/(Z_m − Z_short) − jωC).
+    """
+    omega = 2 * np.pi * frequency
+    lossy = np.where(np.isfinite(resistance), resistance, 0.0)
+    gain = calibration.meter_gain.value
+    impedance = lossy + 1j * omega * inductance / gain
+    short = calibration.fixture_resistance.value + 1j * omega * calibration.fixture_inductance.value
+    part = 1.0 / (1.0 / (impedance - short) - 1j * omega * calibration.open_capacitance.value)
+    return np.abs(current) / calibration.bias_gain.value, np.asarray(part.imag / omega)
+
+
+@dataclass(frozen=True, slots=True)
+class ReadingData:
+    """Readings for the fit, scaled by the largest current and the first inductance."""
+
+    current: FloatArray
+    inductance: FloatArray
+    current_scale: float
+    inductance_scale: float
+
+    @property
+    def rows(self) -> int:
+        return len(self.current)
+
+    @property
+    def noise_known(self) -> bool:
+        return False
+
+    def pilot(self) -> tuple[FloatArray, FloatArray]:
+        fine = np.linspace(0.0, 1.0, 200)
+        curve = np.interp(fine, self.current, self.inductance)
+        return fine, np.concatenate([[0.0], np.cumsum(0.5 * (curve[1:] + curve[:-1]) * fine[1])])
+
+    def linearise(
+        self, model: CurveModel, shape: Shape, z: FloatArray
+    ) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """Residual inductances [n], their slopes [n, p], and L at the readings [n]."""
+        step = float(model.current[1])
+        cell = np.clip((self.current / step).astype(np.int64), 0, len(model.current) - 2)
+        f = self.current / step - cell
+        value = shape.inductance[cell] * (1 - f) + shape.inductance[cell + 1] * f
+        slopes = shape.inductance_slopes[cell] * (1 - f)[:, None] + shape.inductance_slopes[cell + 1] * f[:, None]
+        return self.inductance - value, np.column_stack([slopes, np.zeros(len(f))]), value
+
+    def noise(self, inductance: FloatArray) -> Noise:
+        """Independent noise in proportion to the reading; its size is for the fit to find (starting at 1e-4)."""
+        return Noise((np.diag(1e-4 * np.maximum(inductance, 0.01)),), (ROWS,))
+
+
+def bias_leg(readings: Readings, calibration: Calibration, *, temperature_degC: float) -> LegCurve | None:
+    """The curve through one branch; None with fewer than five different currents or without a span of current."""
+    order = np.argsort(readings.current, kind="stable")
+    current, inductance = readings.current[order], readings.inductance[order]
+    if len(np.unique(np.round(current, 6))) < FEWEST_READINGS or current[0] > 0.25 * current[-1]:
+        return None
+    top, first = float(current[-1]), float(inductance[0])
+    if not first > 0:
+        return None
+    data = ReadingData(current / top, inductance / first, top, first)
+    fit = fit_curve(data)
+    return leg_curve(
+        fit, Scale(top, first * top), temperature_degC=temperature_degC, shifts=_shifts(fit, data, calibration)
+    )
+
+
+def _shifts(fit: Fit, data: ReadingData, calibration: Calibration) -> Mapping[str, FloatArray]:
+    """Change of the parameters for plus one standard uncertainty of the meter's and the source's constants."""
+    meter = calibration.meter_gain.uncertainty / calibration.meter_gain.value
+    source = calibration.bias_gain.uncertainty / calibration.bias_gain.value
+    fall = np.gradient(fit.shape.inductance, fit.model.current)
+    steep = np.interp(data.current, fit.model.current, fall)
+    moves = {
+        "meter gain": -meter * data.inductance,
+        # A source that gives less than it reads by u: each reading belongs to a smaller current.
+        "bias current": source * data.current * steep,
+        "fixture inductance": -calibration.fixture_inductance.uncertainty / data.inductance_scale * np.ones(data.rows),
+    }
+    return {name: (fit.gain @ move)[:-1] for name, move in moves.items() if np.any(move)}

@@ -1,0 +1,187 @@
+"""One leg's curve in SI, with everything its uncertainty is made of.
+
+`LegCurve` answers L_d, L_s, λ and energy at currents inside what was measured, and `knee` the saturation current.
+A quantity's uncertainty has two kinds of parts: what this leg's own noise and model leave open (a covariance of the
+parameters), and named causes common to all legs (a vector of shifts of the parameters, one for each standard
+uncertainty of a calibration constant). Linear propagation, GUM 5.1.2; causes are independent of each other.
+"""
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+import numpy as np
+
+from runner.arrays import FloatArray
+from runner.extraction.curve_fit import Fit
+from runner.extraction.curve_model import running_integral
+
+
+@dataclass(frozen=True, slots=True)
+class Quantity:
+    """A value with its contributions, each one standard uncertainty with a sign where causes are shared.
+
+    ``own``: independent contributions of this leg alone (noise, model, skew...). ``shared``: change of the value for
+    plus one standard uncertainty of a constant that acts on every leg alike.
+    """
+
+    value: float
+    own: Mapping[str, float]
+    shared: Mapping[str, float]
+
+    @property
+    def uncertainty(self) -> float:
+        """Combined standard uncertainty."""
+        return float(np.sqrt(sum(u * u for u in (*self.own.values(), *self.shared.values()))))
+
+    def contributions(self) -> list[tuple[str, float]]:
+        """Name and standard uncertainty of each contribution, the largest first."""
+        every = [(name, abs(u)) for name, u in (*self.own.items(), *self.shared.items()) if u != 0.0]
+        return sorted(every, key=lambda item: -item[1])
+
+    def scaled(self, factor: float) -> "Quantity":
+        """The quantity times an exact factor."""
+        return Quantity(
+            self.value * factor,
+            {name: u * factor for name, u in self.own.items()},
+            {name: u * factor for name, u in self.shared.items()},
+        )
+
+    def with_own(self, name: str, uncertainty: float) -> "Quantity":
+        return Quantity(self.value, {**self.own, name: uncertainty}, self.shared)
+
+
+@dataclass(frozen=True, slots=True)
+class Scale:
+    """What the fit's units are in SI: ``current`` [A] and ``flux`` [Wb]."""
+
+    current: float
+    flux: float
+
+    @property
+    def inductance(self) -> float:
+        return self.flux / self.current
+
+
+@dataclass(frozen=True, slots=True)
+class LegCurve:
+    """The curve of one part at one temperature.
+
+    ``current`` [n] A from 0 to the largest measured, ``inductance`` [n] H (differential), ``flux`` [n] Wb; slopes
+    [n, p] are derivatives with respect to the fit's parameters; ``covariance`` (own, total), ``noise`` and
+    ``delay`` split it; ``shifts``: parameters' change per cause.
+    """
+
+    temperature_degC: float
+    current: FloatArray
+    inductance: FloatArray
+    flux: FloatArray
+    inductance_slopes: FloatArray
+    flux_slopes: FloatArray
+    covariance: FloatArray
+    noise: FloatArray
+    delay: FloatArray
+    shifts: Mapping[str, FloatArray]
+    fit: Fit
+
+    @property
+    def top(self) -> float:
+        """The largest current behind the curve [A]."""
+        return float(self.current[-1])
+
+    def initial_inductance(self) -> Quantity:
+        """L_d at zero current [H]."""
+        return self._quantity(float(self.inductance[0]), self.inductance_slopes[0])
+
+    def knee(self, drop: float, reference: Quantity | None = None) -> Quantity | None:
+        """Current [A] at which L_d has fallen by ``drop`` from ``reference`` [H] (this leg's own L_0 when None).
+
+        None where that was not reached inside the measured currents: never extrapolated.
+        """
+        ref = float(self.inductance[0]) if reference is None else reference.value
+        below = self.inductance - (1 - drop) * ref
+        if below[0] <= 0:
+            return Quantity(0.0, {}, {}) if reference is not None else None
+        crossing = np.flatnonzero(below <= 0)
+        if crossing.size == 0:
+            return None
+        k = int(crossing[0])
+        f = float(below[k - 1] / (below[k - 1] - below[k]))
+        step = self.current[k] - self.current[k - 1]
+        steepness = float(self.inductance[k] - self.inductance[k - 1]) / step
+        slopes = self.inductance_slopes[k - 1] * (1 - f) + self.inductance_slopes[k] * f
+        value = float(self.current[k - 1] + f * step)
+        if reference is None:
+            return self._quantity(value, -(slopes - (1 - drop) * self.inductance_slopes[0]) / steepness)
+        own = self._quantity(value, -slopes / steepness)
+        factor = (1 - drop) / steepness
+        shared = {
+            name: own.shared.get(name, 0.0) + factor * reference.shared.get(name, 0.0)
+            for name in {**own.shared, **reference.shared}
+        }
+        mine = dict(own.own)
+        other = float(np.sqrt(sum(u * u for u in reference.own.values())))
+        if other:
+            mine["reference inductance"] = abs(factor) * other
+        return Quantity(value, mine, shared)
+
+    def inductance_uncertainty(self) -> FloatArray:
+        """Standard uncertainty of L_d on the grid [n], all causes."""
+        return self._uncertainty(self.inductance_slopes)
+
+    def flux_uncertainty(self) -> FloatArray:
+        """Standard uncertainty of λ on the grid [n], all causes."""
+        return self._uncertainty(self.flux_slopes)
+
+    def secant_inductance(self) -> tuple[FloatArray, FloatArray]:
+        """L_s = λ/i and its standard uncertainty on the grid [n]; at zero current it is L_0."""
+        safe = np.where(self.current > 0, self.current, 1.0)
+        value = np.where(self.current > 0, self.flux / safe, self.inductance[0])
+        slopes = np.where(self.current[:, None] > 0, self.flux_slopes / safe[:, None], self.inductance_slopes)
+        return value, self._uncertainty(slopes)
+
+    def energy(self) -> tuple[FloatArray, FloatArray]:
+        """Stored energy ∫ i dλ [J] and its standard uncertainty on the grid [n]."""
+        step = float(self.current[1])
+        value = running_integral(self.current * self.inductance, step)
+        slopes = running_integral(self.current[:, None] * self.inductance_slopes, step)
+        return value, self._uncertainty(slopes)
+
+    def at(self, current: float) -> Quantity:
+        """L_d [H] at one current inside the measured range."""
+        step = float(self.current[1])
+        k = min(int(current / step), len(self.current) - 2)
+        f = current / step - k
+        slopes = self.inductance_slopes[k] * (1 - f) + self.inductance_slopes[k + 1] * f
+        return self._quantity(float(np.interp(current, self.current, self.inductance)), slopes)
+
+    def _uncertainty(self, slopes: FloatArray) -> FloatArray:
+        variance = np.einsum("ij,jk,ik->i", slopes, self.covariance, slopes)
+        for shift in self.shifts.values():
+            variance = variance + (slopes @ shift) ** 2
+        return np.sqrt(np.maximum(variance, 0.0))
+
+    def _quantity(self, value: float, slopes: FloatArray) -> Quantity:
+        noise = float(slopes @ self.noise @ slopes)
+        delay = max(0.0, float(slopes @ self.delay @ slopes))
+        model = max(0.0, float(slopes @ self.covariance @ slopes) - noise - delay)
+        own = {"noise": float(np.sqrt(max(noise, 0.0))), "model": float(np.sqrt(model)), "skew": float(np.sqrt(delay))}
+        return Quantity(value, own, {name: float(slopes @ shift) for name, shift in self.shifts.items()})
+
+
+def leg_curve(fit: Fit, scale: Scale, *, temperature_degC: float, shifts: Mapping[str, FloatArray]) -> LegCurve:
+    """Bring a fit into SI; ``shifts`` are the parameters' changes for one standard uncertainty of each cause."""
+    inside = fit.model.current <= 1.0 + 1e-12
+    covariance = fit.covariance[:-1, :-1]
+    return LegCurve(
+        temperature_degC=temperature_degC,
+        current=fit.model.current[inside] * scale.current,
+        inductance=fit.shape.inductance[inside] * scale.inductance,
+        flux=fit.shape.flux[inside] * scale.flux,
+        inductance_slopes=fit.shape.inductance_slopes[inside] * scale.inductance,
+        flux_slopes=fit.shape.flux_slopes[inside] * scale.flux,
+        covariance=covariance,
+        noise=fit.noise_covariance[:-1, :-1],
+        delay=covariance - fit.covariance_without_delay[:-1, :-1],
+        shifts=shifts,
+        fit=fit,
+    )

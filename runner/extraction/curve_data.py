@@ -1,0 +1,157 @@
+"""What the fit sees of a leg: bins of ramps, or readings of a meter, scaled, with the covariance of their noise.
+
+White noise of the current is independent from bin to bin. Noise of the voltage is not once it is integrated: per
+ramp, λ carries a random walk, a straight line from the uncertain voltage offset and a constant from the uncertain
+start; the current's own offset is one more constant. All are common to the bins of a ramp and independent between
+ramps, and enter as i = g(λ) through dg/dλ = 1/L. `whiten` makes independent unit-variance rows of them.
+"""
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from typing import Protocol
+
+import numpy as np
+from scipy.linalg import cholesky, solve_triangular
+
+from runner.arrays import FloatArray
+from runner.extraction.curve_model import CurveModel, Shape
+from runner.extraction.ramp import Ramp
+
+Whitener = Callable[[FloatArray], FloatArray]
+
+
+class FitData(Protocol):
+    """What `curve_fit` needs: n rows, their residuals about a curve, and their noise.
+
+    ``noise_known``: False lets the fit find the noise's size freely, True only lets it grow a little.
+    """
+
+    @property
+    def rows(self) -> int: ...
+    @property
+    def noise_known(self) -> bool: ...
+    def pilot(self) -> tuple[FloatArray, FloatArray]: ...
+    def linearise(
+        self, model: CurveModel, shape: Shape, z: FloatArray
+    ) -> tuple[FloatArray, FloatArray, FloatArray]: ...
+    def noise(self, inductance: FloatArray) -> "Noise": ...
+
+
+@dataclass(frozen=True, slots=True)
+class Noise:
+    """Covariance of the rows as Cholesky factors of blocks; ``members`` say which rows."""
+
+    factors: tuple[FloatArray, ...]
+    members: tuple[slice, ...]
+
+    @property
+    def log_determinant(self) -> float:
+        return 2 * sum(float(np.log(np.diag(factor)).sum()) for factor in self.factors)
+
+    def whiten(self, rows: FloatArray, *, transposed: bool = False) -> FloatArray:
+        """``rows`` [n, ...] divided by the square root of their covariance, or by its transpose."""
+        out = np.empty_like(rows)
+        for factor, member in zip(self.factors, self.members, strict=True):
+            out[member] = solve_triangular(
+                factor, rows[member], lower=True, trans="T" if transposed else "N", check_finite=False
+            )
+        return out
+
+
+@dataclass(frozen=True, slots=True)
+class CurveData:
+    """n bins of all ramps: scaled ``current``, ``flux``, ``spread`` (variance of λ in the bin), ``delay_flux`` (dλ per
+    scaled delay); ``members``: which rows belong to which ramp. ``current_scale`` [A], ``flux_scale`` [Wb],
+    ``delay_scale`` [s].
+    """
+
+    ramps: tuple[Ramp, ...]
+    members: tuple[slice, ...]
+    current: FloatArray
+    flux: FloatArray
+    charge: FloatArray
+    volt_seconds: FloatArray
+    spread: FloatArray
+    delay_flux: FloatArray
+    current_scale: float
+    flux_scale: float
+    delay_scale: float
+
+    @property
+    def inductance_scale(self) -> float:
+        return self.flux_scale / self.current_scale
+
+    @property
+    def rows(self) -> int:
+        return len(self.current)
+
+    @property
+    def noise_known(self) -> bool:
+        return True
+
+    def pilot(self) -> tuple[FloatArray, FloatArray]:
+        """A few hundred pairs of current and flux for the first look at the laws."""
+        order = np.argsort(self.flux)
+        groups = np.array_split(order, min(240, len(order)))
+        return (
+            np.array([self.current[g].mean() for g in groups]),
+            np.array([self.flux[g].mean() for g in groups]),
+        )
+
+    def linearise(
+        self, model: CurveModel, shape: Shape, z: FloatArray
+    ) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """Residual currents [n], slopes of the curve's current with respect to z [n, p], and L at the bins [n]."""
+        flux = self.flux + z[-1] * self.delay_flux
+        current, inductance, bend, slopes = model.invert(shape, flux)
+        # The mean current of a bin is not the current at its mean flux: half of g'' times the variance of λ inside.
+        residual = self.current - current + 0.5 * bend / inductance**3 * self.spread
+        return residual, np.column_stack([slopes, self.delay_flux / inductance]), inductance
+
+    def noise(self, inductance: FloatArray) -> Noise:
+        return Noise(tuple(factors(self, inductance)), self.members)
+
+
+def lay_out(ramps: Sequence[Ramp], resistances: Sequence[float]) -> CurveData:
+    """Scale the bins of ``ramps``; ``resistances`` [ohm] are the winding's, one a ramp."""
+    sizes = np.cumsum([0] + [len(ramp.current) for ramp in ramps])
+    members = tuple(slice(int(a), int(b)) for a, b in zip(sizes[:-1], sizes[1:], strict=True))
+    current = np.concatenate([ramp.current for ramp in ramps])
+    flux = np.concatenate([ramp.flux(r) for ramp, r in zip(ramps, resistances, strict=True)])
+    top = float(current.max())
+    low = current < 0.3 * top
+    slope = float(flux[low] @ current[low] / (current[low] @ current[low]))
+    flux_scale = slope * top
+    delay_scale = 1e-3 * max(ramp.width for ramp in ramps)
+    voltage = np.concatenate([ramp.voltage for ramp in ramps])
+    return CurveData(
+        tuple(ramps),
+        members,
+        current / top,
+        flux / flux_scale,
+        np.concatenate([ramp.charge for ramp in ramps]),
+        np.concatenate([ramp.volt_seconds for ramp in ramps]),
+        np.concatenate([ramp.spread for ramp in ramps]) / flux_scale**2,
+        voltage * delay_scale / flux_scale,
+        top,
+        flux_scale,
+        delay_scale,
+    )
+
+
+def factors(data: CurveData, inductance: FloatArray) -> list[FloatArray]:
+    """Cholesky factor of each ramp's covariance (scaled current), ``inductance`` [n] scaled at the bins."""
+    found = []
+    for ramp, rows in zip(data.ramps, data.members, strict=True):
+        slope = 1.0 / inductance[rows] / data.flux_scale  # scaled current per Wb
+        t = np.maximum(ramp.time, 0.0)
+        flux_part = ramp.walk**2 * np.minimum(t[:, None], t[None, :])
+        flux_part += ramp.slope_uncertainty**2 * np.outer(t, t) + ramp.start_uncertainty**2
+        covariance = flux_part * np.outer(slope, slope)
+        covariance += (ramp.level_uncertainty / data.current_scale) ** 2
+        if ramp.transient_time > 0:
+            fading = np.exp(-t / ramp.transient_time) * ramp.transient / data.current_scale
+            covariance += np.outer(fading, fading)
+        covariance[np.diag_indices(len(t))] += (ramp.noise / data.current_scale) ** 2
+        found.append(cholesky(covariance, lower=True, check_finite=False))
+    return found

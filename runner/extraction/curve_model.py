@@ -1,0 +1,85 @@
+"""The curve of one leg as a function of its parameters: L(i) on a grid, its integral λ(i), and i back from λ.
+
+Parameters z: those of a textbook law, the deviation at its knots, and one common delay between the channels. All is
+scaled: current by the largest one seen, inductance by the first slope, so that λ(1) is about one. The curve is built
+in current and fitted in current: i_k − g(λ_k), with g the inverse of λ(i) at the *fitted* curve, so noise in the
+current never sits on an abscissa.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from runner.arrays import FloatArray
+from runner.extraction.deviation import KNOTS, arc_length, knot_matrix
+from runner.extraction.laws import Law
+
+GRID = 1201
+BEYOND = 1.02  # the grid reaches a little further than the data, so that noise does not fall off its end
+
+
+@dataclass(frozen=True, slots=True)
+class Shape:
+    """L and λ on the grid [GRID], with derivatives with respect to law and deviation [GRID, p]."""
+
+    inductance: FloatArray
+    flux: FloatArray
+    inductance_slopes: FloatArray
+    flux_slopes: FloatArray
+
+
+@dataclass(frozen=True, slots=True)
+class CurveModel:
+    """A law with room for a deviation; ``current`` [GRID] is the scaled grid."""
+
+    law: Law
+    current: FloatArray
+    basis: FloatArray
+
+    @staticmethod
+    def around(law: Law, parameters: FloatArray) -> "CurveModel":
+        """The model whose deviation is laid out along the law at ``parameters``."""
+        current = np.linspace(0.0, BEYOND, GRID)
+        return CurveModel(law, current, knot_matrix(arc_length(current, law.inductance(current, parameters))))
+
+    @property
+    def parameters(self) -> int:
+        """Of law and deviation together."""
+        return self.law.parameters + KNOTS
+
+    def shape(self, z: FloatArray) -> Shape:
+        """The curve at z (law, then deviation)."""
+        split = self.law.parameters
+        factor = np.exp(np.clip(self.basis @ z[split:], -8.0, 8.0))
+        inductance = self.law.inductance(self.current, z[:split]) * factor
+        slopes = np.hstack(
+            [self.law.slopes(self.current, z[:split]) * factor[:, None], self.basis * inductance[:, None]]
+        )
+        step = float(self.current[1])
+        return Shape(inductance, running_integral(inductance, step), slopes, running_integral(slopes, step))
+
+    def invert(self, shape: Shape, flux: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+        """Current g, differential inductance, dL/di at ``flux`` [n], and dg/dz [n, p]; straight on beyond the grid."""
+        step = float(self.current[1])
+        cell = np.clip(np.searchsorted(shape.flux, flux) - 1, 0, GRID - 2)
+        low, high = shape.inductance[cell], shape.inductance[cell + 1]
+        bottom, top = shape.flux[cell], shape.flux[cell + 1]
+        f = (flux - bottom) / (top - bottom)
+        for _ in range(3):  # Newton on the cubic through λ and its slopes
+            value = bottom + f * (f - 1) ** 2 * step * low + f * f * (f - 1) * step * high
+            value = value + f * f * (3 - 2 * f) * (top - bottom)
+            f = f - (value - flux) / (step * (low + f * (high - low)))
+            f = np.clip(f, -50.0, 50.0)
+        inductance = np.maximum(low + f * (high - low), 0.02 * low)
+        inside = np.clip(f, 0.0, 1.0)[:, None]
+        slopes = shape.flux_slopes[cell] * (1 - inside) + shape.flux_slopes[cell + 1] * inside
+        return self.current[cell] + f * step, inductance, (high - low) / step, -slopes / inductance[:, None]
+
+
+def running_integral(values: FloatArray, step: float) -> FloatArray:
+    """Integral from the first grid point along axis 0, trapezoid rule with its end-slope correction (error h⁴)."""
+    slope = np.gradient(values, step, axis=0, edge_order=2)
+    out = np.zeros_like(values)
+    cells = 0.5 * step * (values[1:] + values[:-1]) - step * step / 12.0 * (slope[1:] - slope[:-1])
+    np.cumsum(cells, axis=0, out=out[1:])
+    return out

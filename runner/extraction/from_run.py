@@ -1,0 +1,286 @@
+"""From a run to its result: the one file of this room that reads a record and a plan.
+
+Captures are read point by point and averaged at once, so memory holds one point and the ramps of a leg.
+"""
+
+from collections.abc import Iterator
+from dataclasses import dataclass, field
+from datetime import UTC, datetime
+from typing import Any
+
+import numpy as np
+
+from runner.arrays import FloatArray, IntArray
+from runner.extraction.bench_constants import from_bench, from_captures_file
+from runner.extraction.bias import Readings, bias_leg, correct
+from runner.extraction.calibration import Calibration, Constant
+from runner.extraction.curve import LegCurve
+from runner.extraction.flags import Doubt, capture_doubts
+from runner.extraction.mean_capture import Setting, average
+from runner.extraction.part_result import Knees, Settings, find_knees, method_result
+from runner.extraction.pulse_leg import pulse_leg
+from runner.extraction.ramp import Ramp, make_ramp
+from runner.extraction.resistance import Resistance, winding_resistance
+from runner.plan import parse_bench, parse_captures, parse_plan
+from runner.record import SENTENCES, ExtractionTables, Flag, IsatTable, Run, SurfaceTable, is_acceptable
+from runner.versions import software
+
+PULSE, BIAS = 1, 2
+GRID = 161  # currents of a surface table
+
+
+@dataclass(frozen=True, slots=True)
+class PartFacts:
+    """What the plan says about a part."""
+
+    label: str
+    inductance: float
+    rated_current: float
+    resistance_20: float
+    core: Any = None
+
+
+@dataclass(slots=True)
+class MethodLegs:
+    """One part by one method: curves from cold to hot, their knees, resistances."""
+
+    legs: list[LegCurve] = field(default_factory=list)
+    resistances: list[Resistance] = field(default_factory=list)
+    peaks: list[FloatArray] = field(default_factory=list)
+    knees: Knees | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Extraction:
+    """What extraction made of a run: ``result`` as in result.json, ``tables`` for the record, curves for Python."""
+
+    result: dict[str, Any]
+    tables: ExtractionTables
+    methods: dict[tuple[int, str], MethodLegs]
+
+
+def extract(run: Run) -> Extraction:
+    """All parts and methods of a run.
+
+    Raises:
+        InputError: the run's own plan or bench cannot be read.
+    """
+    parts, calibration, settings = _read_plan(run)
+    points = run.points
+    surfaces: list[SurfaceTable] = []
+    isats: list[IsatTable] = []
+    rows: list[dict[str, Any]] = []
+    every: dict[tuple[int, str], MethodLegs] = {}
+    for index, facts in enumerate(parts):
+        doubts = list(_record_doubts(run, index))
+        methods: dict[str, Any] = {}
+        for name, number in (("pulse", PULSE), ("bias", BIAS)):
+            mine = np.flatnonzero((points["part"] == index) & (points["method"] == number))
+            if mine.size == 0:
+                continue
+            legs = _pulse_legs if number == PULSE else _bias_legs
+            method = legs(run, mine, facts, calibration, doubts)
+            if not method.legs:
+                continue
+            method.knees = find_knees(
+                method.legs,
+                settings,
+                nominal=facts.inductance,
+                temperature_uncertainty=calibration.body_offset.uncertainty,
+            )
+            kind = "differential" if number == PULSE else "incremental"
+            methods[name] = method_result(method.legs, method.knees, method.resistances, settings, kind)
+            every[index, name] = method
+            surfaces.append(_surface_table(index, name, method))
+            isats.append(_isat_table(index, name, method, settings))
+        rows.append(
+            {
+                "label": facts.label,
+                "inductance": facts.inductance,
+                "rated_current": facts.rated_current,
+                "methods": methods,
+                "flags": [doubt.as_row() for doubt in doubts],
+            }
+        )
+    program, _, version = software().partition(" ")
+    tables = ExtractionTables(
+        program=program,
+        version=version,
+        date=datetime.now(UTC).isoformat(timespec="seconds").replace("+00:00", "Z"),
+        settings={"coverage": settings.coverage, "reference": settings.reference, "drops": list(settings.drops)},
+        surfaces=tuple(surfaces),
+        isats=tuple(isats),
+    )
+    return Extraction({"coverage": settings.coverage, "parts": rows}, tables, every)
+
+
+def _read_plan(run: Run) -> tuple[list[PartFacts], Calibration, Settings]:
+    if run.kind == "captures":
+        captures = parse_captures(run.plan_bytes, run.plan_name)
+        parts, asked, calibration = (captures.part,), captures.extract, from_captures_file(captures)
+    else:
+        plan = parse_plan(run.plan_bytes, run.plan_name)
+        parts, asked = plan.parts, plan.extract
+        calibration = from_bench(parse_bench(run.bench_bytes, run.bench_name))
+    facts = [PartFacts(p.label, p.inductance, p.rated_current, p.resistance, p.core) for p in parts]
+    return facts, calibration, Settings(asked.drops, asked.reference, asked.coverage, asked.guard_band)
+
+
+def _record_doubts(run: Run, part: int) -> Iterator[Doubt]:
+    """The record's own flags, in its words; attempts that a later one replaced are left out."""
+    used = set(run.points["plan_index"].tolist())
+    points = run.all_points
+    for row in np.flatnonzero((points["part"] == part) & (points["quality"] != 0)):
+        quality = int(points["quality"][row])
+        if not is_acceptable(quality) and int(points["plan_index"][row]) in used:
+            continue
+        for flag in Flag:
+            if quality & flag:
+                yield Doubt(int(points["point"][row]), str(flag.name).lower(), SENTENCES[flag])
+
+
+def _by_leg(points: dict[str, Any], mine: IntArray) -> list[tuple[float, IntArray]]:
+    """Rows of each leg with the mean body temperature there, from cold to hot."""
+    groups = []
+    for leg in np.unique(points["leg"][mine]):
+        rows = mine[points["leg"][mine] == leg]
+        body = points["body_temperature"][rows]
+        body = np.where(np.isfinite(body), body, points["temperature_setpoint"][rows])
+        groups.append((float(np.mean(body)), rows))
+    return sorted(groups, key=lambda group: group[0])
+
+
+def _pulse_legs(
+    run: Run, mine: IntArray, facts: PartFacts, calibration: Calibration, doubts: list[Doubt]
+) -> MethodLegs:
+    points = run.points
+    method = MethodLegs()
+    for temperature, rows in _by_leg(points, mine):
+        at = temperature - calibration.body_offset.value
+        resistance = _resistance(points, rows, calibration, facts, at)
+        ramps = []
+        for row in rows.tolist():
+            ramp = _ramp(run, int(points["point"][row]), at, calibration, doubts)
+            if ramp is not None:
+                ramps.append(ramp)
+        if not ramps:
+            continue
+        method.legs.append(
+            pulse_leg(
+                ramps,
+                calibration,
+                temperature_degC=at,
+                resistance=resistance.ohm,
+                resistance_uncertainty=resistance.uncertainty,
+            )
+        )
+        method.resistances.append(resistance)
+        method.peaks.append(np.array([ramp.peak for ramp in ramps]))
+    return method
+
+
+def _ramp(
+    run: Run, point: int, temperature: float, calibration: Calibration, doubts: list[Doubt]
+) -> Ramp | None:
+    captures = run.captures(point)
+    if captures is None:
+        return None
+    detail = captures.setting
+    setting = Setting(
+        interval=float(detail["interval"]),
+        first=float(captures.time[0]),
+        v_scale=float(detail["v_scale"]),
+        v_offset=float(detail["v_offset"]),
+        i_scale=float(detail["i_scale"]),
+        i_offset=float(detail["i_offset"]),
+        code_min=float(detail["code_min"]),
+        code_max=float(detail["code_max"]),
+    )
+    mean = average(captures.voltage_codes, captures.current_codes, setting, guard=_guard(calibration))
+    ramp = make_ramp(mean, calibration, point=point, temperature_degC=temperature)
+    doubts += capture_doubts(point, mean, ramp)
+    return ramp
+
+
+def _guard(calibration: Calibration) -> float:
+    """Before the trigger, how much may already belong to the pulse [s]: a voltage channel that is early."""
+    return max(0.0, -calibration.skew.value)
+
+
+def _resistance(
+    points: dict[str, Any], rows: IntArray, calibration: Calibration, facts: PartFacts, at: float
+) -> Resistance:
+    body = points["body_temperature"][rows] - calibration.body_offset.value
+    return winding_resistance(
+        points["resistance"][rows], body, calibration, at_degC=at, nominal_20=facts.resistance_20
+    )
+
+
+def _bias_legs(
+    run: Run, mine: IntArray, facts: PartFacts, calibration: Calibration, doubts: list[Doubt]
+) -> MethodLegs:
+    points = run.points
+    method = MethodLegs()
+    for temperature, rows in _by_leg(points, mine):
+        at = temperature - calibration.body_offset.value
+        current, inductance = correct(
+            points["bias_current"][rows],
+            points["inductance"][rows],
+            points["ac_resistance"][rows],
+            points["test_frequency"][rows],
+            calibration,
+        )
+        good = np.isfinite(current) & np.isfinite(inductance)
+        top = int(np.argmax(np.where(good, current, -1.0)))
+        climbing = good & (np.arange(len(rows)) <= top)
+        leg = bias_leg(
+            Readings(current[climbing], inductance[climbing], float("nan"), np.full(climbing.sum(), at)),
+            calibration,
+            temperature_degC=at,
+        )
+        if leg is None:
+            doubts.append(Doubt(-1, "too_few_readings", f"bias at {at:.1f} °C: too few readings for a curve."))
+            continue
+        method.legs.append(leg)
+        cold = rows[np.abs(points["bias_current_setpoint"][rows]) <= 0.05 * np.nanmax(current)]
+        method.resistances.append(_resistance(points, cold if cold.size else rows, calibration, facts, at))
+        method.peaks.append(current[good])
+    return method
+
+
+def _surface_table(part: int, name: str, method: MethodLegs) -> SurfaceTable:
+    top = max(leg.top for leg in method.legs)
+    current = np.linspace(0.0, top, GRID)
+    shape = (len(method.legs), GRID)
+    inductance, errors = np.full(shape, np.nan), np.full(shape, np.nan)
+    count = np.zeros(shape, dtype=np.int64)
+    for k, (leg, peaks) in enumerate(zip(method.legs, method.peaks, strict=True)):
+        inside = current <= leg.top * (1 + 1e-9)
+        inductance[k, inside] = np.interp(current[inside], leg.current, leg.inductance)
+        errors[k, inside] = np.interp(current[inside], leg.current, leg.inductance_uncertainty())
+        if name == "pulse":
+            count[k] = (peaks[:, None] >= current[None, :]).sum(axis=0)
+        else:
+            spacing = top / max(1, len(np.unique(np.round(peaks, 3))) - 1)
+            count[k] = (np.abs(peaks[:, None] - current[None, :]) <= spacing / 2).sum(axis=0)
+        count[k, ~inside] = 0
+    at = np.array([leg.temperature_degC for leg in method.legs])
+    return SurfaceTable(part, name, at, current, inductance, errors, count, at)  # type: ignore[arg-type]
+
+
+def _isat_table(part: int, name: str, method: MethodLegs, settings: Settings) -> IsatTable:
+    assert method.knees is not None
+    found = [method.knees.found[drop] for drop in settings.drops]
+    return IsatTable(
+        part,
+        name,  # type: ignore[arg-type]
+        settings.drops,
+        np.array([leg.temperature_degC for leg in method.legs]),
+        np.array([[np.nan if q is None else q.value for q in row] for row in found]),
+        np.array([[np.nan if q is None else q.uncertainty for q in row] for row in found]),
+    )
+
+
+def constant(value: float, uncertainty: float = 0.0) -> Constant:
+    """A constant, for callers without a bench file."""
+    return Constant(value, uncertainty)

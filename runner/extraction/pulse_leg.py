@@ -1,0 +1,75 @@
+"""One leg by the pulse method: ramps in, curve out, with what each constant of the bench does to it."""
+
+from collections.abc import Sequence
+
+import numpy as np
+
+from runner.arrays import FloatArray
+from runner.extraction.calibration import Calibration
+from runner.extraction.curve import LegCurve, Scale, leg_curve
+from runner.extraction.curve_data import CurveData, lay_out
+from runner.extraction.curve_fit import Fit, fit_curve
+from runner.extraction.ramp import Ramp
+
+
+def pulse_leg(
+    ramps: Sequence[Ramp],
+    calibration: Calibration,
+    *,
+    temperature_degC: float,
+    resistance: float,
+    resistance_uncertainty: float,
+) -> LegCurve:
+    """Fit one leg.
+
+    Args:
+        ramps: all widths of one part at one temperature, at least one.
+        calibration: of the bench.
+        temperature_degC: of the part; the curve's coordinate.
+        resistance, resistance_uncertainty: of the winding at that temperature [ohm].
+    """
+    data = lay_out(ramps, [resistance] * len(ramps))
+    fit = fit_curve(data, delay_sigma=delay_uncertainty(calibration) / data.delay_scale)
+    shifts = constant_shifts(fit, data, calibration, resistance_uncertainty)
+    return leg_curve(
+        fit, Scale(data.current_scale, data.flux_scale), temperature_degC=temperature_degC, shifts=shifts
+    )
+
+
+def delay_uncertainty(calibration: Calibration) -> float:
+    """Standard uncertainty [s] of the delay between flux and current: skew and shunt time constant.
+
+    An error of the shunt's inductance acts on anything slower than L/R like a delay, so both are one parameter of
+    the fit, with this as its prior; the data narrow it where they can.
+    """
+    return float(np.hypot(calibration.skew.uncertainty, calibration.shunt_inductance.uncertainty / calibration.shunt_now))
+
+
+def constant_shifts(
+    fit: Fit, data: CurveData, calibration: Calibration, resistance_uncertainty: float
+) -> dict[str, FloatArray]:
+    """Change of the fit's parameters for plus one standard uncertainty of each constant."""
+    per_flux = 1.0 / (fit.inductance_at_rows * data.flux_scale)
+    # A current scale that reads high by u: the true current and charge are smaller by u.
+    drop = data.volt_seconds - data.flux * data.flux_scale
+    scale = -data.current - per_flux * drop
+    moves = {name: u * scale for name, u in calibration.relative_current_uncertainty.items()}
+    gain = calibration.voltage_gain.uncertainty / calibration.voltage_gain.value
+    moves["voltage gain"] = gain * per_flux * data.volt_seconds
+    moves["winding resistance"] = resistance_uncertainty * per_flux * data.charge
+    moves |= _rounding(data)
+    return {name: (fit.gain @ move)[:-1] for name, move in moves.items() if np.any(move)}
+
+
+def _rounding(data: CurveData) -> dict[str, FloatArray]:
+    """What the digitizer's rounding does when the noise is too small to hide it: the first harmonic of the sawtooth
+    at two phases a quarter apart, each with the weight of an unknown phase (see `ramp.undithered`)."""
+    amplitude = np.zeros(data.rows)
+    angle = np.zeros(data.rows)
+    for ramp, rows in zip(data.ramps, data.members, strict=True):
+        if ramp.quantum > 0 and np.isfinite(ramp.dither):
+            quiet = float(np.exp(-2 * np.pi**2 * max(0.0, ramp.dither**2 - 1 / 12)))
+            amplitude[rows] = ramp.quantum / np.pi * quiet / data.current_scale
+            angle[rows] = 2 * np.pi * ramp.current / ramp.quantum
+    half = amplitude / np.sqrt(2.0)
+    return {"rounding (sine)": half * np.sin(angle), "rounding (cosine)": half * np.cos(angle)}
