@@ -2,7 +2,7 @@
 
 import json as json_module
 import sys
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -55,9 +55,29 @@ def print_result(result: Mapping[str, Any]) -> None:
     for part in result["parts"]:
         for method, numbers in part["methods"].items():
             console.print(isat_table(part["label"], method, numbers, coverage=result["coverage"]))
-        flags = part.get("flags", [])
-        for flag in flags[:12]:
-            where = "" if flag.get("point") is None else f"point {flag['point']}: "
-            console.print(f"  {where}{flag['flag']}: {flag['text']}", markup=False, highlight=False)
-        if len(flags) > 12:
-            console.print(f"  … and {len(flags) - 12} more flags, in the report", markup=False)
+        for line in flag_lines(part.get("flags", [])):
+            console.print(f"  {line}", markup=False)
+
+
+def flag_lines(flags: Sequence[Mapping[str, Any]]) -> list[str]:
+    """Flags of a part, points with the same flag and sentence told in one line."""
+    points: dict[tuple[str, str], list[int]] = {}
+    for flag in flags:
+        points.setdefault((flag["flag"], flag["text"]), [])
+        if flag.get("point") is not None:
+            points[flag["flag"], flag["text"]].append(int(flag["point"]))
+    return [
+        f"{name}: {text}" + (f" (points {_ranges(numbers)})" if numbers else "")
+        for (name, text), numbers in points.items()
+    ]
+
+
+def _ranges(numbers: Sequence[int]) -> str:
+    """Numbers with runs drawn together: ``3, 7–9``."""
+    runs: list[list[int]] = []
+    for number in sorted(set(numbers)):
+        if runs and number == runs[-1][1] + 1:
+            runs[-1][1] = number
+        else:
+            runs.append([number, number])
+    return ", ".join(str(first) if first == last else f"{first}–{last}" for first, last in runs)

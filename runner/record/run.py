@@ -71,8 +71,8 @@ def open_run(path: Path | str) -> "Run":
         acquired = record.is_file() and is_being_acquired(path)
         if not acquired and not is_current(path):
             return Run(consolidate(path))
-    elif not record.is_file():
-        raise not_a_run(path, f"is not a run folder: it has neither {RECORD} nor {JOURNAL}.")
+    if not record.is_file():
+        raise not_a_run(path, f"is not a run folder: it has neither a {RECORD} nor a begun {JOURNAL}.")
     return Run(record)
 
 
@@ -100,7 +100,7 @@ class Run:
         try:
             self._file = hdf.open_to_read(path)
         except OSError as error:
-            raise not_a_run(path, f"is not a record that can be read: {error}.") from error
+            raise not_a_run(path, f"is not a record that can be read ({error}); name a run folder or its record.h5.") from error
         try:
             state = self._file["entry/run_state"]
             version = int(state.attrs["layout_version"])
