@@ -13,7 +13,7 @@ from runner.arrays import FloatArray
 from runner.extraction.calibration import Calibration
 from runner.extraction.curve import LegCurve, Scale, leg_curve
 from runner.extraction.curve_data import Noise
-from runner.extraction.curve_fit import Fit, fit_curve
+from runner.extraction.curve_fit import COMMON, Fit, fit_curve
 from runner.extraction.curve_model import CurveModel, Shape
 
 FEWEST_READINGS = 5
@@ -76,6 +76,11 @@ class ReadingData:
     def noise_known(self) -> bool:
         return False
 
+    @property
+    def delay_sigmas(self) -> tuple[float, float]:
+        """A meter has no skew; the two parameters are held at nothing."""
+        return 1e-6, 1e-6
+
     def pilot(self) -> tuple[FloatArray, FloatArray]:
         fine = np.linspace(0.0, 1.0, 200)
         curve = np.interp(fine, self.current, self.inductance)
@@ -90,7 +95,7 @@ class ReadingData:
         f = self.current / step - cell
         value = shape.inductance[cell] * (1 - f) + shape.inductance[cell + 1] * f
         slopes = shape.inductance_slopes[cell] * (1 - f)[:, None] + shape.inductance_slopes[cell + 1] * f[:, None]
-        return self.inductance - value, np.column_stack([slopes, np.zeros(len(f))]), value
+        return self.inductance - value, np.column_stack([slopes, np.zeros((len(f), COMMON))]), value
 
     def noise(self, inductance: FloatArray) -> Noise:
         """Independent noise in proportion to the reading; its size is for the fit to find (starting at 1e-4)."""
@@ -125,4 +130,4 @@ def _shifts(fit: Fit, data: ReadingData, calibration: Calibration) -> Mapping[st
         "bias current": source * data.current * steep,
         "fixture inductance": -calibration.fixture_inductance.uncertainty / data.inductance_scale * np.ones(data.rows),
     }
-    return {name: (fit.gain @ move)[:-1] for name, move in moves.items() if np.any(move)}
+    return {name: (fit.gain @ move)[:-COMMON] for name, move in moves.items() if np.any(move)}

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from runner.arrays import FloatArray
-from runner.extraction.curve_fit import Fit
+from runner.extraction.curve_fit import COMMON, Fit
 from runner.extraction.curve_model import running_integral
 
 
@@ -171,7 +171,7 @@ class LegCurve:
 def leg_curve(fit: Fit, scale: Scale, *, temperature_degC: float, shifts: Mapping[str, FloatArray]) -> LegCurve:
     """Bring a fit into SI; ``shifts`` are the parameters' changes for one standard uncertainty of each cause."""
     inside = fit.model.current <= 1.0 + 1e-12
-    covariance = fit.covariance[:-1, :-1]
+    covariance = fit.covariance[:-COMMON, :-COMMON]
     return LegCurve(
         temperature_degC=temperature_degC,
         current=fit.model.current[inside] * scale.current,
@@ -180,8 +180,8 @@ def leg_curve(fit: Fit, scale: Scale, *, temperature_degC: float, shifts: Mappin
         inductance_slopes=fit.shape.inductance_slopes[inside] * scale.inductance,
         flux_slopes=fit.shape.flux_slopes[inside] * scale.flux,
         covariance=covariance,
-        noise=fit.noise_covariance[:-1, :-1],
-        delay=covariance - fit.covariance_without_delay[:-1, :-1],
+        noise=fit.noise_covariance[:-COMMON, :-COMMON],
+        delay=covariance - fit.covariance_without_delay[:-COMMON, :-COMMON],
         shifts=shifts,
         fit=fit,
     )

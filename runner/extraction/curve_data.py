@@ -30,6 +30,8 @@ class FitData(Protocol):
     def rows(self) -> int: ...
     @property
     def noise_known(self) -> bool: ...
+    @property
+    def delay_sigmas(self) -> tuple[float, float]: ...
     def pilot(self) -> tuple[FloatArray, FloatArray]: ...
     def linearise(
         self, model: CurveModel, shape: Shape, z: FloatArray
@@ -61,8 +63,9 @@ class Noise:
 @dataclass(frozen=True, slots=True)
 class CurveData:
     """n bins of all ramps: scaled ``current``, ``flux``, ``spread`` (variance of λ in the bin), ``delay_flux`` (dλ per
-    scaled delay); ``members``: which rows belong to which ramp. ``current_scale`` [A], ``flux_scale`` [Wb],
-    ``delay_scale`` [s].
+    scaled delay) and ``delay_current`` (di per scaled time constant of the shunt); ``members``: which rows belong to
+    which ramp. ``current_scale`` [A], ``flux_scale`` [Wb], ``delay_scale`` [s]. ``delay_sigmas``: scaled standard
+    uncertainties of skew and shunt time constant, the two common parameters of the fit.
     """
 
     ramps: tuple[Ramp, ...]
@@ -73,6 +76,8 @@ class CurveData:
     volt_seconds: FloatArray
     spread: FloatArray
     delay_flux: FloatArray
+    delay_current: FloatArray
+    delay_sigmas: tuple[float, float]
     current_scale: float
     flux_scale: float
     delay_scale: float
@@ -102,22 +107,27 @@ class CurveData:
         self, model: CurveModel, shape: Shape, z: FloatArray
     ) -> tuple[FloatArray, FloatArray, FloatArray]:
         """Residual currents [n], slopes of the curve's current with respect to z [n, p], and L at the bins [n]."""
-        flux = self.flux + z[-1] * self.delay_flux
+        flux = self.flux + z[-2] * self.delay_flux
         current, inductance, bend, slopes = model.invert(shape, flux)
         # The mean current of a bin is not the current at its mean flux: half of g'' times the variance of λ inside.
-        residual = self.current - current + 0.5 * bend / inductance**3 * self.spread
-        return residual, np.column_stack([slopes, self.delay_flux / inductance]), inductance
+        measured = self.current - z[-1] * self.delay_current
+        residual = measured - current + 0.5 * bend / inductance**3 * self.spread
+        return residual, np.column_stack([slopes, self.delay_flux / inductance, self.delay_current]), inductance
 
     def noise(self, inductance: FloatArray) -> Noise:
         return Noise(tuple(factors(self, inductance)), self.members)
 
 
-def lay_out(ramps: Sequence[Ramp], resistances: Sequence[float]) -> CurveData:
-    """Scale the bins of ``ramps``; ``resistances`` [ohm] are the winding's, one a ramp."""
+def lay_out(ramps: Sequence[Ramp], resistance: float, *, skew: float = 0.0, shunt_time: float = 0.0) -> CurveData:
+    """Scale the bins of ``ramps``.
+
+    ``resistance`` [ohm] of the winding; ``skew``, ``shunt_time``: standard uncertainties of the channels' skew
+    (infinite: to be found) and of the shunt's time constant [s].
+    """
     sizes = np.cumsum([0] + [len(ramp.current) for ramp in ramps])
     members = tuple(slice(int(a), int(b)) for a, b in zip(sizes[:-1], sizes[1:], strict=True))
     current = np.concatenate([ramp.current for ramp in ramps])
-    flux = np.concatenate([ramp.flux(r) for ramp, r in zip(ramps, resistances, strict=True)])
+    flux = np.concatenate([ramp.flux(resistance) for ramp in ramps])
     top = float(current.max())
     low = current < 0.3 * top
     slope = float(flux[low] @ current[low] / (current[low] @ current[low]))
@@ -133,6 +143,8 @@ def lay_out(ramps: Sequence[Ramp], resistances: Sequence[float]) -> CurveData:
         np.concatenate([ramp.volt_seconds for ramp in ramps]),
         np.concatenate([ramp.spread for ramp in ramps]) / flux_scale**2,
         voltage * delay_scale / flux_scale,
+        np.concatenate([ramp.lead for ramp in ramps]) * delay_scale / top,
+        (_bounded(skew / delay_scale), _bounded(shunt_time / delay_scale)),
         top,
         flux_scale,
         delay_scale,
@@ -149,9 +161,29 @@ def factors(data: CurveData, inductance: FloatArray) -> list[FloatArray]:
         flux_part += ramp.slope_uncertainty**2 * np.outer(t, t) + ramp.start_uncertainty**2
         covariance = flux_part * np.outer(slope, slope)
         covariance += (ramp.level_uncertainty / data.current_scale) ** 2
-        if ramp.transient_time > 0:
-            fading = np.exp(-t / ramp.transient_time) * ramp.transient / data.current_scale
+        if ramp.shunt_time > 0:
+            fading = np.exp(-t / ramp.shunt_time) * ramp.transient / data.current_scale
             covariance += np.outer(fading, fading)
-        covariance[np.diag_indices(len(t))] += (ramp.noise / data.current_scale) ** 2
+        covariance += ramp.noise_density / data.current_scale**2 * smoothed_noise(ramp.edges, ramp.shunt_time)
         found.append(cholesky(covariance, lower=True, check_finite=False))
     return found
+
+
+def smoothed_noise(edges: FloatArray, time_constant: float) -> FloatArray:
+    """Covariance of the bin means [m, m], 1/s, of white noise of unit density behind a first-order low-pass.
+
+    Correlation exp(−|t|/τ)/(2τ), integrated over both bins in closed form; without a low-pass 1/length on the diagonal.
+    """
+    lengths = np.diff(edges)
+    if time_constant < 1e-3 * float(lengths.min()):
+        return np.diag(1.0 / lengths)
+    fall = -np.expm1(-lengths / time_constant)
+    gap = np.maximum(edges[None, :-1] - edges[1:, None], 0.0)
+    half = np.triu(np.outer(fall, fall) * np.exp(-gap / time_constant) * time_constant / 2, 1)
+    covariance = half + half.T + np.diag(lengths - time_constant * fall)
+    return np.asarray(covariance / np.outer(lengths, lengths))
+
+
+def _bounded(sigma: float) -> float:
+    """A prior's width between "exact" and "unknown" that the algebra can bear."""
+    return float(np.clip(sigma, 1e-6, 1e3))

@@ -19,6 +19,7 @@ from runner.extraction.deviation import KNOTS, correlation
 from runner.extraction.laws import LAWS, PRIOR_MEAN, PRIOR_SIGMA, Law
 
 CANDIDATES = 2
+COMMON = 2  # skew and shunt time constant stand behind law and deviation in z
 TURNS = 8
 SMALLEST_SIZE = 1e-5
 # What is thought of the deviation before the data speak: mean and standard deviation of log size, log length (in
@@ -31,7 +32,7 @@ HYPER_HIGH = np.array([1.0, 1.0, 12.0])
 
 @dataclass(frozen=True, slots=True)
 class Fit:
-    """A fitted curve in scaled units; p parameters: law, deviation, delay.
+    """A fitted curve in scaled units; p parameters: law, deviation, skew, shunt time.
 
     ``covariance`` [p, p] of z; ``gain`` [p, n]: how z moves when the rows move; ``size``, ``length``,
     ``inflation``: what the evidence chose; ``misfit``: mean square of the whitened residuals.
@@ -55,16 +56,13 @@ class Fit:
     evidence: float
 
 
-def fit_curve(data: FitData, *, delay_sigma: float = 1e-6) -> Fit:
+def fit_curve(data: FitData) -> Fit:
     """Fit one curve through all rows of a leg.
 
-    Args:
-        data: ramps or readings of one part at one temperature.
-        delay_sigma: standard uncertainty of the channels' common delay, in the data's own scale.
+    ``data``: ramps or readings of one part at one temperature.
     """
     pilots = sorted((_pilot(law, data) for law in LAWS), key=lambda found: found[1])
-    delay = min(max(delay_sigma, 1e-6), 1e3)
-    fits = [_fit_law(law, data, start, delay) for start, _, law in pilots[:CANDIDATES]]
+    fits = [_fit_law(law, data, start) for start, _, law in pilots[:CANDIDATES]]
     return max(fits, key=lambda fit: fit.evidence)
 
 
@@ -92,17 +90,17 @@ def _pilot(law: Law, data: FitData) -> tuple[FloatArray, float, Law]:
     return best
 
 
-def _fit_law(law: Law, data: FitData, start: FloatArray, delay_sigma: float) -> Fit:
+def _fit_law(law: Law, data: FitData, start: FloatArray) -> Fit:
     model = CurveModel.around(law, start)
-    p = model.parameters + 1
+    p = model.parameters + COMMON
     split = law.parameters
-    z = np.concatenate([start, np.zeros(KNOTS + 1)])
+    z = np.concatenate([start, np.zeros(KNOTS + COMMON)])
     prior_mean = np.zeros(p)
     prior_mean[:split] = PRIOR_MEAN[:split]
     prior = np.zeros(p)
     prior[:split] = PRIOR_SIGMA[:split] ** -2.0
-    prior[-1] = delay_sigma**-2.0
-    shape = model.shape(z[:-1])
+    prior[-COMMON:] = np.array(data.delay_sigmas) ** -2.0
+    shape = model.shape(z[:-COMMON])
     noise = data.noise(data.linearise(model, shape, z)[2])
     hyper = np.array([-4.0, -1.2, 0.3])
     value = np.inf
@@ -125,7 +123,7 @@ def _fit_law(law: Law, data: FitData, start: FloatArray, delay_sigma: float) -> 
                 break
             step /= 2
         z = trial
-        shape = model.shape(z[:-1])
+        shape = model.shape(z[:-COMMON])
         previous, value = value, problem.evidence(hyper) + noise.log_determinant
         if turn > 3 and step == 1.0 and abs(before - after) < 0.02 and abs(previous - value) < 0.05:
             break
@@ -145,7 +143,7 @@ def _objective(
     precision: FloatArray,
     mean: FloatArray,
 ) -> float:
-    shape = model.shape(z[:-1])
+    shape = model.shape(z[:-COMMON])
     if not np.all(np.isfinite(shape.flux)) or not np.all(np.diff(shape.flux) > 0):
         return np.inf
     residual, _, _ = data.linearise(model, shape, z)
@@ -257,11 +255,11 @@ def _finish(
     weight = float(np.exp(-2 * hyper[2]))
     p = len(problem.z)
     covariance = way @ cho_solve(factor, np.eye(p)) @ way.T
-    # The same with the delay held: what the delay adds is told apart from noise and model.
+    # The same with the delays held: what they add is told apart from noise and model.
     held = np.zeros_like(covariance)
-    unit_prior = np.where((np.arange(p) >= problem.split) & (np.arange(p) < p - 1), 1.0, problem.prior)
-    h = (way.T @ normal[0] @ way * weight + np.diag(unit_prior))[:-1, :-1]
-    held[:-1, :-1] = way[:-1, :-1] @ np.linalg.inv(h) @ way[:-1, :-1].T
+    unit_prior = np.where((np.arange(p) >= problem.split) & (np.arange(p) < p - COMMON), 1.0, problem.prior)
+    h = (way.T @ normal[0] @ way * weight + np.diag(unit_prior))[:-COMMON, :-COMMON]
+    held[:-COMMON, :-COMMON] = way[:-COMMON, :-COMMON] @ np.linalg.inv(h) @ way[:-COMMON, :-COMMON].T
     gain = covariance @ noise.whiten(problem.j, transposed=True).T * weight
     return Fit(
         data=data,

@@ -8,7 +8,7 @@ from runner.arrays import FloatArray
 from runner.extraction.calibration import Calibration
 from runner.extraction.curve import LegCurve, Scale, leg_curve
 from runner.extraction.curve_data import CurveData, lay_out
-from runner.extraction.curve_fit import Fit, fit_curve
+from runner.extraction.curve_fit import COMMON, Fit, fit_curve
 from runner.extraction.ramp import Ramp
 
 
@@ -28,21 +28,17 @@ def pulse_leg(
         temperature_degC: of the part; the curve's coordinate.
         resistance, resistance_uncertainty: of the winding at that temperature [ohm].
     """
-    data = lay_out(ramps, [resistance] * len(ramps))
-    fit = fit_curve(data, delay_sigma=delay_uncertainty(calibration) / data.delay_scale)
+    data = lay_out(
+        ramps,
+        resistance,
+        skew=calibration.skew.uncertainty,
+        shunt_time=calibration.shunt_inductance.uncertainty / calibration.shunt_now,
+    )
+    fit = fit_curve(data)
     shifts = constant_shifts(fit, data, calibration, resistance_uncertainty)
     return leg_curve(
         fit, Scale(data.current_scale, data.flux_scale), temperature_degC=temperature_degC, shifts=shifts
     )
-
-
-def delay_uncertainty(calibration: Calibration) -> float:
-    """Standard uncertainty [s] of the delay between flux and current: skew and shunt time constant.
-
-    An error of the shunt's inductance acts on anything slower than L/R like a delay, so both are one parameter of
-    the fit, with this as its prior; the data narrow it where they can.
-    """
-    return float(np.hypot(calibration.skew.uncertainty, calibration.shunt_inductance.uncertainty / calibration.shunt_now))
 
 
 def constant_shifts(
@@ -58,7 +54,7 @@ def constant_shifts(
     moves["voltage gain"] = gain * per_flux * data.volt_seconds
     moves["winding resistance"] = resistance_uncertainty * per_flux * data.charge
     moves |= _rounding(data)
-    return {name: (fit.gain @ move)[:-1] for name, move in moves.items() if np.any(move)}
+    return {name: (fit.gain @ move)[:-COMMON] for name, move in moves.items() if np.any(move)}
 
 
 def _rounding(data: CurveData) -> dict[str, FloatArray]:

@@ -25,10 +25,11 @@ class Ramp:
     """The rising part of one pulse in m bins (means over equal numbers of samples).
 
     ``time`` s from the start of the pulse; ``volt_seconds`` ∫v dt [V s]; ``charge`` ∫i dt [A s]; ``current`` [A];
-    ``voltage`` [V]; ``spread``: variance of λ inside a bin [Wb²]; ``noise``: of the bin's mean current [A].
-    ``walk``: standard deviation of ∫v dt grows as walk·√t [V s/√s]; ``slope_uncertainty`` [V] of the voltage offset,
+    ``voltage`` [V]; ``spread``: variance of λ inside a bin [Wb²]; ``lead``: what one second more of the shunt's L/R
+    would take off the current [A/s]. ``edges`` [m + 1] s of the bins. ``noise_density``: white noise of the current
+    [A² s], smoothed over ``shunt_time`` [s] by the undoing of the shunt's inductance. ``walk``: standard deviation of ∫v dt grows as walk·√t [V s/√s]; ``slope_uncertainty`` [V] of the voltage offset,
     ``level_uncertainty`` [A] of the current offset, ``start_uncertainty`` [V s]. The shunt's inductive step falls between
-    two samples: that leaves ``transient`` [A] decaying with ``transient_time`` [s]. ``quantum``: step of the current's
+    two samples: that leaves ``transient`` [A] decaying with ``shunt_time``. ``quantum``: step of the current's
     codes [A], ``dither``: rms noise in steps. ``width`` [s], ``peak`` [A].
     """
 
@@ -40,13 +41,15 @@ class Ramp:
     current: FloatArray
     voltage: FloatArray
     spread: FloatArray
-    noise: FloatArray
+    lead: FloatArray
+    edges: FloatArray
+    noise_density: float
+    shunt_time: float
     walk: float
     slope_uncertainty: float
     level_uncertainty: float
     start_uncertainty: float
     transient: float
-    transient_time: float
     quantum: float
     dither: float
     width: float
@@ -66,7 +69,10 @@ def make_ramp(
         return None
     step = mean.setting.interval
     to_ampere = calibration.nominal_shunt / (calibration.shunt_gain.value * calibration.shunt_now)
-    current = undo_shunt_inductance(mean.current * to_ampere, step, calibration.shunt_time_constant)
+    reading = mean.current * to_ampere
+    time_constant = calibration.shunt_time_constant
+    current = undo_shunt_inductance(reading, step, time_constant)
+    lead = shunt_lead(reading, current, step, time_constant)
     voltage = mean.voltage / calibration.voltage_gain.value
     start, stop = pulse_edges(voltage)
     late = calibration.skew.value if np.isfinite(calibration.skew.uncertainty) else 0.0
@@ -111,19 +117,33 @@ def make_ramp(
         current=binned(current),
         voltage=binned(voltage),
         spread=np.asarray(spread),
-        noise=i_noise / np.sqrt(repeats * sizes),
+        lead=binned(lead),
+        edges=time[edges - 1] + step / 2,
+        noise_density=i_noise**2 * step / repeats,
+        shunt_time=time_constant,
         walk=v_noise * np.sqrt(step / repeats),
         slope_uncertainty=float(slope_u),
         level_uncertainty=float(level_u),
         start_uncertainty=high * step / np.sqrt(12.0),
         transient=first_rate * step / np.sqrt(12.0),
-        transient_time=calibration.shunt_time_constant,
         quantum=i_step,
         dither=i_noise / i_step if i_step > 0 else np.inf,
         width=(stop - start) * step,
         peak=float(current[begin:end].max()),
         is_cut=is_cut,
     )
+
+
+def shunt_lead(reading: FloatArray, current: FloatArray, step: float, time_constant: float) -> FloatArray:
+    """By how much the current changes for one second less of the shunt's time constant [A/s], shape of ``current``.
+
+    From i + τ i' = reading: the change e obeys e + τ e' = i', and i' = (reading − i)/τ.
+    """
+    if time_constant <= 0.0:
+        wide = max(1, len(current) // 200)
+        smooth = np.convolve(current, np.ones(wide) / wide, mode="same")
+        return np.asarray(np.gradient(smooth, step))
+    return undo_shunt_inductance((reading - current) / time_constant, step, time_constant)
 
 
 def bin_edges(current: FloatArray) -> IntArray:
