@@ -10,11 +10,12 @@ from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any
 
+from mock_instruments.chamber import Chamber
 from mock_instruments.faults import KINDS, PART_KINDS, REPLY_KINDS, Fault, Stuck, garbled
 from mock_instruments.instrument import Instrument
 from mock_instruments.meters import Digitizer, Lcr, Ohmmeter, Thermometer
 from mock_instruments.odd import CRLF, OddChamber, OddDigitizer, OddOhmmeter
-from mock_instruments.sources import BiasSource, ChamberInstrument, Multiplexer, Pulser, Supply
+from mock_instruments.sources import BiasSource, Multiplexer, Pulser, Supply
 from mock_instruments.spec import WorldSpec, stream
 from mock_instruments.world import Part, World
 
@@ -35,7 +36,7 @@ _PLAIN = {
     "digitizer": Digitizer,
     "lcr": Lcr,
     "bias_source": BiasSource,
-    "chamber": ChamberInstrument,
+    "chamber": Chamber,
     "thermometer": Thermometer,
     "ohmmeter": Ohmmeter,
     "multiplexer": Multiplexer,
@@ -70,6 +71,9 @@ class Bench:
         self._part_faults: dict[int, Fault] = {}
         self._noise = stream(spec.seed, "faults")
         self.world.used.append(self._part_used)
+        digitizer = self.instruments["digitizer"]
+        assert isinstance(digitizer, Digitizer)
+        digitizer.captures_overload = self._capture_overloads
 
     def conversation(self, role: str) -> "Conversation":
         return Conversation(self, role)
@@ -146,6 +150,11 @@ class Bench:
             part.fault = fault.kind
             del self._part_faults[part.channel]
 
+    def _capture_overloads(self) -> bool:
+        """A digitizer is overloaded while it captures, not while it is asked: its overloads count captures."""
+        fault = self.faults.get("digitizer")
+        return fault is not None and fault.kind == "overload" and fault.strikes()
+
     def garbled(self, reply: bytes) -> bytes:
         return garbled(reply, self._noise)
 
@@ -188,7 +197,7 @@ class Conversation:
             if spoiled is not None:
                 return spoiled if spoiled.close else None
         bench.world.advance(instrument.latency)
-        if fault is None or fault.kind not in REPLY_KINDS:
+        if fault is None or fault.kind not in REPLY_KINDS or (fault.kind, role) == ("overload", "digitizer"):
             reply = instrument.handle(message)
             return None if reply is None else self._whole(message, reply)
         return self._spoil(fault, message)

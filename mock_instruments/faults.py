@@ -1,9 +1,8 @@
-"""Faults that a test asks for, one role at a time: when they strike, and what they do to a message or its
-reply.
+"""Faults that a test asks for, one role at a time: when they strike, and what they do to a message or its reply.
 
-A fault lets ``after`` messages of its role pass, then strikes ``count`` times (0: from then on). Kinds that
-spoil a reply count only messages that have one. ``silent`` carries the message out and keeps the reply
-back; ``deaf`` does neither.
+A fault lets ``after`` messages of its role pass, then strikes ``count`` times (0: from then on). Kinds that spoil
+a reply count only messages that have one (an overloaded digitizer: captures). ``silent`` carries the message out
+and keeps the reply back; ``deaf`` does neither.
 """
 
 import re

@@ -9,9 +9,9 @@ from collections.abc import Iterable
 from typing import Protocol
 
 from mock_instruments.scpi_errors import ScpiError
-from mock_instruments.scpi_reader import Faulty, Unit, read_message
+from mock_instruments.scpi_reader import Faulty, MessageReader, Unit, read_message
 from mock_instruments.scpi_status import OPERATION_COMPLETE, Register, Status
-from mock_instruments.scpi_tree import INFINITY, Command, Decimal, Reply, Tree, carry_out, number
+from mock_instruments.scpi_tree import INFINITY, Command, Decimal, Reply, Tree, carry_out
 from mock_instruments.spec import stream
 from mock_instruments.world import World
 
@@ -108,8 +108,6 @@ class ScpiInstrument:
     # -- for whoever carries the bytes ---------------------------------------------------------------------
 
     def cutter(self) -> Cutter:
-        from mock_instruments.scpi_reader import MessageReader
-
         return MessageReader()
 
     def handle(self, message: bytes) -> bytes | None:
@@ -204,6 +202,3 @@ class _RegisterOf(Protocol):
 def told(value: bool) -> str:
     """A boolean as SCPI answers it."""
     return "1" if value else "0"
-
-
-__all__ = ["Cutter", "Instrument", "ScpiInstrument", "number", "told"]

@@ -1,5 +1,7 @@
 """Instruments that look at the world: digitizer, LCR meter, ohmmeter, thermometer."""
 
+from collections.abc import Callable
+
 import numpy as np
 
 from mock_instruments.instrument import ScpiInstrument
@@ -20,6 +22,7 @@ class Digitizer(ScpiInstrument):
 
     def __init__(self, role: str, world: World) -> None:
         super().__init__(role, world)
+        self.captures_overload: Callable[[], bool] = lambda: False
         world.on_trigger.append(self.on_trigger)
 
     def reset(self) -> None:
@@ -92,7 +95,12 @@ class Digitizer(ScpiInstrument):
         settings = Settings(self.samples, self.interval, self.pretrigger, self.ranges[1], self.ranges[2])
         spec = self.world.spec
         self.record = capture(
-            pulse, settings, spec.digitizer, spec.trigger_delay, self.noise, overloaded=self.overloaded
+            pulse,
+            settings,
+            spec.digitizer,
+            spec.trigger_delay,
+            self.noise,
+            overloaded=self.captures_overload(),
         )
         self.armed = False
         self._show()
@@ -168,6 +176,7 @@ class Lcr(ScpiInstrument):
     def reset(self) -> None:
         self.frequency, self.level = 1e5, 0.05
         self.function, self.formats = "FIMP", {1: "LS", 2: "RS"}
+        self.last: dict[str, float] | None = None
 
     def commands(self) -> list[Command]:
         return [
@@ -202,8 +211,6 @@ class Lcr(ScpiInstrument):
             Command("ABORt", do=lambda: None),
         ]
 
-    last: dict[str, float] | None = None
-
     def _set_function(self, name: str) -> None:
         if name.upper() not in ("FIMP", "FIMPEDANCE"):
             raise ScpiError(-224, name)
@@ -212,11 +219,12 @@ class Lcr(ScpiInstrument):
     def _measure(self) -> None:
         self.world.advance(0.1)
         spec = self.world.spec
-        inductance, resistance = self.world.incremental_inductance(), self.world.path_resistance("bias")
+        seen = self.world.small_signal()
         draw = self.noise.standard_normal(2)
-        if inductance is None or resistance is None:
+        if seen is None:
             self.last = {"LS": self.reading(None), "RS": self.reading(None)}
             return
+        inductance, resistance = seen
         # The smaller the test signal the noisier the reading: 50 ppm at 50 mV.
         grain = 5e-5 * max(1.0, 0.05 / self.level)
         skin = 1.0 + AC_RESISTANCE_RISE * np.sqrt(self.frequency / FREQUENCY_OF_AC_RESISTANCE)

@@ -7,11 +7,11 @@ Every other role of an odd bench is the plain one with CR LF behind its replies.
 import re
 from collections.abc import Iterable
 
-from mock_instruments.instrument import Cutter
+from mock_instruments.chamber import ChamberControl
+from mock_instruments.instrument import Cutter, ScpiInstrument
 from mock_instruments.meters import Digitizer, Ohmmeter
 from mock_instruments.scpi_errors import ScpiError
 from mock_instruments.scpi_tree import Choice, Command, Decimal, block, number
-from mock_instruments.sources import ChamberControl, ChamberLike
 
 CRLF = b"\r\n"
 CHANNELS = Choice(("VPARt", "VSHUnt"))
@@ -33,7 +33,7 @@ class LineCutter:
             self._buffer.clear()
 
 
-class OddChamber(ChamberLike):
+class OddChamber(ScpiInstrument):
     """An ASCII line protocol, CR both ways: ``ID T S S=… H=… GO HALT E``; ``E1`` unknown, ``E2`` range,
     ``E3`` hardware."""
 
@@ -42,7 +42,7 @@ class OddChamber(ChamberLike):
     latency = 10e-3
 
     def reset(self) -> None:
-        self.control = ChamberControl(self)
+        self.control = ChamberControl(self.world)
         self.last_error = 0
 
     def cutter(self) -> Cutter:

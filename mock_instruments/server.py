@@ -101,9 +101,9 @@ class Served:
 
     def _start(self, run: Callable[[], None]) -> None:
         thread = threading.Thread(target=run, daemon=True)
-        self._threads = [each for each in self._threads if each.is_alive()]
-        thread.start()
-        self._threads.append(thread)
+        with self._guard:
+            thread.start()
+            self._threads = [*(each for each in self._threads if each.is_alive()), thread]
 
     def _talker(self, role: str) -> Callable[[socket.socket], None]:
         def talk(client: socket.socket) -> None:

@@ -76,7 +76,7 @@ class PartSpec:
     resistance: float = 20e-3
     time_constants: tuple[float, float] = DEFAULT_TIME_CONSTANTS
     weight: float = 0.6
-    thermal_resistance: float = 15.0
+    thermal_resistance: float = 8.0  # K/W in moving air
 
 
 @dataclass(frozen=True, slots=True)

@@ -11,7 +11,7 @@ CHAMBER_LEAK = 3600.0  # s: time constant towards ambient with the chamber off
 
 
 @dataclass(slots=True)
-class Chamber:
+class Air:
     """Air temperature: a ramp at the chamber's own rate, then a decaying swing about the target; off, a
     slow leak.
 

@@ -18,7 +18,7 @@ from mock_instruments.circuit import Bank, Loop, Shot, Switch, fire
 from mock_instruments.flux import FloatArray, FluxLaw, copper_resistance
 from mock_instruments.ledger import Ledger
 from mock_instruments.spec import PartSpec, WorldSpec
-from mock_instruments.thermal import Body, Chamber, relax_bank
+from mock_instruments.thermal import Air, Body, relax_bank
 
 LONGEST_THERMAL_STEP = 10.0  # s; chords of the overshoot over this are good to 0.3 mK (see tests)
 SUPPLY_OUTPUT_RESISTANCE = 0.05  # ohm, leads included
@@ -95,7 +95,7 @@ class World:
             )
             for channel, part in sorted(spec.parts.items())
         }
-        self.chamber = Chamber(start, spec.chamber_ramp, spec.overshoot, origin_degC=start, target_degC=start)
+        self.chamber = Air(start, spec.chamber_ramp, spec.overshoot, origin_degC=start, target_degC=start)
         self.bank_voltage = 0.0
         self.supply_on = False
         self.supply_voltage = 0.0
@@ -229,12 +229,8 @@ class World:
 
     def fire(self, width: float, *, polarity: int = 1, trip_current: float = math.inf) -> Pulse:
         """One pulse of ``width`` [s]: heats, magnetises, droops the bank, triggers whoever listens."""
-        part = self.connected("pulse")
-        if part is not None:
-            self._use(part)
-        shot = None
-        if part is not None and part.fault != "open":
-            shot = self._shoot(part, width, polarity, trip_current)
+        part = self._used("pulse")
+        shot = None if part is None else self._shoot(part, width, polarity, trip_current)
         pulse = Pulse(shot, polarity, self.now, width, self.bank_voltage)
         self.ledger.saw_pulse(self.now, shot.delivered if shot else 0.0)
         if shot is not None and part is not None:
@@ -247,24 +243,18 @@ class World:
         self.advance(max(width, shot.end if shot else 0.0))
         return pulse
 
-    def incremental_inductance(self) -> float | None:
-        """What a small signal sees through the bias path at the present bias [H]; None: open."""
-        part = self.connected("bias")
+    def small_signal(self) -> tuple[float, float] | None:
+        """Incremental inductance [H] and winding resistance [ohm] on the bias path at this bias; None: open."""
+        part = self._used("bias")
         if part is None:
             return None
-        self._use(part)
-        if part.fault == "open":
-            return None
         branch = part.law.at(part.temperature_degC).still(part.offset)
-        return float(branch.slope(np.asarray(self.bias_current)))
+        return float(branch.slope(np.asarray(self.bias_current))), part.winding_resistance
 
     def path_resistance(self, path: str) -> float | None:
         """Winding resistance of the part on ``path`` [ohm]; None: open."""
-        part = self.connected(path)
-        if part is None:
-            return None
-        self._use(part)
-        return None if part.fault == "open" else part.winding_resistance
+        part = self._used(path)
+        return None if part is None else part.winding_resistance
 
     def body_degC(self, channel: int) -> float | None:
         part = self.parts.get(channel)
@@ -326,6 +316,11 @@ class World:
         if part is not None and current:
             self.ledger.saw_current(part.channel, current)
 
-    def _use(self, part: Part) -> None:
+    def _used(self, path: str) -> Part | None:
+        """The part that ``path`` is about to use, unless it is open; whoever plans part faults is told first."""
+        part = self.connected(path)
+        if part is None:
+            return None
         for listener in self.used:
             listener(part)
+        return None if part.fault == "open" else part

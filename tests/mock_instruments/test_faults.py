@@ -108,6 +108,18 @@ def test_an_overload_reads_9_9e37(client, role, message, index):
     assert float(client.ask(role, message).split(",")[index]) < 1e6
 
 
+def test_an_overloaded_digitizer_sticks_at_the_top(client):
+    client.charge()
+    plan(client, "digitizer", "overload", after=1)
+    tops = []
+    for _ in range(3):
+        client.ask("digitizer", "FORM ASC;:INIT")
+        client.fire(5e-6)
+        volts = [float(each) for each in client.ask("digitizer", "TRAC? CH1").split(",")]
+        tops.append(min(volts) > 45.0)  # of 50 V
+    assert tops == [False, True, False]
+
+
 def test_a_stuck_value_repeats_but_its_errors_do_not(client):
     first = client.ask("thermometer", "MEAS:TEMP? (@1)")
     plan(client, "thermometer", "stuck", count=0)

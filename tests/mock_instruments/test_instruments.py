@@ -264,7 +264,7 @@ def test_the_bias_source_slews_and_heats(client):
     before = client.world.body_degC(1)
     client.world.advance(1200.0)
     rise = client.world.body_degC(1) - before
-    assert rise == pytest.approx(8.0**2 * 0.019 * 15.0 * (0.6 + 0.4 * (1 - np.exp(-1200 / 900))), rel=0.1)
+    assert rise == pytest.approx(8.0**2 * 0.019 * 8.0 * (0.6 + 0.4 * (1 - np.exp(-1200 / 900))), rel=0.1)
     client.ask("bias_source", "SOUR:CURR 0")
     client.world.advance(0.1)
     assert 5.0 < client.world.bias_current < 8.0  # 20 A/s

@@ -10,7 +10,7 @@ from hypothesis import strategies as st
 from scipy.integrate import solve_ivp
 
 from mock_instruments import World, WorldSpec
-from mock_instruments.thermal import CHAMBER_LEAK, Body, Chamber, relax_bank
+from mock_instruments.thermal import CHAMBER_LEAK, Air, Body, relax_bank
 
 
 def body(start=20.0):
@@ -50,7 +50,7 @@ def test_a_step_cut_in_two_is_the_step(duration, cut, before, after, power):
 
 
 def test_the_chamber_ramps_at_its_limit_then_overshoots_and_settles():
-    chamber = Chamber(ambient_degC=23.0, ramp=0.05, overshoot=1.0, origin_degC=23.0)
+    chamber = Air(ambient_degC=23.0, ramp=0.05, overshoot=1.0, origin_degC=23.0)
     chamber.command(0.0, on=True, target_degC=83.0)
     assert chamber.air_degC(600.0) == pytest.approx(23.0 + 0.05 * 600.0)
     arrival = 60.0 / 0.05
@@ -62,14 +62,14 @@ def test_the_chamber_ramps_at_its_limit_then_overshoots_and_settles():
 
 
 def test_the_same_command_again_does_not_restart_the_ramp():
-    chamber = Chamber(ambient_degC=23.0, ramp=0.05, overshoot=1.0, origin_degC=23.0)
+    chamber = Air(ambient_degC=23.0, ramp=0.05, overshoot=1.0, origin_degC=23.0)
     chamber.command(0.0, on=True, target_degC=83.0)
     chamber.command(300.0, on=True, target_degC=83.0)
     assert chamber.air_degC(600.0) == pytest.approx(53.0)
 
 
 def test_a_new_setpoint_ramps_from_where_the_air_is_and_off_leaks_to_ambient():
-    chamber = Chamber(ambient_degC=23.0, ramp=0.05, overshoot=0.0, origin_degC=23.0)
+    chamber = Air(ambient_degC=23.0, ramp=0.05, overshoot=0.0, origin_degC=23.0)
     chamber.command(0.0, on=True, target_degC=83.0)
     chamber.command(400.0, on=True, target_degC=-40.0)
     assert chamber.air_degC(400.0) == pytest.approx(43.0)
@@ -109,7 +109,7 @@ def test_a_body_in_the_chamber_agrees_with_scipy(mapping):
     """Ramp, overshoot and lag together; the world's own 10 s chords cost well under a millikelvin."""
     world = World(WorldSpec.from_mapping(mapping))
     world.set_chamber(on=True, setpoint_degC=85.0)
-    chamber = Chamber(23.0, world.spec.chamber_ramp, world.spec.overshoot, origin_degC=23.0)
+    chamber = Air(23.0, world.spec.chamber_ramp, world.spec.overshoot, origin_degC=23.0)
     chamber.command(0.0, on=True, target_degC=85.0 - world.spec.chamber_offset)
     times = np.array([600.0, 1300.0, 1500.0, 2400.0])
     solved = solve_ivp(
