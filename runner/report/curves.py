@@ -201,23 +201,24 @@ _MARKER_WORDS = dict(
 
 
 def _curves_caption(facts: Facts, part: PartFacts, method: MethodFacts) -> str:
-    coldest, hottest = _range(method)
+    assert method.family is not None
     marks = [
         f"{_MARKER_WORDS[marker]}: {percent(drop)} drop"
         for marker, drop in zip(DROP_MARKERS, method.drops, strict=False)
         if any(knee.is_reached for knee in method.knees_at(drop))
     ]
     return (
-        f"{INDUCTANCE[method.name].capitalize()} of {part.label} against current, {coldest} to {hottest}. "
+        f"{INDUCTANCE[method.name].capitalize()} of {part.label} against current, {_range(method.family)}. "
         f"Band: {percent(facts.coverage)} interval, often narrower than the line."
         + (f" Marks on the lines: {', '.join(marks)}." if marks else "")
     )
 
 
-def _range(method: MethodFacts) -> tuple[str, str]:
-    assert method.family is not None
-    temperatures = method.family.temperature_degC
-    return celsius(float(temperatures.min()), 0), celsius(float(temperatures.max()), 0)
+def _range(family: Family) -> str:
+    coldest, hottest = (
+        celsius(float(t), 0) for t in (family.temperature_degC.min(), family.temperature_degC.max())
+    )
+    return f"at {coldest}" if coldest == hottest else f"from {coldest} to {hottest}"
 
 
 def _curves_sheet(family: Family) -> Sheet:

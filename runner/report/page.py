@@ -21,13 +21,14 @@ from runner.record import Run, open_run
 from runner.report import look
 from runner.report.captures import draw_captures
 from runner.report.curves import draw_curves, draw_surface
-from runner.report.digits import NOTHING, duration, fixed, quantity, short
+from runner.report.digits import NOTHING, duration, fixed, quantity
 from runner.report.doubts import doubts
 from runner.report.extras import extra_tables, extra_texts
 from runner.report.facts import INDUCTANCE, METHOD_TITLES, Facts, MethodFacts, PartFacts, gather
 from runner.report.knee import draw_knees, draw_overview, draw_resistance
 from runner.report.night import MOST_NUMBERS, Mark, draw_night, marks
 from runner.report.picture import Pasted, Picture, save
+from runner.report.provenance import calibration, instruments, versions
 from runner.report.tables import Table, budget_table, knee_tables, temperature_table
 from runner.report.words import (
     headline,
@@ -108,13 +109,9 @@ def _context(run: Run, into: Path) -> dict[str, Any]:
         "legs": _leg_rows(run) if run.kind != "captures" else [],
         "marks": [_mark_row(mark) for mark in told[:MOST_NUMBERS]],
         "marks_left": max(0, len(told) - MOST_NUMBERS),
-        "instruments": [
-            (i.role.replace("_", " "), i.vendor, i.model, i.serial, i.firmware)
-            for i in run.instruments
-            if i.vendor or i.model or i.idn
-        ],
-        "calibration": _calibration(run),
-        "versions": list(_versions(run)),
+        "instruments": instruments(run),
+        "calibration": calibration(run),
+        "versions": list(versions(run)),
         "files": [
             (name, data.decode("utf-8", errors="replace"))
             for name, data in ((run.plan_name, run.plan_bytes), (run.bench_name, run.bench_bytes))
@@ -161,9 +158,8 @@ def _part(run: Run, facts: Facts, part: PartFacts, paste: Any) -> dict[str, Any]
 
 def _method(facts: Facts, part: PartFacts, method: MethodFacts, paste: Any) -> dict[str, Any]:
     inductance = INDUCTANCE[method.name]
-    initial = (
-        temperature_table(facts, f"Initial {inductance}", method.initial, "H") if method.initial else None
-    )
+    title = f"Initial {inductance}"
+    initial = temperature_table(facts, title, method.initial, "H", title=title) if method.initial else None
     budgets = [budget_table(entry) for entry in method.extras.get("budget") or []]
     return {
         "title": METHOD_TITLES[method.name],
@@ -182,9 +178,9 @@ def _method(facts: Facts, part: PartFacts, method: MethodFacts, paste: Any) -> d
 def _resistance_tables(facts: Facts, part: PartFacts) -> list[Table]:
     known = [method for method in part.methods if method.resistance]
     if len({method.resistance for method in known}) == 1:  # both methods stand on one measurement
-        return [temperature_table(facts, "Winding resistance", known[0].resistance, "ohm")]
+        return [temperature_table(facts, "Winding resistance", known[0].resistance, "ohm", title="")]
     return [
-        temperature_table(facts, f"Winding resistance, {method.name} method", method.resistance, "ohm")
+        temperature_table(facts, "Resistance", method.resistance, "ohm", title=METHOD_TITLES[method.name])
         for method in known
     ]
 
@@ -248,6 +244,8 @@ def _troubles(run: Run, facts: Facts) -> Iterator[tuple[str, str]]:
 
 def _run_in_time(run: Run) -> str:
     count = len(run.points["point"])
+    if count == 0:
+        return "No points that can be used."
     flagged = int(np.count_nonzero(run.points["quality"]))
     text = f"{count} points" + (f", {flagged} of them flagged" if flagged else ", none flagged")
     if run.kind != "captures":
@@ -306,42 +304,6 @@ def _knee_by_leg(run: Run, part: PartFacts) -> dict[int, float]:
         leg.index: min(knees, key=lambda knee: abs(knee.temperature_degC - leg.setpoint)) for leg in run.legs
     }
     return {leg: knee.estimate.value for leg, knee in nearest.items()}
-
-
-def _calibration(run: Run) -> list[tuple[str, ...]]:
-    rows: list[tuple[str, ...]] = []
-    for instrument in run.instruments:
-        for name, constant in instrument.calibration.items():
-            unit = "" if constant.units == "1" else constant.units
-            rows.append(
-                (
-                    instrument.role.replace("_", " "),
-                    name.replace("_", " "),
-                    _constant(constant.value, unit),
-                    _constant(constant.uncertainty, unit) if constant.uncertainty else NOTHING,
-                    constant.date or NOTHING,
-                    constant.certificate or NOTHING,
-                )
-            )
-    return rows
-
-
-def _constant(value: float, unit: str) -> str:
-    # An SI prefix cannot stand before "K" differences in ppm or a plain ratio: those are written out.
-    return (
-        short(value, unit, 6) if unit in {"ohm", "s", "H", "V", "A", "F"} else f"{value:.6g} {unit}".strip()
-    )
-
-
-def _versions(run: Run) -> Iterator[tuple[str, str]]:
-    yield "Run", run.run_id
-    for number, session in enumerate(run.sessions, start=1):
-        when = datetime.fromtimestamp(run.start + session.start, UTC).strftime("%Y-%m-%d %H:%M UTC")
-        versions: Mapping[str, str] = session.versions
-        software = ", ".join([session.software, *(f"{name} {version}" for name, version in versions.items())])
-        yield f"Session {number}", f"{when}: {software}"
-    if run.extraction is not None:
-        yield "Extraction", f"{run.extraction.program} {run.extraction.version}, {run.extraction.date}"
 
 
 def _render(context: Mapping[str, Any]) -> str:

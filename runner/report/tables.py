@@ -75,7 +75,7 @@ def _knee_table(facts: Facts, part: PartFacts, method: MethodFacts, drops: tuple
         else:
             # Any status is shown under its own name: the report does not know better than the extraction.
             seen = significant(scale.of(knee.estimate.low), 3)
-            value, interval = knee.status, f"above {seen}" if seen != NOTHING else NOTHING
+            value, interval = knee.status, f"> {seen}" if seen != NOTHING else NOTHING
         margin = short_margin(knee, part.rated_current) if knee else NOTHING
         return (value, interval, margin) if has_rating else (value, interval)
 
@@ -99,8 +99,10 @@ def _knee_table(facts: Facts, part: PartFacts, method: MethodFacts, drops: tuple
     )
 
 
-def temperature_table(facts: Facts, title: str, entries: Sequence[AtTemperature], unit: str) -> Table:
-    """A quantity by temperature with its interval."""
+def temperature_table(
+    facts: Facts, quantity: str, entries: Sequence[AtTemperature], unit: str, *, title: str
+) -> Table:
+    """A quantity by temperature with its interval; ``title`` may be empty."""
     scale = scale_for([entry.estimate.value for entry in entries], unit)
     rows = []
     for entry in entries:
@@ -110,7 +112,7 @@ def temperature_table(facts: Facts, title: str, entries: Sequence[AtTemperature]
         rows.append((fixed(entry.temperature_degC, 1), text.value, _interval(text)))
     head = (
         "Temperature (°C)",
-        f"{title} ({scale.unit})",
+        f"{quantity} ({scale.unit})",
         f"{percent(facts.coverage)} interval ({scale.unit})",
     )
     return Table(title, head, tuple(rows))

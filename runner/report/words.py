@@ -69,12 +69,16 @@ def headline(facts: Facts, part: PartFacts) -> str:
             f"{short(lowest.estimate.low, 'A')}."
         )
     worst = min(reached, key=lambda knee: knee.estimate.value)
+    missed = [knee for knee in knees if not knee.is_reached]
+    # Where the current did not get as far as the lowest knee, the knee may lie lower still.
+    of_which = (
+        " of where it was reached" if any(not m.estimate.low >= worst.estimate.value for m in missed) else ""
+    )
     text = (
-        f"{part.label}: the saturation current ({where}, {counted_from(worst.reference)}) is lowest at "
+        f"{part.label}: the saturation current ({where}, {counted_from(worst.reference)}) is lowest{of_which} at "
         f"{celsius(worst.temperature_degC)}: {_with_interval(worst, facts.coverage)}"
     )
     text += _against_rating(worst, part.rated_current)
-    missed = [knee for knee in knees if not knee.is_reached]
     if missed:
         text += f" It was not reached at {_listed([celsius(knee.temperature_degC, 0) for knee in missed])}."
     return text
@@ -96,7 +100,7 @@ def short_margin(knee: Knee, rated_current: float) -> str:
     """
     low, high = knee.estimate.low / rated_current - 1, knee.estimate.high / rated_current - 1
     if not knee.is_reached:
-        return f"over {signed_percent(low, 0)}" if math.isfinite(low) else NOTHING
+        return f"> {signed_percent(low, 0)}" if math.isfinite(low) else NOTHING
     margin = knee.estimate.value / rated_current - 1
     half_width = 100 * max(high - margin, margin - low)
     places = round_uncertainty(half_width)[1] if half_width > 0 else 2

@@ -43,7 +43,7 @@ def test_the_saturation_table_has_a_group_of_columns_for_each_drop():
 def test_what_was_not_reached_is_written_so_with_the_bound():
     part, method = _part(6.0, _knee(0.3, NAN, 10.0, NAN, "not reached"))
     (table,) = knee_tables(FACTS, part, method)
-    assert table.rows == (("25.1", "not reached", "above 10.0", "over +67 %"),)
+    assert table.rows == (("25.1", "not reached", "> 10.0", "> +67 %"),)
 
 
 def test_without_a_rating_there_is_no_margin():
@@ -74,7 +74,7 @@ def test_one_prefix_serves_a_column():
         AtTemperature(-40.0, Estimate(0.9e-3, 0.89e-3, 0.91e-3)),
         AtTemperature(25.0, Estimate(0.018, 0.0179, 0.0181)),
     ]
-    table = temperature_table(FACTS, "Winding resistance", entries, "ohm")
+    table = temperature_table(FACTS, "Winding resistance", entries, "ohm", title="")
     assert table.head == ("Temperature (°C)", "Winding resistance (mΩ)", "95 % interval (mΩ)")
     assert table.rows == (("−40.0", "0.900", "0.890 to 0.910"), ("25.0", "18.00", "17.90 to 18.10"))
 

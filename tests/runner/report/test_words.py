@@ -55,6 +55,10 @@ def test_the_headline_gives_the_lowest_current_with_interval_and_margin():
             ),
             "was not reached at any temperature; the largest current seen was at least 9.5 A.",
         ),
+        (
+            part(knee(-40, NAN, 7.0, NAN, status="not reached"), knee(25, 8.0, 7.9, 8.1)),
+            "is lowest of where it was reached at 25.0 °C",
+        ),
         (part(), "no saturation current was extracted."),
         (part(knee(25, 5.0, 4.9, 5.1), method="bias"), "drop of the incremental inductance"),
     ],
@@ -88,7 +92,7 @@ def test_the_headline_speaks_of_the_usual_drop_or_of_the_largest_reached(drops, 
         (knee(25, 8.4, 8.366, 8.434), "+40.0 %"),  # 8.4/6 - 1; half-width 0.57 %: one digit is a tenth
         (knee(25, 5.7, 5.4, 6.0), "−5 %"),
         (knee(25, 6.03, 5.97, 6.09), "+0.5 % (−0.5 % to +1.5 %)"),  # the sign is not certain
-        (knee(25, NAN, 9.0, NAN, status="not reached"), "over +50 %"),
+        (knee(25, NAN, 9.0, NAN, status="not reached"), "> +50 %"),
         (knee(25, NAN, NAN, NAN, status="not reached"), "–"),
     ],
 )
