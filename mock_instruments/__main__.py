@@ -1,5 +1,4 @@
-"""`python -m mock_instruments`: a bench read as JSON from standard input, its ports as one line of JSON on
-standard output.
+"""`python -m mock_instruments`: a bench read as JSON from standard input, its ports as one line of JSON on standard output.
 
 It serves until the control socket says `quit`, or until nobody has been connected for a while (`--patience`
 or MOCK_INSTRUMENTS_PATIENCE, wall seconds), so that a bench whose clients have all died does not stay

@@ -1,5 +1,4 @@
-"""All the instruments of one world, the conversations with them, and what the control socket may ask. No
-sockets here.
+"""All the instruments of one world, the conversations with them, and what the control socket may ask. No sockets here.
 
 A `Conversation` is one client with one instrument: bytes in, `Answer`s out. Instruments and world are
 shared by all conversations; `World.lock` is held around each message, so that a message is one event in the

@@ -1,5 +1,4 @@
-"""One pulse through the fixture: bank → switch → part → shunt, then part → diode → shunt until the current
-has gone.
+"""One pulse through the fixture: bank → switch → part → shunt, then part → diode → shunt until the current has gone.
 
 While the switch is on the state is (part current, bank voltage) and classical Runge-Kutta integrates it in
 plain floats; the steps shorten as the part saturates, in proportion to its differential inductance. While
@@ -38,8 +37,7 @@ class Bank:
     supply_resistance: float = 0.05
 
     def supplied(self, voltage: float) -> float:
-        """Current [A] the supply pushes into the bank when that stands at ``voltage`` [V]; it never sinks
-        any."""
+        """Current [A] the supply pushes into the bank when that stands at ``voltage`` [V]; it never sinks any."""
         return min(self.supply_current, max(0.0, (self.supply_voltage - voltage) / self.supply_resistance))
 
 
@@ -152,8 +150,7 @@ def fire(
     initial_current: float = 0.0,
     trip_current: float = math.inf,
 ) -> Shot:
-    """Close the switch for ``width`` [s] on a bank at ``voltage`` [V] and follow the current until it has
-    gone.
+    """Close the switch for ``width`` [s] on a bank at ``voltage`` [V] and follow the current until it has gone.
 
     ``trip_current`` [A]: a comparator on the shunt that opens the switch early.
     """
@@ -251,8 +248,7 @@ def _on(
 def _freewheel(
     loop: Loop, falling: Branch, peak: float, rest: float, *, start: float
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """Time, current and di/dt from ``peak`` down to ``rest`` [A], by Gauss quadrature of t(i) between even
-    currents."""
+    """Time, current and di/dt from ``peak`` down to ``rest`` [A], by Gauss quadrature of t(i) between even currents."""
     stray = loop.shunt_inductance + loop.stray_inductance
     resistance = loop.freewheel_resistance + loop.shunt + loop.winding
     if peak <= rest:
@@ -269,8 +265,7 @@ def _freewheel(
 
 
 def _hermite(at: FloatArray, t: FloatArray, y: FloatArray, dy: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Value and derivative of the cubic through (t, y) with slopes dy, at ascending instants inside [t0,
-    t_end]."""
+    """Value and derivative of the cubic through (t, y) with slopes dy, at ascending instants inside [t0, t_end]."""
     if len(t) < 2 or not len(at):
         return np.full(at.shape, y[0]), np.zeros(at.shape)
     cell = np.clip(np.searchsorted(t, at, side="right") - 1, 0, len(t) - 2)

@@ -21,8 +21,7 @@ _MEASURED = re.compile(rb"MEAS|READ\?|FETC|FETCH|TRAC(E)?(:DATA)?\?|TRAC(E)?:REA
 
 @dataclass(slots=True)
 class Fault:
-    """One fault; ``after`` and ``count`` are used up as it goes. ``seconds``: wall time of a ``slow``
-    answer."""
+    """One fault; ``after`` and ``count`` are used up as it goes. ``seconds``: wall time of a ``slow`` answer."""
 
     kind: str
     after: int = 0

@@ -36,8 +36,7 @@ MEMORY_LENGTH = 0.2  # how much further the current must go to write 63 % of wha
 
 
 def copper_resistance(resistance_20: float, temperature_degC: float) -> float:
-    """Winding resistance [ohm] at a mean winding temperature [degC] from its value at 20 degC [ohm] (IEC
-    60028)."""
+    """Winding resistance [ohm] at a mean winding temperature [degC] from its value at 20 degC [ohm] (IEC 60028)."""
     return resistance_20 * (1.0 + COPPER_ALPHA_20 * (temperature_degC - 20.0))
 
 
@@ -88,8 +87,7 @@ class Term:
 
 @dataclass(frozen=True, slots=True)
 class Memory:
-    """How the offset h [A] of a remembering core follows the current; all in amperes, for currents of one
-    sign.
+    """How the offset h [A] of a remembering core follows the current; all in amperes, for currents of one sign.
 
     dh/di = (target(i) - h)/length while the current grows and target(i) > h, else 0; target(i) =
     limit·min(1, i/reach).
@@ -100,8 +98,7 @@ class Memory:
     length: float
 
     def path(self, current: FloatArray, offset: float, start: float = 0.0) -> tuple[FloatArray, FloatArray]:
-        """h and dh/di where the current has grown from ``start`` to ``current`` (both >= 0) with h =
-        ``offset`` before."""
+        """h and dh/di where the current has grown from ``start`` to ``current`` (both >= 0) with h = ``offset`` before."""
         i = np.asarray(current, dtype=float)
         if offset >= self.limit:
             return np.full_like(i, offset), np.zeros_like(i)
@@ -210,8 +207,7 @@ def _moving_slope(
 
 @dataclass(frozen=True, slots=True)
 class FluxCurve:
-    """A flux law at one temperature: core sections, what is left in full saturation [H], and the memory if
-    any."""
+    """A flux law at one temperature: core sections, what is left in full saturation [H], and the memory if any."""
 
     terms: tuple[Term, ...]
     floor: float
@@ -224,8 +220,7 @@ class FluxCurve:
         return max(-self.memory.limit, min(self.memory.limit, offset))
 
     def still(self, offset: float = 0.0) -> Branch:
-        """Small moves and falling currents: the memory stays as it is (the reversible, incremental
-        inductance)."""
+        """Small moves and falling currents: the memory stays as it is (the reversible, incremental inductance)."""
         return Branch(self, self.kept(offset))
 
     def growing(self, offset: float = 0.0, start: float = 0.0) -> Branch:
@@ -300,8 +295,7 @@ class FluxLaw:
 
 
 def saturation_current(branch: Branch, drop: float) -> float:
-    """Current [A] at which the differential inductance has fallen by ``drop`` (0..1) from its value at zero
-    current.
+    """Current [A] at which the differential inductance has fallen by ``drop`` (0..1) from its value at zero current.
 
     NaN where the law never falls that far. By bisection on the closed-form slope, to 1e-13 relative.
     """

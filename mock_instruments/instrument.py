@@ -1,5 +1,4 @@
-"""One SCPI instrument without its transport: a message in, a reply out (bytes both), status and error queue
-inside.
+"""One SCPI instrument without its transport: a message in, a reply out (bytes both), status and error queue inside.
 
 Who calls: one conversation at a time, holding the world's lock. Nothing here fails for what a client sends;
 whatever is wrong with a message ends in the error queue.
@@ -43,8 +42,7 @@ class Instrument(Protocol):
 
 
 class ScpiInstrument:
-    """Common commands, path rule, `;` chains and the standard subsystems; a role adds its own table of
-    commands."""
+    """Common commands, path rule, `;` chains and the standard subsystems; a role adds its own table of commands."""
 
     terminator = b"\n"
     latency = 2e-3
@@ -93,8 +91,7 @@ class ScpiInstrument:
         return []
 
     def reset(self) -> None:
-        """``*RST``: settings to their defaults, outputs off; status, queue and enables stay (IEEE 488.2,
-        10.32)."""
+        """``*RST``: settings to their defaults, outputs off; status, queue and enables stay (IEEE 488.2, 10.32)."""
 
     def trigger(self) -> None:
         raise ScpiError(-211)

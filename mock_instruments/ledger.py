@@ -1,5 +1,4 @@
-"""What really happened on the bench, whatever any client believes: extremes and misuse, added to and never
-reset."""
+"""What really happened on the bench, whatever any client believes: extremes and misuse, added to and never reset."""
 
 from collections import deque
 from dataclasses import dataclass, field

@@ -168,8 +168,7 @@ class Digitizer(ScpiInstrument):
 
 
 class Lcr(ScpiInstrument):
-    """LCR meter on the bias path: series inductance and resistance with its gain, its fixture and its
-    noise."""
+    """LCR meter on the bias path: series inductance and resistance with its gain, its fixture and its noise."""
 
     model = "LCR"
 

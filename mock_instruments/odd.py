@@ -1,5 +1,4 @@
-"""The deliberately odd spelling: a chamber that is no SCPI, a digitizer and an ohmmeter with ways of their
-own.
+"""The deliberately odd spelling: a chamber that is no SCPI, a digitizer and an ohmmeter with ways of their own.
 
 Every other role of an odd bench is the plain one with CR LF behind its replies.
 """
@@ -34,8 +33,7 @@ class LineCutter:
 
 
 class OddChamber(ScpiInstrument):
-    """An ASCII line protocol, CR both ways: ``ID T S S=… H=… GO HALT E``; ``E1`` unknown, ``E2`` range,
-    ``E3`` hardware."""
+    """An ASCII line protocol, CR both ways: ``ID T S S=… H=… GO HALT E``; ``E1`` unknown, ``E2`` range, ``E3`` hardware."""
 
     model = "CHAMBER MOCK 1"
     terminator = b"\r"

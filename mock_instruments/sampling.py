@@ -16,8 +16,7 @@ HUM_FREQUENCY = 50.0
 
 @dataclass(frozen=True, slots=True)
 class Settings:
-    """Samples, interval [s], samples before the trigger, full scale of either channel [V] (the range is ±
-    that)."""
+    """Samples, interval [s], samples before the trigger, full scale of either channel [V] (the range is ± that)."""
 
     samples: int
     interval: float

@@ -77,8 +77,7 @@ class ScpiError(Exception):
 
 
 def error_text(number: int, detail: str = "") -> str:
-    """The queue's answer: ``-113,"Undefined header"``; a detail follows after a semicolon inside the
-    quotes."""
+    """The queue's answer: ``-113,"Undefined header"``; a detail follows after a semicolon inside the quotes."""
     text = ERRORS.get(number, "Device-specific error")
     inside = f"{text};{detail}" if detail else text
     return f'{number},"{inside.replace(chr(34), chr(39))}"'

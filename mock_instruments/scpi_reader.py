@@ -1,5 +1,4 @@
-"""From bytes to program message units (IEEE 488.2 chapter 7, SCPI-1999 vol. 1 chapters 6 to 8). Pure: no
-instrument here.
+"""From bytes to program message units (IEEE 488.2 chapter 7, SCPI-1999 vol. 1 chapters 6 to 8). Pure: no instrument here.
 
 `MessageReader` cuts a byte stream into messages however the bytes arrive; `read_message` cuts a message
 into units and their parameters. A unit that cannot be read becomes a `Faulty` in its place, so that the
@@ -55,8 +54,7 @@ Data = Number | Word | Text | Block | Expression
 
 @dataclass(frozen=True, slots=True)
 class Unit:
-    """One program message unit. ``nodes``: mnemonics as sent, upper case; ``common`` for ``*IDN?`` and its
-    kind."""
+    """One program message unit. ``nodes``: mnemonics as sent, upper case; ``common`` for ``*IDN?`` and its kind."""
 
     nodes: tuple[str, ...]
     query: bool
@@ -74,8 +72,7 @@ class Faulty:
 
 
 class MessageReader:
-    """Cuts a stream of bytes into terminated messages. A newline inside a definite-length block does not
-    terminate."""
+    """Cuts a stream of bytes into terminated messages. A newline inside a definite-length block does not terminate."""
 
     def __init__(self) -> None:
         self._buffer = bytearray()

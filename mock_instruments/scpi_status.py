@@ -1,5 +1,4 @@
-"""Registers and error queue of one instrument (IEEE 488.2 chapter 11, SCPI-1999 vol. 1 chapter 9, vol. 2
-21.8)."""
+"""Registers and error queue of one instrument (IEEE 488.2 chapter 11, SCPI-1999 vol. 1 chapter 9, vol. 2 21.8)."""
 
 from collections import deque
 from dataclasses import dataclass, field
@@ -39,8 +38,7 @@ class Register:
 
 @dataclass(slots=True)
 class Status:
-    """All status of one instrument. A fresh one has just been switched on: bit 7 of the event register is
-    set."""
+    """All status of one instrument. A fresh one has just been switched on: bit 7 of the event register is set."""
 
     event: int = POWER_ON
     event_enable: int = 0

@@ -108,8 +108,7 @@ class Quoted:
 
 @dataclass(frozen=True, slots=True)
 class Channels:
-    """A channel list such as ``(@1,3:5)`` (SCPI-1999 vol. 1, 8.3.2), of numbers between ``low`` and
-    ``high``."""
+    """A channel list such as ``(@1,3:5)`` (SCPI-1999 vol. 1, 8.3.2), of numbers between ``low`` and ``high``."""
 
     low: int = 1
     high: int = 9999
@@ -172,8 +171,7 @@ class Tree:
                 self._found[path] = (command, tuple(most for _, most in nodes))
 
     def find(self, nodes: tuple[str, ...]) -> tuple[Command, tuple[int, ...]]:
-        """The command of a full path of mnemonics as sent, and its numeric suffixes (1 where none was
-        sent)."""
+        """The command of a full path of mnemonics as sent, and its numeric suffixes (1 where none was sent)."""
         if nodes not in self._resolved:
             if len(self._resolved) > 4096:  # a client that sends rubbish for ever must not fill the memory
                 self._resolved.clear()

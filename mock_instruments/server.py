@@ -1,5 +1,4 @@
-"""The sockets: one TCP port an instrument and one for control, any number of clients each, threads in this
-process.
+"""The sockets: one TCP port an instrument and one for control, any number of clients each, threads in this process.
 
 Only loopback is bound. Everything that is decided is decided in `bench`; this file moves bytes and ends
 cleanly.

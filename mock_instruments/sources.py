@@ -121,8 +121,7 @@ class Supply(ScpiInstrument):
 
 
 class Pulser(ScpiInstrument):
-    """Drives the switch; its trigger output triggers the digitizer. A comparator on the shunt may cut the
-    gate early."""
+    """Drives the switch; its trigger output triggers the digitizer. A comparator on the shunt may cut the gate early."""
 
     model = "PULSER"
     triggered = True

@@ -81,8 +81,7 @@ class PartSpec:
 
 @dataclass(frozen=True, slots=True)
 class DigitizerSpec:
-    """True front end of the digitizer: bits, noise [LSB rms], offsets [V], gains, skew [s], disturbances
-    [V]."""
+    """True front end of the digitizer: bits, noise [LSB rms], offsets [V], gains, skew [s], disturbances [V]."""
 
     bits: int = 12
     noise: float = 0.8

@@ -1,5 +1,4 @@
-"""Chamber air and the bodies in it. Air is a closed form of time; bodies follow it exactly for air linear
-in a step."""
+"""Chamber air and the bodies in it. Air is a closed form of time; bodies follow it exactly for air linear in a step."""
 
 import math
 from dataclasses import dataclass
@@ -12,8 +11,7 @@ CHAMBER_LEAK = 3600.0  # s: time constant towards ambient with the chamber off
 
 @dataclass(slots=True)
 class Air:
-    """Air temperature: a ramp at the chamber's own rate, then a decaying swing about the target; off, a
-    slow leak.
+    """Air temperature: a ramp at the chamber's own rate, then a decaying swing about the target; off, a slow leak.
 
     ``since`` is the world time of the last change, ``origin_degC`` the air then, ``target_degC`` true air
     it goes for.
@@ -52,8 +50,7 @@ class Air:
 
 @dataclass(slots=True)
 class Body:
-    """A part's own temperature as two exponential modes that lag the air, each warmed by its share of the
-    power.
+    """A part's own temperature as two exponential modes that lag the air, each warmed by its share of the power.
 
     ``weights`` sum to 1; ``thermal_resistance`` [K/W] is the steady rise per watt, split likewise.
     """
@@ -68,8 +65,7 @@ class Body:
         return self.weights[0] * self.modes[0] + self.weights[1] * self.modes[1]
 
     def step(self, duration: float, air_before: float, air_after: float, power: float) -> None:
-        """Follow air that goes linearly from ``air_before`` to ``air_after`` [degC] under constant
-        ``power`` [W]."""
+        """Follow air that goes linearly from ``air_before`` to ``air_after`` [degC] under constant ``power`` [W]."""
         rate = (air_after - air_before) / duration
         rise = power * self.thermal_resistance
         for k in (0, 1):

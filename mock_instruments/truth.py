@@ -1,5 +1,4 @@
-"""The truth about a bench's parts for accuracy studies. No instrument tells it; it comes from the closed
-forms alone."""
+"""The truth about a bench's parts for accuracy studies. No instrument tells it; it comes from the closed forms alone."""
 
 from collections.abc import Sequence
 from typing import Any

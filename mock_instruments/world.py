@@ -1,5 +1,4 @@
-"""The one coupled world behind all the instruments: time, bank, switch, parts, air, relays. No bytes, no
-sockets.
+"""The one coupled world behind all the instruments: time, bank, switch, parts, air, relays. No bytes, no sockets.
 
 Instruments call the methods below with SI values and get true physical quantities back; what an instrument
 adds to them (noise, gain, offset, rounding) is the instrument's own business. Everything moves by `advance`
@@ -29,8 +28,7 @@ PATHS = ("pulse", "bias", "resistance")
 
 @dataclass(slots=True)
 class Part:
-    """One part on the bench: what it is, and what of it changes (temperature, memory [A], an injected
-    fault)."""
+    """One part on the bench: what it is, and what of it changes (temperature, memory [A], an injected fault)."""
 
     channel: int
     spec: PartSpec
@@ -54,8 +52,7 @@ class Part:
 
 @dataclass(frozen=True, slots=True)
 class Pulse:
-    """What the trigger leaves for the digitizer: the shot (None: nothing carried current) and how it was
-    wired."""
+    """What the trigger leaves for the digitizer: the shot (None: nothing carried current) and how it was wired."""
 
     shot: Shot | None
     polarity: int
@@ -180,8 +177,7 @@ class World:
 
     @property
     def bias_voltage(self) -> float:
-        """Voltage the bias source sees across the part, sensed [V]; its limit when nothing carries the
-        current."""
+        """Voltage the bias source sees across the part, sensed [V]; its limit when nothing carries the current."""
         part = self.connected("bias")
         if not self.bias_on:
             return 0.0
@@ -190,8 +186,7 @@ class World:
         return self.bias_current * part.winding_resistance
 
     def set_chamber(self, *, on: bool, setpoint_degC: float) -> None:
-        """The chamber brings its own sensor to the set-point, so the air ends up off by the sensor's
-        offset."""
+        """The chamber brings its own sensor to the set-point, so the air ends up off by the sensor's offset."""
         self.chamber.command(self.now, on=on, target_degC=setpoint_degC - self.spec.chamber_offset)
 
     def air_degC(self) -> float:
@@ -216,8 +211,7 @@ class World:
             self._move_bias(0.0, carrying)
 
     def connected(self, path: str) -> Part | None:
-        """The part that ``path`` reaches now: both its relays closed; without a multiplexer, the first
-        part."""
+        """The part that ``path`` reaches now: both its relays closed; without a multiplexer, the first part."""
         relays = self.spec.relays
         if not relays.present:
             return next(iter(self.parts.values()), None)

@@ -227,3 +227,35 @@ def test_a_pulse_on_a_standing_current_starts_and_ends_there():
     assert (before, after) == (2.0, 2.0)
     assert shot.on_current[0] == 2.0
     assert shot.off_current[-1] == pytest.approx(2.0)
+
+
+def test_an_empty_bank_drives_nothing():
+    dead = Bank(7e-3, 5e-3, 20.0 / 7e-3)
+    shot = fire(dead, SWITCH, LOOP, voltage=0.0, width=10e-6, rising=LAWS["gapped"].at(25.0).still())
+    t = np.linspace(-1e-6, 20e-6, 50)
+    assert shot.peak == 0.0
+    assert np.all(shot.part_voltage(t) == 0.0)
+    assert shot.delivered == shot.part_heat == 0.0
+
+
+def test_what_a_remembering_core_keeps_becomes_heat():
+    """Up one branch and back another: ∮ i dλ stays in the core, on top of the winding's R i² (any text on hysteresis)."""
+    curve = FluxLaw("remanent", 33e-6, 8.0, sharpness=4.0, memory=0.15).at(25.0)
+
+    def heat(rising):
+        shot = fire(BANK, SWITCH, LOOP, voltage=12.0, width=26e-6, rising=rising)
+        i = np.linspace(0.0, shot.peak, 20001)
+        up, down = rising.slope(i), curve.still(rising.offset_at(shot.peak)).slope(i)
+        loop = float(np.sum(0.5 * ((i * (up - down))[1:] + (i * (up - down))[:-1])) * (i[1] - i[0]))
+        winding = sum(
+            float(np.sum(0.5 * (c[1:] ** 2 + c[:-1] ** 2) * np.diff(t)))
+            for t, c in ((shot.on_time, shot.on_current), (shot.off_time, shot.off_current))
+        )
+        return shot.part_heat, loop, 18e-3 * winding
+
+    total, loop, winding = heat(curve.growing(0.0))
+    assert loop > 0.1 * winding
+    assert total == pytest.approx(loop + winding, rel=1e-3)  # by trapezoids here and there
+    total, loop, winding = heat(curve.conditioned())
+    assert loop == pytest.approx(0.0, abs=1e-9)
+    assert total == pytest.approx(winding, rel=1e-3)
