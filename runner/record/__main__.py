@@ -1,5 +1,6 @@
 """``python -m runner.record FOLDER``: rebuild ``record.h5``, quietly and with low priority."""
 
+import os
 import sys
 
 from runner.errors import KneemapError
@@ -24,4 +25,6 @@ def main(arguments: list[str]) -> int:
 
 
 if __name__ == "__main__":
-    sys.exit(main(sys.argv[1:]))
+    status = main(sys.argv[1:])
+    sys.stderr.flush()
+    os._exit(status)  # not sys.exit: should HDF5 have failed to write after all, taking it down would crash

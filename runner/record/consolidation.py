@@ -12,9 +12,9 @@ import sys
 from pathlib import Path
 
 from runner.record import hdf, reading
-from runner.record.durable import replace
+from runner.record.durable import replace, reserve
 from runner.record.errors import RecordError
-from runner.record.extractions import add_extraction, read_everything
+from runner.record.extractions import ROOM_FOR_EXTRACTION, add_extraction, read_everything
 from runner.record.layout import store_digest, write_record
 from runner.record.lock import holding_record_lock
 from runner.record.places import PART, RECORD
@@ -40,7 +40,7 @@ def consolidate(folder: Path | str) -> Path:
         part, record = folder / PART, folder / RECORD
         earlier = _earlier_extractions(record)
         try:
-            _build(folder, part)
+            _build(folder, part, extractions=len(earlier))
             for tables, text, made_from in earlier:
                 with hdf.open_to_change(part) as file:
                     add_extraction(file, tables, text, made_from)
@@ -90,9 +90,11 @@ def is_current(folder: Path) -> bool:
         return shown == reading.mark(journal)
 
 
-def _build(folder: Path, part: Path) -> None:
-    with reading.snapshot(folder) as journal, hdf.create(part) as file:
-        raw_sha256 = write_record(file, journal)
+def _build(folder: Path, part: Path, *, extractions: int) -> None:
+    with reading.snapshot(folder) as journal:
+        reserve(part, reading.largest_record(journal) + ROOM_FOR_EXTRACTION * (1 + extractions))
+        with hdf.create(part) as file:
+            raw_sha256 = write_record(file, journal)
     with hdf.open_to_read(part) as file:
         found = raw_sha256_of(file)
     if found != raw_sha256:

@@ -5,11 +5,13 @@ fsynced before it got that name. Leave one of them out and a power cut takes the
 does).
 """
 
+import errno
 import os
 import shutil
 import time
 from pathlib import Path
 
+_IS_WINDOWS = os.name == "nt"
 _REPLACE_TRIES = 20
 _REPLACE_PAUSE = 0.25  # s
 
@@ -31,13 +33,31 @@ def fsync_file(path: Path) -> None:
 
 def fsync_folder(folder: Path) -> None:
     """Wait until the names in a folder are on the disk. Windows has no such call and needs none."""
-    if os.name == "nt":
+    if _IS_WINDOWS:
         return
     descriptor = os.open(folder, os.O_RDONLY)
     try:
         os.fsync(descriptor)
     finally:
         os.close(descriptor)
+
+
+def reserve(part: Path, size: int) -> None:
+    """See that a file of this many bytes could be written now, and leave it empty.
+
+    HDF5 does not survive a full disk: it keeps what it could not write, fails again at every close and takes the
+    process with it at the end. So the question is asked before it opens the file; and a rebuild that might fill the
+    disk does not start, because the next point needs that room more.
+
+    Raises:
+        OSError: there is no room, or a quota or limit forbids it.
+    """
+    with part.open("wb") as file:
+        if hasattr(os, "posix_fallocate"):
+            os.posix_fallocate(file.fileno(), 0, size)
+            file.truncate(0)
+        elif (free := shutil.disk_usage(part.parent).free) < size:
+            raise OSError(errno.ENOSPC, f"{size} bytes are needed, {free} are free")
 
 
 def replace(part: Path, final: Path) -> bool:
@@ -52,7 +72,7 @@ def replace(part: Path, final: Path) -> bool:
         try:
             part.replace(final)
         except PermissionError:
-            if os.name != "nt":
+            if not _IS_WINDOWS:
                 raise
             if tries_left:
                 time.sleep(_REPLACE_PAUSE)

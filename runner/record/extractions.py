@@ -16,13 +16,16 @@ import h5py
 import numpy as np
 
 from runner.record import hdf
-from runner.record.durable import copy_file, replace, write_file
+from runner.record.durable import copy_file, replace, reserve, write_file
 from runner.record.errors import RecordError, not_a_run
 from runner.record.lock import holding_record_lock
 from runner.record.places import PART, RECORD, RESULT
 from runner.record.rows import METHODS, Method
 from runner.record.tables import ExtractionTables, IsatTable, SurfaceTable
 from runner.record.verify import raw_sha256_of
+
+#: Bytes that one extraction may add, generously.
+ROOM_FOR_EXTRACTION = 8_000_000
 
 
 def write_extraction(path: Path | str, tables: ExtractionTables, result: Mapping[str, Any]) -> None:
@@ -47,6 +50,7 @@ def write_extraction(path: Path | str, tables: ExtractionTables, result: Mapping
     with holding_record_lock(record.parent):
         part = record.with_name(PART)
         try:
+            reserve(part, record.stat().st_size + ROOM_FOR_EXTRACTION)
             copy_file(record, part)
             _append(part, tables, text)
             left_behind = not replace(part, record)

@@ -27,8 +27,8 @@ def open_to_change(path: Path) -> h5py.File:
 
 
 def open_to_read(path: Path) -> h5py.File:
-    """Without HDF5's own file lock: a finished record never changes, and may lie where locks are refused."""
-    return h5py.File(path, "r", locking=False)
+    """With the locking that everybody gets: HDF5 refuses to open one file in two ways within a process."""
+    return h5py.File(path, "r")
 
 
 def group(parent: h5py.Group, name: str, nx_class: str, **attributes: Any) -> h5py.Group:

@@ -86,7 +86,10 @@ class Journal:
         """
         checks.check_header(header)
         folder = Path(folder)
-        make_folder(folder)
+        try:
+            make_folder(folder)
+        except OSError as error:
+            raise RecordError(f"{folder}: cannot be made: {error}.") from error
         lock = take_run_lock(folder)
         try:
             if (folder / RECORD).exists() or reading.has_run(folder):
@@ -466,18 +469,20 @@ def _refuse_changes(folder: Path, header: RunHeader, plan: bytes, bench: bytes) 
 
 
 def _difference(was: bytes, now: bytes) -> str:
-    """The first lines that differ, and what to do about it."""
-    lines = difflib.unified_diff(
-        was.decode(errors="replace").splitlines(),
-        now.decode(errors="replace").splitlines(),
-        "as started",
-        "now",
-        n=0,
-        lineterm="",
-    )
-    changed = [line for line in lines if line[:1] in "+-@" and line[:3] not in ("---", "+++")][:6]
-    shown = "; ".join(changed) if changed else "only its line ends or its encoding differ"
+    """The first place where the lines differ, and what to do about it."""
+    before, after = (text.decode(errors="replace").splitlines() for text in (was, now))
+    changes = difflib.SequenceMatcher(None, before, after, autojunk=False).get_opcodes()
+    differing = [change for change in changes if change[0] != "equal"]
+    shown = "only its line ends or its encoding differ"
+    if differing:
+        _, first, last, now_first, now_last = differing[0]
+        more = f" ({len(differing) - 1} more places differ)" if len(differing) > 1 else ""
+        shown = f"line {first + 1} was {_quoted(before[first:last])} and is {_quoted(after[now_first:now_last])}{more}"
     return f"{shown}. Put the old one back to resume, or start a new run."
+
+
+def _quoted(lines: list[str]) -> str:
+    return repr("\n".join(lines[:3])) if lines else "not there"
 
 
 def _json(where: str, value: Any) -> str:

@@ -12,6 +12,7 @@ from pathlib import Path
 from filelock import FileLock, Timeout
 
 from runner.errors import Fault, InputError
+from runner.record.errors import RecordError
 from runner.record.places import RECORD_LOCK, RUN_LOCK
 
 #: A reader that asks `is_being_acquired` holds the lock for an instant; an acquiring process outwaits it.
@@ -24,12 +25,15 @@ def take_run_lock(folder: Path) -> FileLock:
 
     Raises:
         InputError: another process is acquiring it.
+        RecordError: the disk refused.
     """
     lock = FileLock(folder / RUN_LOCK, timeout=_PATIENCE)
     try:
         lock.acquire()
     except Timeout:
         raise InputError([Fault(str(folder), _REFUSAL)]) from None
+    except OSError as error:
+        raise RecordError(f"{folder / RUN_LOCK}: cannot be locked: {error}.") from error
     return lock
 
 
@@ -57,6 +61,17 @@ def is_being_acquired(folder: Path) -> bool:
 
 @contextmanager
 def holding_record_lock(folder: Path) -> Iterator[None]:
-    """Rebuilds and re-extractions of one run come one after the other, in whichever process they run."""
-    with FileLock(folder / RECORD_LOCK, timeout=_RECORD_PATIENCE):
+    """Rebuilds and re-extractions of one run come one after the other, in whichever process they run.
+
+    Raises:
+        RecordError: the folder cannot be written, or another rebuild takes longer than anybody would wait.
+    """
+    lock = FileLock(folder / RECORD_LOCK, timeout=_RECORD_PATIENCE)
+    try:
+        lock.acquire()
+    except OSError as error:
+        raise RecordError(f"{folder / RECORD_LOCK}: cannot be locked: {error}.") from error
+    try:
         yield
+    finally:
+        lock.release()

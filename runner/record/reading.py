@@ -9,11 +9,11 @@ reported, never repaired.
 import json
 import math
 import sqlite3
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import closing, contextmanager
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any
+from typing import Any, Self, TypeVar
 
 import numpy as np
 
@@ -99,16 +99,27 @@ def connect(folder: Path) -> sqlite3.Connection:
     name = path.absolute().as_uri() + "?mode=ro"
     try:
         connection = _tried(name)
-    except sqlite3.OperationalError:
+    except sqlite3.OperationalError as error:
         # A closed journal in a folder that may only be read: SQLite cannot make its shared memory there.
         # Without a log beside it nothing can change it, and it may be read as it lies. With one, points would
         # be missing.
-        if path.with_name(path.name + "-wal").exists():
-            raise RecordError(f"{path}: cannot be read where it lies; copy the whole folder first.") from None
-        connection = _tried(name + "&immutable=1")
+        log = path.with_name(path.name + "-wal")
+        if log.exists() and log.stat().st_size:
+            raise _unreadable(path, error) from error
+        try:
+            connection = _tried(name + "&immutable=1")
+        except sqlite3.DatabaseError as error_again:
+            raise _unreadable(path, error_again) from error_again
     except sqlite3.DatabaseError as error:
-        raise RecordError(f"{path}: damaged, or not a journal: {error}.") from error
+        raise _unreadable(path, error) from error
     return connection
+
+
+def _unreadable(path: Path, error: sqlite3.Error) -> RecordError:
+    return RecordError(
+        f"{path}: cannot be read: {error}. If the run lies where it may only be read, copy the whole folder (the -wal "
+        "file too) to a disk of this computer first; otherwise it is damaged."
+    )
 
 
 def _tried(name: str) -> sqlite3.Connection:
@@ -126,8 +137,11 @@ def snapshot(folder: Path) -> Iterator[sqlite3.Connection]:
     """One instant of the run, for as long as the block lasts."""
     with closing(connect(folder)) as connection:
         connection.execute("BEGIN")
-        read_header(connection, folder)  # the first read fixes the instant
-        yield connection
+        try:
+            read_header(connection, folder)  # the first read fixes the instant
+            yield connection
+        except sqlite3.DatabaseError as error:
+            raise _unreadable(folder / JOURNAL, error) from error
 
 
 # ------------------------------------------------------------------------ rows
@@ -260,6 +274,26 @@ def last_time(connection: sqlite3.Connection) -> float:
     return float(max(t for t in times if t is not None))
 
 
+def largest_record(connection: sqlite3.Connection) -> int:
+    """Bytes that a record of this journal has at most, if nothing in it can be compressed."""
+    codes, captures = connection.execute(
+        "SELECT total(length(v) + length(i)), count(*) FROM capture"
+    ).fetchone()
+    points, texts = connection.execute(
+        "SELECT (SELECT count(*) FROM point), total(length(text)) FROM event"
+    ).fetchone()
+    logged = connection.execute(
+        "SELECT (SELECT count(*) FROM chamber) + (SELECT count(*) FROM body)"
+    ).fetchone()[0]
+    events = connection.execute("SELECT count(*) FROM event").fetchone()[0]
+    files = connection.execute("SELECT total(length(value)) FROM run").fetchone()[0]
+    # 500 bytes a capture for its chunks' place in the index; 200 an event for its columns and the heap of its texts.
+    return (
+        int(1.01 * codes + 500 * captures + 250 * points + 200 * events + 4 * texts + 32 * logged + files)
+        + 1_000_000
+    )
+
+
 def mark(connection: sqlite3.Connection) -> str:
     """A short text that changes whenever the record would: how far the journal has come."""
     counts = {
@@ -274,6 +308,9 @@ def mark(connection: sqlite3.Connection) -> str:
 # ------------------------------------------------------------------------ live
 
 
+_T = TypeVar("_T")
+
+
 class Live:
     """A run as it stands now, also while another process acquires it. Every call is one short read."""
 
@@ -282,44 +319,55 @@ class Live:
         self._connection = connect(self.folder)
 
     def header(self) -> RunHeader:
-        return read_header(self._connection, self.folder)
+        """What the run was started with."""
+        return self._ask(lambda connection: read_header(connection, self.folder))
 
     def state(self) -> str:
-        return str(read_facts(self._connection, self.folder)["state"])
+        """Where the run stands, in the words of whoever acquires it."""
+        return self._ask(lambda connection: str(read_facts(connection, self.folder)["state"]))
 
     def points(self, after: int = 0, limit: int = 1000) -> Columns:
         """Points numbered above ``after``; times in UTC s."""
-        return read_points(self._connection, after, limit)
+        return self._ask(lambda connection: read_points(connection, after, limit))
 
     def events(self, after: int = 0, limit: int = 1000) -> tuple[EventRow, ...]:
         """Events after the first ``after``; times in UTC s."""
-        return read_events(self._connection, after, limit)
+        return self._ask(lambda connection: read_events(connection, after, limit))
 
     def legs(self) -> tuple[LegTimes, ...]:
-        return read_legs(self._connection)
+        """Every leg of the plan; times in UTC s."""
+        return self._ask(read_legs)
 
     def sessions(self) -> tuple[Session, ...]:
-        return read_sessions(self._connection)
+        """Every (re)start; times in UTC s."""
+        return self._ask(read_sessions)
 
     def chamber(self, after: int = 0) -> tuple[FloatArray, FloatArray]:
-        """Readings of the chamber's air after the first ``after``."""
-        return read_chamber(self._connection, after)
+        """Time [UTC s] and air temperature [degC] of the readings after the first ``after``."""
+        return self._ask(lambda connection: read_chamber(connection, after))
 
     def body(self, part: int) -> tuple[FloatArray, FloatArray]:
-        """Readings of a part's body."""
-        return read_body(self._connection, part)
+        """Time [UTC s] and body temperature [degC] of a part."""
+        return self._ask(lambda connection: read_body(connection, part))
 
     def last_time(self) -> float:
-        return last_time(self._connection)
+        """The latest time anywhere in the journal [UTC s]."""
+        return self._ask(last_time)
 
     def close(self) -> None:
         self._connection.close()
 
-    def __enter__(self) -> "Live":
+    def __enter__(self) -> Self:
         return self
 
     def __exit__(self, *_: object) -> None:
         self.close()
+
+    def _ask(self, question: Callable[[sqlite3.Connection], _T]) -> _T:
+        try:
+            return question(self._connection)
+        except sqlite3.DatabaseError as error:
+            raise _unreadable(self.folder / JOURNAL, error) from error
 
 
 def live_points(folder: Path | str, after_seq: int = 0) -> Columns:

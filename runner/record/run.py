@@ -100,7 +100,9 @@ class Run:
         try:
             self._file = hdf.open_to_read(path)
         except OSError as error:
-            raise not_a_run(path, f"is not a record that can be read ({error}); name a run folder or its record.h5.") from error
+            raise not_a_run(
+                path, f"is not a record that can be read ({error}); name a run folder or its record.h5."
+            ) from error
         try:
             state = self._file["entry/run_state"]
             version = int(state.attrs["layout_version"])

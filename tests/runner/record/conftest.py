@@ -1,6 +1,5 @@
 """Sample runs for the tests of the record room. What they hold is drawn from seeds written here."""
 
-import hashlib
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -55,17 +54,10 @@ INSTRUMENTS = (
 
 @dataclass
 class Sample:
-    """A run that was written, and the digest of what went into each point, by its number."""
+    """A run that was written."""
 
     folder: Path
     header: RunHeader
-    written: dict[int, str]
-
-
-def fingerprint(row: PointRow, captures: tuple[CaptureRow, ...]) -> str:
-    """Of all that was handed in for one point."""
-    codes = b"".join(c.voltage.tobytes() + c.current.tobytes() for c in captures)
-    return hashlib.sha256(repr(row).encode() + codes).hexdigest()
 
 
 def point(index: int, *, leg: int = 0, part: int = 0, quality: int = 0, method: str = "pulse") -> PointRow:
@@ -104,13 +96,16 @@ def write_run(
     state: str = "finished", header: RunHeader = HEADER,
 ) -> Sample:  # fmt: skip
     """A whole run: `points` pulse points and `bias` bias points over two legs and two parts."""
-    sample = Sample(folder, header, {})
+    sample = Sample(folder, header)
     with Journal.create(folder, header) as journal:
         journal.session("kneemap 0", {"python": "3"}, START)
         for instrument in INSTRUMENTS:
             journal.instrument(instrument)
-        for number in range(events):
-            journal.event(EventRow(START + number, "info", "note", f"event {number}, 25 °C"))
+        noted = [
+            EventRow(START + number, "info", "note", f"event {number}, 25 °C") for number in range(events)
+        ]
+        for event in noted[:3]:
+            journal.event(event)
         number = journal.setting(setting)
         total = points + bias
         for index in range(total):
@@ -123,7 +118,7 @@ def write_run(
                 row, taken = point(index, leg=leg, part=index % 2), captures(index, number, setting)
             else:
                 row, taken = point(index, leg=leg, part=index % 2, method="bias"), ()
-            sample.written[journal.add_point(row, taken)] = fingerprint(row, taken)
+            journal.add_point(row, taken, noted[3:] if index == 0 else ())
         journal.state(state)
     return sample
 
@@ -149,12 +144,12 @@ def sample_tables(date: str = "2026-12-01T12:00:00Z") -> ExtractionTables:
     )  # fmt: skip
 
 
-@pytest.fixture
+@pytest.fixture(scope="session")
 def header() -> RunHeader:
     return HEADER
 
 
-@pytest.fixture
+@pytest.fixture(scope="session")
 def setting() -> SettingRow:
     return SETTING
 
@@ -169,6 +164,12 @@ def make_captures() -> Callable[..., tuple[CaptureRow, ...]]:
     return captures
 
 
+@pytest.fixture(scope="session")
+def run_writer() -> Callable[..., Sample]:
+    """Writes a run into a given folder."""
+    return write_run
+
+
 @pytest.fixture
 def make_run(tmp_path: Path) -> Callable[..., Sample]:
     """Writes a run into a folder of its own."""
@@ -181,7 +182,7 @@ def make_run(tmp_path: Path) -> Callable[..., Sample]:
     return make
 
 
-@pytest.fixture
+@pytest.fixture(scope="session")
 def tables() -> ExtractionTables:
     return sample_tables()
 

@@ -17,7 +17,7 @@ import pytest
 from runner.record import Live, open_run, verify_record
 
 WRITER = Path(__file__).with_name("writer.py")
-POINTS, SAMPLES = 15, 4000
+POINTS, SAMPLES = 10, 4000
 
 
 @pytest.fixture(scope="module")
@@ -99,12 +99,12 @@ def campaign(place: Path, trials: int, seed: int, knowledge: dict[str, Any]) -> 
 def test_kills_lose_nothing_and_the_resumed_run_is_the_unbroken_one(
     tmp_path: Path, knowledge: dict[str, Any]
 ) -> None:
-    assert campaign(tmp_path, trials=3, seed=20261, knowledge=knowledge) >= 3
+    assert campaign(tmp_path, trials=2, seed=20261, knowledge=knowledge) >= 2
 
 
 @pytest.mark.soak
 def test_many_kills(tmp_path: Path, knowledge: dict[str, Any]) -> None:
-    assert campaign(tmp_path, trials=100, seed=7, knowledge=knowledge) >= 120
+    assert campaign(tmp_path, trials=110, seed=7, knowledge=knowledge) >= 150
 
 
 def test_a_live_reader_sees_whole_points_while_they_are_written_and_rebuilt(
