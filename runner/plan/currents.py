@@ -21,6 +21,9 @@ from runner.plan.bench_file import Fixture
 from runner.plan.plan_file import Part, Plan, Pulse, evenly
 
 SATURATED_SHARE = 0.2  # of the nominal inductance; common practice for a caution, no source
+KNEE_SHARE = (
+    1.4  # of the rated current, where the inductance has fallen by half or more; common practice, no source
+)
 
 
 @dataclass(frozen=True, slots=True)
@@ -32,7 +35,9 @@ class WidthForecast:
         width: [s].
         linear_current, saturated_current: at the end of the pulse [A]; see the module's text.
         energy: taken from the bank by the linear current [J].
-        is_fired: False where the climb is expected to have stopped before.
+        is_fired: False where even on an unsaturated part the climb has stopped before; limits are judged on the others.
+        is_likely: False where the climb will probably have stopped, as the knee of a part lies about `KNEE_SHARE` above
+            its rated current; times and bytes are counted on the others.
     """
 
     part: str
@@ -41,6 +46,7 @@ class WidthForecast:
     saturated_current: float
     energy: float
     is_fired: bool
+    is_likely: bool
 
 
 def charging_current(voltage: float, resistance: float, inductance: float, time: float) -> float:
@@ -85,9 +91,14 @@ def width_forecasts(plan: Plan, fixture: Fixture, part: Part) -> tuple[WidthFore
         return ()
     resistance = part.resistance_at(min(plan.temperatures.at_degC)) + loop_resistance(fixture)
     rail, inductance = plan.pulse.rail, part.inductance
-    stop = plan.pulse.stop_at.current if plan.pulse.stop_at else None
+    stop = plan.pulse.stop_at
+    last = stop.current if stop and stop.current is not None else math.inf
+    likely_last = last
+    # A search goes on around the knee until its budget is used, so all of its points are likely.
+    if stop and stop.drop is not None and isinstance(plan.pulse.width, tuple):
+        likely_last = min(last, KNEE_SHARE * part.rated_current)
     found = []
-    is_fired = True
+    before = 0.0
     for width in planned_widths(plan.pulse):
         linear = charging_current(rail, resistance, inductance, width)
         found.append(
@@ -99,10 +110,11 @@ def width_forecasts(plan: Plan, fixture: Fixture, part: Part) -> tuple[WidthFore
                     rail, resistance, inductance, width, knee=part.rated_current
                 ),
                 energy=charging_energy(rail, resistance, inductance, width),
-                is_fired=is_fired,
+                is_fired=before < last,
+                is_likely=before < likely_last,
             )
         )
-        is_fired = is_fired and (stop is None or linear < stop)
+        before = linear
     return tuple(found)
 
 

@@ -11,11 +11,11 @@ from runner.plan.plan_file import Part, Plan
 from runner.plan.points import expand
 
 CODE_BYTES = 2  # int16 codes, two channels
-CAPTURE_OVERHEAD = 200  # byte, a row of the journal and its place in the record
-POINT_OVERHEAD = 900  # byte, scalars, index and events
-RUN_OVERHEAD = 400_000  # byte, empty tables, groups of the record, plan and bench
-RECORD_SHARE = 0.45  # of the codes that is left in record.h5 after compression (12-bit codes, left-justified)
-LOG_PERIOD = 10.0  # s, between two entries of the temperature log
+CAPTURE_OVERHEAD = 150  # byte, a row of the journal and its place in the record
+POINT_OVERHEAD = 400  # byte, scalars, index and events
+RUN_OVERHEAD = 180_000  # byte, empty tables, groups of the record, plan and bench
+RECORD_SHARE = 0.32  # of the codes that is left in record.h5 after compression (12-bit codes, left-justified)
+LOG_PERIOD = 9.0  # s, between two entries of the temperature log
 LOG_BYTES = 60
 
 
@@ -43,14 +43,14 @@ class Forecast:
     """What a run will take.
 
     Attributes:
-        legs, points, captures: how many.
+        legs, points, captures: how many at most.
         times: by kind and by leg [s].
         widths: each pulse width on each part.
         saturated_share: of the nominal inductance, assumed for `saturated_current`.
         bank_energy: stored in the charged bank [J]; part_energy: in a part at its largest current [J].
         pulse_energy: largest taken from the bank by one pulse [J].
         mean_power: largest mean heating of a part [W].
-        disk_bytes: of journal and record.
+        disk_bytes: of journal and record, for the widths that are likely to be fired.
         limits: each one kept or broken.
         notes: what the figures do not cover.
     """
@@ -115,9 +115,7 @@ def forecast(plan: Plan, bench: Bench) -> Forecast:
         ),
         pulse_energy=max(load.pulse_energy for load in loads),
         mean_power=max(load.mean_power for load in loads),
-        disk_bytes=_disk_bytes(
-            plan, bench, points=len(programme.points), captures=captures, seconds=times.total
-        ),
+        disk_bytes=_disk_bytes(plan, bench, widths, legs=len(programme.legs), seconds=times.total),
         limits=tuple(_limits(plan, loads, bank_energy=bank_energy, duration=times.total)),
         notes=tuple(_notes(plan)),
     )
@@ -192,10 +190,15 @@ def _limit(name: str, limit: float, expected: float, unit: str, text: str) -> Li
     return LimitForecast(name, limit, expected, unit, expected <= limit, text)
 
 
-def _disk_bytes(plan: Plan, bench: Bench, *, points: int, captures: int, seconds: float) -> int:
+def _disk_bytes(
+    plan: Plan, bench: Bench, widths: tuple[WidthForecast, ...], *, legs: int, seconds: float
+) -> int:
     samples = bench.digitizer.samples if bench.digitizer else 0
+    pulses = legs * sum(row.is_likely for row in widths)
+    captures = pulses * plan.pulse.repeats if plan.pulse else 0
+    biases = sum(point.method == "bias" for point in expand(plan).points)
     codes = captures * samples * 2 * CODE_BYTES
-    overhead = captures * CAPTURE_OVERHEAD + points * POINT_OVERHEAD + RUN_OVERHEAD
+    overhead = captures * CAPTURE_OVERHEAD + (pulses + biases) * POINT_OVERHEAD + RUN_OVERHEAD
     return round(codes * (1 + RECORD_SHARE) + overhead + seconds / LOG_PERIOD * LOG_BYTES)
 
 
