@@ -1,6 +1,9 @@
 """Pictures of one part and one method: L(I) by temperature, and the surface L(I, T)."""
 
 import math
+from collections.abc import Iterator
+from dataclasses import dataclass
+from itertools import pairwise
 from typing import Any
 
 import matplotlib
@@ -9,8 +12,9 @@ from matplotlib.axes import Axes
 from matplotlib.colors import ListedColormap
 from matplotlib.lines import Line2D
 from matplotlib.ticker import MaxNLocator
+from matplotlib.tri import Triangulation
 
-from runner.arrays import FloatArray
+from runner.arrays import FloatArray, IntArray
 from runner.report.digits import Scale, celsius, percent, scale_for, short
 from runner.report.facts import INDUCTANCE, Facts, Family, MethodFacts, PartFacts
 from runner.report.look import (
@@ -77,24 +81,25 @@ def draw_surface(part: PartFacts, method: MethodFacts) -> Picture | None:
     if method.family is None or mesh is None:
         return None
     currents, inductances = _scales(method.family)
-    current, temperature, inductance = currents.of(mesh[0]), mesh[1], inductances.of(mesh[2])
+    net = Triangulation(currents.of(mesh.current), mesh.temperature_degC, mesh.triangles)
+    inductance = inductances.of(mesh.inductance)
     figure, (axes,) = new_figure(3.5, layout={"right": 0.86, "top": 0.97})
     axes.grid(False)
     axes.set_facecolor("#f3f3f3")
     levels = MaxNLocator(30).tick_values(float(inductance.min()), float(inductance.max()))
-    filled = axes.contourf(current, temperature, inductance, levels=levels, cmap=_MAP_COLOURS)
+    filled = axes.tricontourf(net, inductance, levels=levels, cmap=_MAP_COLOURS)
     filled.set_edgecolor("face")  # else the page shows hairlines between the levels
-    lines = axes.contour(current, temperature, inductance, levels=MaxNLocator(9).tick_values(levels[0], levels[-1]),
-                         colors=INK, linewidths=0.5, alpha=0.8)  # fmt: skip
+    rounder = MaxNLocator(9).tick_values(levels[0], levels[-1])
+    lines = axes.tricontour(net, inductance, levels=rounder, colors=INK, linewidths=0.5, alpha=0.8)
     axes.clabel(lines, fontsize=7, fmt=lambda level: f"{level:g}")
     bar = figure.colorbar(filled, cax=figure.add_axes((0.88, 0.15, 0.022, 0.79)), ticks=MaxNLocator(8))
     bar.set_label(f"{INDUCTANCE[method.name].capitalize()} ({inductances.unit})")
     bar.outline.set_visible(False)
-    axes.plot(np.full(temperature.shape[0], current.min()), temperature[:, 0], ">", color=INK,
-              markersize=4, clip_on=False, zorder=5)  # fmt: skip
+    rows = np.unique(mesh.temperature_degC)
+    axes.plot(np.full(rows.size, net.x.min()), rows, ">", color=INK, markersize=4, clip_on=False, zorder=5)
     axes.set_xlabel(f"Current ({currents.unit})")
     axes.set_ylabel("Temperature of the part (°C)")
-    axes.set_xlim(float(current.min()), float(current.max()))
+    axes.set_xlim(float(net.x.min()), float(net.x.max()))
     for place, drop in enumerate(method.drops):
         _trace_knee(axes, method, drop, currents, place)
     return Picture(
@@ -109,30 +114,56 @@ def draw_surface(part: PartFacts, method: MethodFacts) -> Picture | None:
     )
 
 
-def _mesh(family: Family) -> tuple[FloatArray, FloatArray, FloatArray] | None:
-    """Current, temperature and inductance, each [m, SAMPLES], on a net that spans what was measured and no
-    more.
+@dataclass(frozen=True, slots=True)
+class _Mesh:
+    """Nodes [n] where something was measured and the triangles [k, 3] between them."""
 
-    Every row runs from the first to the last current measured at its temperature, so that the map ends where
-    the measurement does, without steps. None where fewer than two different temperatures have two currents
-    each.
+    current: FloatArray
+    temperature_degC: FloatArray
+    inductance: FloatArray
+    triangles: IntArray
+
+
+def _mesh(family: Family) -> _Mesh | None:
+    """A net over what was measured and no more; None with fewer than two temperatures of two currents each.
+
+    Rows of the table become rows of nodes. Between two rows the net joins equal currents, so that the map is straight in
+    temperature there; where one row ends sooner, the rest of the other is joined to its end.
     """
-    rows = []
-    for temperature, inductance in zip(family.temperature_degC, family.inductance, strict=True):
-        seen = np.isfinite(inductance)
-        if np.count_nonzero(seen) < 2:
-            continue
-        current = np.linspace(family.current[seen][0], family.current[seen][-1], MAP_SAMPLES)
-        rows.append(
-            (
-                current,
-                np.full(MAP_SAMPLES, temperature),
-                np.interp(current, family.current[seen], inductance[seen]),
-            )
-        )
-    if len(rows) < 2 or np.ptp([row[1][0] for row in rows]) <= 0:
+    measured = np.isfinite(family.inductance)
+    rows = [r for r in range(measured.shape[0]) if np.count_nonzero(measured[r]) > 1]
+    if len(rows) < 2 or np.ptp(family.temperature_degC[rows]) <= 0:
         return None
-    return np.array([r[0] for r in rows]), np.array([r[1] for r in rows]), np.array([r[2] for r in rows])
+    columns = np.flatnonzero(measured.any(axis=0))
+    ends = [np.flatnonzero(measured[r])[[0, -1]] for r in rows]
+    columns = np.union1d(columns[:: max(1, columns.size // MAP_SAMPLES)], np.concatenate(ends))
+    at = [(r, c) for r in rows for c in columns if measured[r, c]]
+    number = {place: k for k, place in enumerate(at)}
+    triangles: list[tuple[int, int, int]] = []
+    for lower, upper in pairwise(rows):
+        below, above = (
+            [(float(family.current[c]), number[r, c]) for c in columns if measured[r, c]]
+            for r in (lower, upper)
+        )
+        triangles += _strip(below, above)
+    return _Mesh(
+        current=np.array([family.current[c] for _, c in at]),
+        temperature_degC=np.array([family.temperature_degC[r] for r, _ in at]),
+        inductance=np.array([family.inductance[place] for place in at]),
+        triangles=np.array(triangles, dtype=np.int64),
+    )
+
+
+def _strip(below: list[tuple[float, int]], above: list[tuple[float, int]]) -> Iterator[tuple[int, int, int]]:
+    """Triangles between two rows of (current, node): the row that lags behind in current goes one node on."""
+    i = j = 0
+    while i + 1 < len(below) or j + 1 < len(above):
+        if j + 1 == len(above) or (i + 1 < len(below) and below[i + 1][0] <= above[j + 1][0]):
+            yield below[i][1], below[i + 1][1], above[j][1]
+            i += 1
+        else:
+            yield below[i][1], above[j + 1][1], above[j][1]
+            j += 1
 
 
 def _trace_knee(axes: Axes, method: MethodFacts, drop: float, currents: Scale, place: int) -> None:

@@ -25,6 +25,7 @@ from runner.report.tables import Table
 ELSEWHERE = frozenset(
     {
         "initial_inductance", "saturation_current", "winding_resistance", "budget", "rated_current", "inductance_kind",
+        "inductance", "resistance", "description",
         "cross_check", "sentences", "label", "flags", "methods",
     }
 )  # fmt: skip

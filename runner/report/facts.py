@@ -104,7 +104,6 @@ class PartFacts:
     index: int
     slug: str
     label: str
-    description: str
     rated_current: float
     methods: tuple[MethodFacts, ...]
     flags: tuple[Flag, ...]
@@ -152,7 +151,6 @@ def gather(run: Run, rated_currents: Mapping[int, float]) -> Facts:
                 index=index,
                 slug=f"part_{index:02d}",
                 label=label,
-                description=str(part.description or ""),
                 rated_current=rated if math.isfinite(rated) else rated_currents.get(index, math.nan),
                 methods=_methods(run, index, written.get("methods") or {}),
                 flags=tuple(

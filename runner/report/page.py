@@ -142,7 +142,6 @@ def _part(run: Run, facts: Facts, part: PartFacts, paste: Any) -> dict[str, Any]
     return {
         "slug": part.slug,
         "label": part.label,
-        "description": part.description,
         "headline": hold_together(headline(facts, part)),
         "sentences": [*map(str, part.extras.get("sentences") or []), *extra_texts(part.extras)],
         "methods": [_method(facts, part, method, paste) for method in part.methods],
@@ -160,7 +159,6 @@ def _method(facts: Facts, part: PartFacts, method: MethodFacts, paste: Any) -> d
     inductance = INDUCTANCE[method.name]
     title = f"Initial {inductance}"
     initial = temperature_table(facts, title, method.initial, "H", title=title) if method.initial else None
-    budgets = [budget_table(entry) for entry in method.extras.get("budget") or []]
     return {
         "title": METHOD_TITLES[method.name],
         "inductance": inductance,
@@ -169,7 +167,7 @@ def _method(facts: Facts, part: PartFacts, method: MethodFacts, paste: Any) -> d
         "curves": paste(draw_curves(facts, part, method)),
         "surface": paste(draw_surface(part, method)),
         "initial": initial,
-        "budgets": [budget for budget in budgets if budget],
+        "budget": budget_table(method, headline_drop(method)),
         "extras": list(extra_tables(method.extras, facts.coverage)),
         "texts": list(extra_texts(method.extras)),
     }

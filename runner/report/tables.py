@@ -34,6 +34,8 @@ from runner.report.facts import (
 from runner.report.words import counted_from, short_margin
 
 DROPS_A_TABLE = 3
+MOST_BUDGETS = 8
+WORTH_TELLING = 0.02  # of the whole uncertainty; smaller contributions are told together
 
 
 @dataclass(frozen=True, slots=True)
@@ -118,32 +120,66 @@ def temperature_table(
     return Table(title, head, tuple(rows))
 
 
-def budget_table(entry: Mapping[str, Any]) -> Table | None:
-    """Contributions to the uncertainty of one saturation current, the largest first; None when there are
-    none.
+def budget_table(method: MethodFacts, drop: float | None) -> Table | None:
+    """Contributions to the standard uncertainty of Isat at one drop: the largest first, a column a temperature.
+
+    None when the result has no budget for the drop. With many temperatures some are left out, evenly.
     """
-    contributions = [
+    entries = [
+        (number(entry.get("temperature_degC")), _contributions(entry))
+        for entry in method.extras.get("budget") or []
+        if number(entry.get("drop")) == drop
+    ]
+    entries = sorted((entry for entry in entries if entry[1]), key=lambda entry: entry[0])
+    if drop is None or not entries:
+        return None
+    left_out = len(entries) - MOST_BUDGETS
+    if left_out > 0:
+        entries = [entries[round(k * (len(entries) - 1) / (MOST_BUDGETS - 1))] for k in range(MOST_BUDGETS)]
+    totals = [math.sqrt(sum(u**2 for u in contributions.values())) for _, contributions in entries]
+    scale = scale_for(totals, "A")
+    largest = _largest_shares([contributions for _, contributions in entries], totals)
+    told = sorted(
+        (name for name in largest if largest[name] >= WORTH_TELLING), key=lambda name: -largest[name]
+    )
+    rows = [
+        (name, *(_two_digits(scale.of(contributions.get(name, math.nan))) for _, contributions in entries))
+        for name in told
+    ]
+    if len(told) < len(largest):
+        rest = [math.sqrt(sum(u**2 for n, u in c.items() if n not in told)) for _, c in entries]
+        small = ", ".join(name for name in largest if name not in told)
+        rows.append((f"the rest ({small})", *(_two_digits(scale.of(u)) for u in rest)))
+    rows.append(("all together", *(_two_digits(scale.of(total)) for total in totals)))
+    return Table(
+        f"Where the uncertainty of the saturation current at {percent(drop)} drop comes from",
+        (f"Standard uncertainty ({scale.unit})", *(celsius(temperature, 0) for temperature, _ in entries)),
+        tuple(rows),
+        "Combined as independent of each other. Other drops"
+        + (" and temperatures" if left_out > 0 else "")
+        + " stand in result.json.",
+    )
+
+
+def _largest_shares(budgets: Sequence[Mapping[str, float]], totals: Sequence[float]) -> dict[str, float]:
+    """Each contribution over the whole, where it is largest."""
+    shares: dict[str, float] = {}
+    for contributions, total in zip(budgets, totals, strict=True):
+        for name, u in contributions.items():
+            shares[name] = max(shares.get(name, 0.0), u / total)
+    return shares
+
+
+def _contributions(entry: Mapping[str, Any]) -> dict[str, float]:
+    found = (
         (str(c.get("name", "")), number(c.get("standard_uncertainty")))
         for c in entry.get("contributions") or []
-    ]
-    contributions = sorted((c for c in contributions if c[1] > 0), key=lambda c: -c[1])
-    if not contributions:
-        return None
-    total = math.sqrt(sum(u**2 for _, u in contributions))
-    scale = scale_for([total], "A")
-
-    def line(name: str, u: float) -> tuple[str, ...]:
-        rounded, places = round_uncertainty(scale.of(u))
-        return (name, fixed(rounded, places), f"{100 * u**2 / total**2:.1f} %")
-
-    rows = [line(name, u) for name, u in contributions]
-    rows.append(line("combined", total))
-    return Table(
-        f"Uncertainty of the saturation current at {percent(number(entry.get('drop')))} drop, "
-        f"{celsius(number(entry.get('temperature_degC')))}",
-        ("Contribution", f"Standard uncertainty ({scale.unit})", "Share of the variance"),
-        tuple(rows),
     )
+    return {name: u for name, u in found if u > 0}
+
+
+def _two_digits(uncertainty: float) -> str:
+    return fixed(*round_uncertainty(uncertainty)) if uncertainty > 0 else NOTHING
 
 
 def _interval(text: IntervalText) -> str:

@@ -14,6 +14,7 @@ import yaml
 from runner.report.digits import (
     NOTHING,
     celsius,
+    fixed,
     interval_text,
     percent,
     round_uncertainty,
@@ -96,7 +97,7 @@ def counted_from(reference: str) -> str:
 def short_margin(knee: Knee, rated_current: float) -> str:
     """Isat over rated current, less one, to one digit of its uncertainty; a bound where it was not reached.
 
-    Where the interval holds zero, the sign is not certain, and the interval stands beside it.
+    Where the interval holds zero, the sign is not certain, and the half-width stands beside it.
     """
     low, high = knee.estimate.low / rated_current - 1, knee.estimate.high / rated_current - 1
     if not knee.is_reached:
@@ -105,8 +106,7 @@ def short_margin(knee: Knee, rated_current: float) -> str:
     half_width = 100 * max(high - margin, margin - low)
     places = round_uncertainty(half_width)[1] if half_width > 0 else 2
     if low < 0 < high:
-        interval = f"{signed_percent(low, places)} to {signed_percent(high, places)}"
-        return f"{signed_percent(margin, places)} ({interval})"
+        return f"{signed_percent(margin, places)[:-2]} ± {fixed(half_width, places)} %"
     return signed_percent(margin, places - 1)
 
 

@@ -14,7 +14,7 @@ NAN = math.nan
 
 def _part(rated, *knees):
     method = MethodFacts("pulse", None, (), knees, (), {})
-    return PartFacts(0, "part_00", "P", "", rated, (method,), (), {}), method
+    return PartFacts(0, "part_00", "P", rated, (method,), (), {}), method
 
 
 def _knee(drop, value=8.24, low=8.20, high=8.28, status="measured", temperature=25.1):
@@ -79,28 +79,43 @@ def test_one_prefix_serves_a_column():
     assert table.rows == (("−40.0", "0.900", "0.890 to 0.910"), ("25.0", "18.00", "17.90 to 18.10"))
 
 
+def _with_budget(*entries):
+    return MethodFacts("pulse", None, (), (), (), {"budget": list(entries)})
+
+
+def _budget(temperature, drop=0.3, **contributions):
+    listed = [{"name": n.replace("_", " "), "standard_uncertainty": u} for n, u in contributions.items()]
+    return {"temperature_degC": temperature, "drop": drop, "ampere": 8.2, "contributions": listed}
+
+
 def test_a_budget_lists_its_contributions_by_size_and_combines_them():
-    """Two independent contributions of 3 mA and 4 mA combine to 5 mA; their shares are 9/25 and 16/25."""
-    table = budget_table(
-        {
-            "temperature_degC": 25.1, "drop": 0.3, "ampere": 8.2,
-            "contributions": [
-                {"name": "noise", "standard_uncertainty": 0.003},
-                {"name": "shunt", "standard_uncertainty": 0.004},
-                {"name": "nothing", "standard_uncertainty": 0.0},
-            ],
-        }
-    )  # fmt: skip
-    assert table.title == "Uncertainty of the saturation current at 30 % drop, 25.1 °C"
+    """Two independent contributions of 3 mA and 4 mA combine to 5 mA (GUM 5.1.2)."""
+    method = _with_budget(
+        _budget(85.0, noise=0.006, shunt=0.008),
+        _budget(25.1, noise=0.003, shunt=0.004, nothing=0.0, skew=0.000012),
+        _budget(25.1, drop=0.1, noise=1.0),
+    )
+    table = budget_table(method, 0.3)
+    assert table.title == "Where the uncertainty of the saturation current at 30 % drop comes from"
+    assert table.head == ("Standard uncertainty (mA)", "25 °C", "85 °C")
     assert table.rows == (
-        ("shunt", "4.0", "64.0 %"),
-        ("noise", "3.0", "36.0 %"),
-        ("combined", "5.0", "100.0 %"),
+        ("shunt", "4.0", "8.0"),
+        ("noise", "3.0", "6.0"),
+        ("the rest (skew)", "0.012", "–"),
+        ("all together", "5.0", "10"),
     )
 
 
-def test_a_budget_without_contributions_is_no_table():
-    assert budget_table({"temperature_degC": 25.0, "drop": 0.3, "contributions": []}) is None
+def test_a_budget_of_many_temperatures_keeps_the_ends():
+    table = budget_table(_with_budget(*(_budget(float(t), noise=0.001) for t in range(0, 200, 10))), 0.3)
+    assert len(table.head) == 9
+    assert (table.head[1], table.head[-1]) == ("0 °C", "190 °C")
+    assert "temperatures" in table.note
+
+
+@pytest.mark.parametrize("drop", [0.3, None])
+def test_a_budget_without_contributions_is_no_table(drop):
+    assert budget_table(_with_budget(_budget(25.0)), drop) is None
 
 
 @pytest.mark.parametrize(
