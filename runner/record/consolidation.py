@@ -12,7 +12,7 @@ import sys
 from pathlib import Path
 
 from runner.record import hdf, reading
-from runner.record.durable import replace, reserve
+from runner.record.durable import removed_unless_finished, replace, reserve
 from runner.record.errors import RecordError
 from runner.record.extractions import ROOM_FOR_EXTRACTION, add_extraction, read_everything
 from runner.record.layout import store_digest, write_record
@@ -40,13 +40,13 @@ def consolidate(folder: Path | str) -> Path:
         part, record = folder / PART, folder / RECORD
         earlier = _earlier_extractions(record)
         try:
-            _build(folder, part, extractions=len(earlier))
-            for tables, text, made_from in earlier:
-                with hdf.open_to_change(part) as file:
-                    add_extraction(file, tables, text, made_from)
-            return record if replace(part, record) else part
+            with removed_unless_finished(part):
+                _build(folder, part, extractions=len(earlier))
+                for tables, text, made_from in earlier:
+                    with hdf.open_to_change(part) as file:
+                        add_extraction(file, tables, text, made_from)
+                return record if replace(part, record) else part
         except (OSError, RuntimeError) as error:
-            part.unlink(missing_ok=True)  # gives its room back: the disk may be full
             raise RecordError(
                 f"{record}: could not be rebuilt: {error}. "
                 "The journal is untouched; try again when the disk allows."

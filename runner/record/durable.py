@@ -9,6 +9,8 @@ import errno
 import os
 import shutil
 import time
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 
 _IS_WINDOWS = os.name == "nt"
@@ -58,6 +60,16 @@ def reserve(part: Path, size: int) -> None:
             file.truncate(0)
         elif (free := shutil.disk_usage(part.parent).free) < size:
             raise OSError(errno.ENOSPC, f"{size} bytes are needed, {free} are free")
+
+
+@contextmanager
+def removed_unless_finished(part: Path) -> Iterator[None]:
+    """Whatever ends the block early leaves no half file behind; a full disk gets its room back."""
+    try:
+        yield
+    except BaseException:
+        part.unlink(missing_ok=True)
+        raise
 
 
 def replace(part: Path, final: Path) -> bool:

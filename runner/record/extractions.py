@@ -16,7 +16,7 @@ import h5py
 import numpy as np
 
 from runner.record import hdf
-from runner.record.durable import copy_file, replace, reserve, write_file
+from runner.record.durable import copy_file, removed_unless_finished, replace, reserve, write_file
 from runner.record.errors import RecordError, not_a_run
 from runner.record.lock import holding_record_lock
 from runner.record.places import PART, RECORD, RESULT
@@ -28,13 +28,17 @@ from runner.record.verify import raw_sha256_of
 ROOM_FOR_EXTRACTION = 8_000_000
 
 
-def write_extraction(path: Path | str, tables: ExtractionTables, result: Mapping[str, Any]) -> None:
+def write_extraction(
+    path: Path | str, tables: ExtractionTables, result: Mapping[str, Any], *, made_from: str | None = None
+) -> None:
     """Add an extraction to a record and write ``result.json`` beside it. Needs no journal.
 
     Args:
         path: a run folder, or a ``record.h5`` wherever it lies.
         tables: surfaces and curves.
         result: the result as it will be written to ``result.json``; NaN and infinity become null.
+        made_from: `Run.raw_sha256` of the data it was made from, when the record may have grown since; otherwise
+            it is taken to be made from what the record holds.
 
     Raises:
         InputError: there is no record.
@@ -50,21 +54,30 @@ def write_extraction(path: Path | str, tables: ExtractionTables, result: Mapping
     with holding_record_lock(record.parent):
         part = record.with_name(PART)
         try:
-            reserve(part, record.stat().st_size + ROOM_FOR_EXTRACTION)
-            copy_file(record, part)
-            _append(part, tables, text)
-            left_behind = not replace(part, record)
-        except (OSError, RuntimeError) as error:
-            part.unlink(missing_ok=True)
+            with removed_unless_finished(part):
+                reserve(part, record.stat().st_size + ROOM_FOR_EXTRACTION)
+                copy_file(record, part)
+                _append(part, tables, text, made_from)
+                left_behind = not replace(part, record)
+        except (OSError, KeyError, RuntimeError) as error:
             raise RecordError(f"{record}: the extraction could not be added: {error}.") from error
-        write_file(record.with_name(RESULT), text.encode() + b"\n")
+        _write_result(record.with_name(RESULT), text)
     if left_behind:
         raise RecordError(f"{record}: somebody keeps it open, so the new one was left beside it as {part}.")
 
 
-def _append(part: Path, tables: ExtractionTables, text: str) -> None:
+def _write_result(path: Path, text: str) -> None:
+    try:
+        write_file(path, text.encode() + b"\n")
+    except OSError as error:
+        raise RecordError(
+            f"{path}: could not be written: {error}. The record holds the same result."
+        ) from error
+
+
+def _append(part: Path, tables: ExtractionTables, text: str, made_from: str | None) -> None:
     with hdf.open_to_change(part) as file:
-        add_extraction(file, tables, text)
+        add_extraction(file, tables, text, made_from)
     with hdf.open_to_read(part) as file:
         if raw_sha256_of(file) != hdf.read_text(file["entry/run_state"], "raw_sha256"):
             raise RecordError(f"{part}: what was measured is not what the record says; nothing was changed.")

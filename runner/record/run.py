@@ -51,6 +51,15 @@ class PointCaptures:
     setting: dict[str, Any]
 
 
+@dataclass(frozen=True, slots=True)
+class _CapturesGroup:
+    voltage: h5py.Dataset
+    current: h5py.Dataset
+    time: FloatArray
+    repeat: Codes
+    setting: dict[str, Any]
+
+
 def open_run(path: Path | str) -> "Run":
     """Open a run folder or a ``record.h5``.
 
@@ -97,6 +106,7 @@ class Run:
 
     def __init__(self, path: Path) -> None:
         self.path = path
+        self._groups: dict[str, _CapturesGroup] = {}
         try:
             self._file = hdf.open_to_read(path)
         except OSError as error:
@@ -289,23 +299,22 @@ class Run:
         if found is None:
             return None
         name, first, last = found
-        made = self._entry[name]
         try:
-            voltage, current = made["voltage"][first:last], made["current"][first:last]
-            repeat = made["repeat"][first:last]
-        except OSError as error:
+            group = self._opened(name)
+            voltage, current = group.voltage[first:last], group.current[first:last]
+        except hdf.DAMAGE as error:
             raise RecordError(
                 f"{self.path}: damaged: captures of point {point} cannot be read: {error}."
             ) from error
-        setting = self._setting(name)
+        setting = group.setting
         return PointCaptures(
-            time=made["time"][:],
+            time=group.time,
             voltage=voltage.astype(np.float64) * setting["v_scale"] + setting["v_offset"],
             current=current.astype(np.float64) * setting["i_scale"] + setting["i_offset"],
             voltage_codes=voltage,
             current_codes=current,
-            repeat=repeat,
-            setting=setting,
+            repeat=group.repeat[first:last],
+            setting=dict(setting),
         )
 
     # -------------------------------------------------------------- extraction
@@ -358,10 +367,18 @@ class Run:
                 found[point] = (name, first, first + count)
         return found
 
-    def _setting(self, name: str) -> dict[str, Any]:
-        facts: dict[str, Any] = json.loads(self._text(f"{name}/setting"))
-        detail: dict[str, Any] = facts.pop("detail")
-        return {"code_min": -math.inf, "code_max": math.inf} | detail | facts
+    def _opened(self, name: str) -> "_CapturesGroup":
+        """What all captures of one setting share is looked up once: a night has thousands of them."""
+        if name not in self._groups:
+            made = self._entry[name]
+            facts: dict[str, Any] = json.loads(hdf.read_text(made, "setting"))
+            setting = {"code_min": -math.inf, "code_max": math.inf} | facts.pop("detail") | facts
+            time: FloatArray = made["time"][:]
+            time.flags.writeable = False  # shared by all that is handed out
+            self._groups[name] = _CapturesGroup(
+                made["voltage"], made["current"], time, made["repeat"][:], setting
+            )
+        return self._groups[name]
 
 
 def _log(made: h5py.Group) -> tuple[FloatArray, FloatArray]:

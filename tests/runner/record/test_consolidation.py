@@ -111,6 +111,7 @@ def test_a_damaged_capture_stops_the_rebuild_and_the_old_record_stays(make_run: 
     with pytest.raises(RecordError, match="voltage codes of point 3, repeat 1"):
         consolidate(folder)
     assert (folder / "record.h5").read_bytes() == old
+    assert not (folder / "record.h5.part").exists()
 
 
 def test_a_damaged_record_is_found_out(make_run: Callable[..., Any]) -> None:

@@ -94,6 +94,25 @@ def test_an_extraction_of_fewer_points_is_not_passed_off_as_current(
         assert file["entry"].attrs["default"] == "extraction_01"
 
 
+def test_an_extraction_knows_the_data_it_was_made_from(archived: Path, tables: ExtractionTables) -> None:
+    with open_run(archived) as run:
+        now = run.raw_sha256
+    write_extraction(archived, tables, {"n": 1}, made_from="another digest")
+    with open_run(archived) as run:
+        assert run.extraction is None
+    write_extraction(archived, tables, {"n": 2}, made_from=now)
+    with open_run(archived) as run:
+        assert run.result == {"n": 2}
+
+
+def test_a_file_that_is_no_record_gets_no_extraction(tmp_path: Path, tables: ExtractionTables) -> None:
+    with h5py.File(tmp_path / "record.h5", "w") as file:
+        file["x"] = 1
+    with pytest.raises(RecordError, match="could not be added"):
+        write_extraction(tmp_path, tables, {})
+    assert {path.name for path in tmp_path.iterdir()} == {"record.h5", "record.lock"}
+
+
 def test_curves_stand_in_the_record_with_their_drop(archived: Path, tables: ExtractionTables) -> None:
     write_extraction(archived, tables, {})
     with h5py.File(archived / "record.h5") as file:
@@ -143,7 +162,7 @@ def test_a_damaged_record_gets_no_extraction(archived: Path, tables: ExtractionT
     with pytest.raises(RecordError, match="checksum"):
         write_extraction(archived, tables, {})
     assert (archived / "record.h5").read_bytes() == before
-    assert not (archived / "result.json").exists()
+    assert {path.name for path in archived.iterdir()} == {"record.h5", "record.lock"}
 
 
 def test_where_there_is_no_record_there_is_nothing_to_add_to(
