@@ -3,20 +3,16 @@
 A calibration constant that is left out is not known: it is absent from `calibration`, never a zero with no uncertainty.
 """
 
-import datetime
 from collections.abc import Mapping
-from typing import Annotated, Any, Literal, Self, TypeVar
+from typing import Annotated, Literal, Self, TypeVar
 
 from pydantic import (
     Field,
-    GetCoreSchemaHandler,
-    ValidationInfo,
-    create_model,
     field_validator,
     model_validator,
 )
-from pydantic_core import CoreSchema, PydanticCustomError, core_schema
 
+from runner.plan.constants import GAIN, Constant, calibrated, constant
 from runner.plan.plan_file import cold_first
 from runner.plan.quantity import (
     CAPACITANCE,
@@ -25,7 +21,6 @@ from runner.plan.quantity import (
     DIFFERENCE,
     DRIFT,
     DURATION,
-    FACTOR,
     FRACTION,
     INDUCTANCE,
     RESISTANCE,
@@ -34,9 +29,7 @@ from runner.plan.quantity import (
     TEMPERATURE,
     TIME,
     VOLTAGE,
-    Kind,
     Quantity,
-    read_quantity,
 )
 from runner.plan.shapes import FileModel, Whole, Words, Written, fault
 from runner.plan.simulation_file import Simulation
@@ -60,90 +53,6 @@ Timeout = Annotated[float, Quantity(DURATION, above=0, most=600, help="Longest w
 Range = Annotated[float, Quantity(VOLTAGE, above=0)]
 
 
-class Constant(FileModel):
-    """A calibration constant; `uncertainty` is one standard uncertainty (k = 1), in the unit of the value."""
-
-    value: float
-    uncertainty: float
-    date: datetime.date | None = None
-    certificate: str | None = None
-
-
-class Uncertainty:
-    """Annotation: a standard uncertainty, written in the unit of its value or as a share of it."""
-
-    def __init__(self, kind: Kind, of: str = "value") -> None:
-        self.kind = kind
-        self.of = of
-
-    def read(self, written: Any, info: ValidationInfo) -> float:
-        value = info.data.get(self.of)
-        try:
-            if isinstance(written, str) and written.strip().endswith("%"):
-                share = read_quantity(written, FRACTION)
-                if value == 0:
-                    raise ValueError(
-                        f"{written!r} of a value of zero says nothing; write it as '{self.kind.example}'"
-                    )
-                result = share * abs(value) if value is not None else share
-            else:
-                result = read_quantity(written, self.kind)
-            if result < 0:
-                raise ValueError(f"{written!r} is negative; a standard uncertainty is zero or more")
-        except ValueError as error:
-            raise PydanticCustomError("quantity", "{said}", {"said": str(error)}) from error
-        return result
-
-    def __get_pydantic_core_schema__(self, source: Any, handler: GetCoreSchemaHandler) -> CoreSchema:
-        return core_schema.with_info_plain_validator_function(self.read)
-
-    def __get_pydantic_json_schema__(self, schema: CoreSchema, handler: Any) -> dict[str, Any]:
-        said = f"One standard uncertainty (k = 1), as a share of the value or such as {self.kind.example}."
-        return {"type": ["string", "number"], "description": said, "examples": ["0.1 %"]}
-
-
-def constant(kind: Kind, least: float | None = None, above: float | None = None) -> Any:
-    """A calibration constant of a kind, written with its unit."""
-    shape = create_model(
-        f"ConstantOf_{kind.name.replace(' ', '_')}",
-        __base__=FileModel,
-        __doc__=f"A calibration constant: {kind.name} with its standard uncertainty (k = 1) and date.",
-        value=(Annotated[float, Quantity(kind, least=least, above=above)], Field()),
-        uncertainty=(Annotated[float, Uncertainty(kind)], Field(examples=["0.1 %"])),
-        date=(datetime.date | None, None),
-        certificate=(str | None, None),
-    )
-    return Annotated[Constant, Written(shape, _as_constant)]
-
-
-def _as_constant(written: Any) -> Constant:
-    return Constant.model_construct(
-        value=written.value,
-        uncertainty=written.uncertainty,
-        date=written.date,
-        certificate=written.certificate,
-    )
-
-
-def _given(written: FileModel) -> dict[str, Constant]:
-    """The constants that were written, by name."""
-    return {
-        name: getattr(written, name)
-        for name in type(written).model_fields
-        if getattr(written, name) is not None
-    }
-
-
-def _calibration(name: str, **constants: Any) -> Any:
-    fields: dict[str, Any] = {key: (constant | None, None) for key, constant in constants.items()}
-    shape = create_model(f"{name}Calibration", __base__=FileModel, **fields)
-    return Annotated[dict[str, Constant], Written(shape, _given), Field(default_factory=dict)]
-
-
-GAIN = constant(FACTOR, above=0)
-NONE = _calibration("No")
-
-
 class Instrument(FileModel):
     """One instrument of the bench.
 
@@ -157,7 +66,7 @@ class Instrument(FileModel):
     resource: Words | None = Field(default=None, examples=["TCPIP::192.0.2.10::5025::SOCKET"])
     dialect: Words = Field(examples=["dialects/scpi_supply.yaml"])
     timeout: Timeout = 5.0
-    calibration: NONE  # type: ignore[valid-type]
+    calibration: Annotated[dict[str, Constant], calibrated("No")] = Field(default_factory=dict)
 
 
 class SupplyMaximum(FileModel):
@@ -214,9 +123,9 @@ class Digitizer(Instrument):
         Field(min_length=1, description="Sampling intervals it can."),
     ] = Field(examples=[["5 ns", "10 ns", "20 ns", "50 ns"]])
     ranges: Ranges = Field(examples=[{"voltage": ["10 V", "20 V"], "shunt": ["100 mV", "200 mV"]}])
-    calibration: _calibration(  # type: ignore[valid-type]
-        "Digitizer", voltage_gain=GAIN, shunt_gain=GAIN, skew=constant(SKEW)
-    )
+    calibration: Annotated[
+        dict[str, Constant], calibrated("Digitizer", voltage_gain=GAIN, shunt_gain=GAIN, skew=constant(SKEW))
+    ] = Field(default_factory=dict)
 
     @field_validator("intervals")
     @classmethod
@@ -227,13 +136,16 @@ class Digitizer(Instrument):
 class Lcr(Instrument):
     """Measures the small-signal inductance on top of the bias."""
 
-    calibration: _calibration(  # type: ignore[valid-type]
-        "Lcr",
-        inductance_gain=GAIN,
-        fixture_inductance=constant(INDUCTANCE),
-        fixture_resistance=constant(RESISTANCE),
-        open_capacitance=constant(CAPACITANCE),
-    )
+    calibration: Annotated[
+        dict[str, Constant],
+        calibrated(
+            "Lcr",
+            inductance_gain=GAIN,
+            fixture_inductance=constant(INDUCTANCE),
+            fixture_resistance=constant(RESISTANCE),
+            open_capacitance=constant(CAPACITANCE),
+        ),
+    ] = Field(default_factory=dict)
 
 
 class BiasMaximum(FileModel):
@@ -248,7 +160,9 @@ class BiasSource(Instrument):
 
     maximum: BiasMaximum = Field(examples=[{"current": "20 A"}])
     ramp: Annotated[float, Quantity(CURRENT_RATE, above=0, help="How fast the current is changed.")] = 5.0
-    calibration: _calibration("BiasSource", current_gain=GAIN)  # type: ignore[valid-type]
+    calibration: Annotated[dict[str, Constant], calibrated("BiasSource", current_gain=GAIN)] = Field(
+        default_factory=dict
+    )
 
 
 class Chamber(Instrument):
@@ -277,15 +191,17 @@ class Chamber(Instrument):
 class Thermometer(Instrument):
     """Reads the body sensor of each part; its channel is the part's channel."""
 
-    calibration: _calibration("Thermometer", offset=constant(DIFFERENCE))  # type: ignore[valid-type]
+    calibration: Annotated[dict[str, Constant], calibrated("Thermometer", offset=constant(DIFFERENCE))] = (
+        Field(default_factory=dict)
+    )
 
 
 class Ohmmeter(Instrument):
     """Measures winding resistance with four wires."""
 
-    calibration: _calibration(  # type: ignore[valid-type]
-        "Ohmmeter", gain=GAIN, lead_resistance=constant(RESISTANCE)
-    )
+    calibration: Annotated[
+        dict[str, Constant], calibrated("Ohmmeter", gain=GAIN, lead_resistance=constant(RESISTANCE))
+    ] = Field(default_factory=dict)
 
 
 class MultiplexerPaths(FileModel):
@@ -303,7 +219,7 @@ class Multiplexer(Instrument):
         examples=[{1: 101, 2: 102}], description="Relay of each part, by channel."
     )
     paths: MultiplexerPaths = Field(
-        default=MultiplexerPaths(), examples=[{"pulse": 201, "bias": 202, "resistance": 203}]
+        default_factory=MultiplexerPaths, examples=[{"pulse": 201, "bias": 202, "resistance": 203}]
     )
     settle: Annotated[float, Quantity(TIME, least=0, help="After a relay has moved.")] = 0.05
 
@@ -329,9 +245,9 @@ class Bank(FileModel):
 class Shunt(FileModel):
     """The current shunt, with what is known of it."""
 
-    resistance: constant(RESISTANCE, above=0)  # type: ignore[valid-type]
-    tempco: constant(TEMPCO) | None = None  # type: ignore[valid-type]
-    series_inductance: constant(INDUCTANCE, least=0) | None = None  # type: ignore[valid-type]
+    resistance: Annotated[Constant, constant(RESISTANCE, above=0)]
+    tempco: Annotated[Constant, constant(TEMPCO)] | None = None
+    series_inductance: Annotated[Constant, constant(INDUCTANCE, least=0)] | None = None
     temperature_degC: Annotated[
         float, Quantity(TEMPERATURE, above=-273.15, help="At which the resistance holds.")
     ] = Field(default=25.0, alias="temperature")
@@ -350,7 +266,7 @@ class Fixture(FileModel):
         default=None, examples=[{"capacitance": "7 mF", "resistance": "5 mohm", "bleed": "20 s"}]
     )
     shunt: Shunt | None = None
-    switch: Switch = Switch()
+    switch: Switch = Field(default_factory=Switch)
     part_time_constants: Annotated[
         tuple[Annotated[float, Quantity(DURATION, above=0)], ...],
         Field(
@@ -392,7 +308,7 @@ class Bench(FileModel):
 
     name: Words = Field(examples=["Bench by the window"])
     instruments: Annotated[Mapping[str, Instrument], Written(Instruments, _by_role)] = Field(examples=[{}])
-    fixture: Fixture = Fixture()
+    fixture: Fixture = Field(default_factory=Fixture)
     simulation: Simulation | None = None
 
     @property

@@ -4,18 +4,17 @@ from typing import Annotated, Any, Self
 
 from pydantic import Field, model_validator
 
-from runner.plan.bench_file import Constant, Shunt, Temperature, Uncertainty, constant
+from runner.plan.bench_file import Shunt, Temperature
+from runner.plan.constants import Constant, Uncertainty, constant
 from runner.plan.plan_file import Extract, Part
 from runner.plan.quantity import INDUCTANCE, RESISTANCE, SKEW, TEMPCO, TEMPERATURE, Kind, Quantity
 from runner.plan.shapes import FileModel, Words, Written, fault, one_of
 
 
-def _perhaps_exact(kind: Kind) -> Any:
-    """A constant that may be written as its value alone; it then counts as exact."""
-    alone = Annotated[float, Quantity(kind)]
-    return Annotated[
-        Constant, Written(one_of(_shape_of_constant, alone=alone, full=constant(kind)), _as_exact)
-    ]
+def _perhaps_exact(kind: Kind) -> Written:
+    """Annotation of a constant that may be written as its value alone; it then counts as exact."""
+    alone, full = Annotated[float, Quantity(kind)], Annotated[Constant, constant(kind)]
+    return Written(one_of(_shape_of_constant, alone=alone, full=full), _as_exact)
 
 
 def _shape_of_constant(written: Any) -> str:
@@ -34,8 +33,8 @@ class CapturesShunt(FileModel):
     resistance: Annotated[float, Quantity(RESISTANCE, above=0)]
     # Named so that the reader of an uncertainty finds the value it is a share of.
     uncertainty: Annotated[float, Uncertainty(RESISTANCE, of="resistance")] = 0.0
-    series_inductance: _perhaps_exact(INDUCTANCE) | None = None  # type: ignore[valid-type]
-    tempco: _perhaps_exact(TEMPCO) | None = None  # type: ignore[valid-type]
+    series_inductance: Annotated[Constant, _perhaps_exact(INDUCTANCE)] | None = None
+    tempco: Annotated[Constant, _perhaps_exact(TEMPCO)] | None = None
     temperature_degC: Annotated[float, Quantity(TEMPERATURE, above=-273.15)] = Field(
         default=25.0, alias="temperature"
     )
@@ -84,14 +83,14 @@ class CapturesFile(FileModel):
     shunt: Annotated[Shunt, Written(CapturesShunt, _as_shunt)] | None = Field(
         default=None, examples=[{"resistance": "10 mohm", "uncertainty": "0.1 %"}]
     )
-    skew: _perhaps_exact(SKEW) | None = Field(  # type: ignore[valid-type]
+    skew: Annotated[Constant, _perhaps_exact(SKEW)] | None = Field(
         default=None, description="Voltage channel later than current channel; estimated when left out."
     )
     columns: Columns = Field(examples=[{"time": "t", "voltage": "v_part", "shunt_voltage": "v_shunt"}])
     captures: Annotated[tuple[CaptureFile, ...], Field(min_length=1)] = Field(
         examples=[[{"file": "t25_w10us.csv", "temperature": "25 degC"}]]
     )
-    extract: Extract = Extract()
+    extract: Extract = Field(default_factory=Extract)
 
     @model_validator(mode="after")
     def _shunt_is_known(self) -> Self:

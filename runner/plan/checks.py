@@ -22,7 +22,7 @@ from runner.plan.check_together import JOINT_CHECKS
 from runner.plan.faults import faults_of
 from runner.plan.finding import Check
 from runner.plan.located import Document
-from runner.plan.plan_file import Plan
+from runner.plan.plan_file import Plan, number_parts
 
 Model = TypeVar("Model", bound=BaseModel)
 Sections = Mapping[str, Any]
@@ -104,8 +104,6 @@ def _readable_roles(written: Mapping[Any, Any]) -> dict[str, Any]:
 
 
 def _numbered(name: str, written: Any) -> Any:
-    from runner.plan.plan_file import number_parts
-
     return number_parts(written) if name == "parts" else written
 
 

@@ -18,7 +18,8 @@ import math
 from dataclasses import dataclass
 
 from runner.plan.bench_file import Fixture
-from runner.plan.plan_file import Part, Plan, Pulse, evenly
+from runner.plan.grids import evenly
+from runner.plan.plan_file import Part, Plan, Pulse
 
 SATURATED_SHARE = 0.2  # of the nominal inductance; common practice for a caution, no source
 KNEE_SHARE = (

@@ -13,7 +13,8 @@ from itertools import pairwise
 
 from runner.plan.bench_file import Bench
 from runner.plan.currents import width_forecasts
-from runner.plan.plan_file import CurrentSeek, Part, Plan, Pulse, Soak
+from runner.plan.grids import CurrentSeek
+from runner.plan.plan_file import Part, Plan, Pulse, Soak
 from runner.plan.points import ROOM_DEGC, expand
 
 FAST_SHARE = 0.6  # of the lag, carried by the faster time constant; common practice, no source

@@ -9,6 +9,17 @@ from typing import Annotated, Any, Literal, Self
 
 from pydantic import Field, field_validator, model_validator
 
+from runner.plan.grids import (
+    CURRENTS,
+    WIDTHS,
+    Current,
+    CurrentSeek,
+    Width,
+    WidthSeek,
+    as_currents,
+    as_widths,
+    climbing,
+)
 from runner.plan.quantity import (
     AMPERE_TURNS,
     AREA,
@@ -27,25 +38,19 @@ from runner.plan.quantity import (
     TEMPERATURE,
     TIME,
     VOLTAGE,
-    WIDTH,
     Quantity,
 )
-from runner.plan.shapes import FileModel, Whole, Words, Written, fault, one_of
+from runner.plan.shapes import FileModel, Whole, Words, Written, fault
 
-Width = Annotated[float, Quantity(WIDTH, above=0)]
 Time = Annotated[float, Quantity(TIME, least=0)]
 Duration = Annotated[float, Quantity(DURATION, above=0)]
 Voltage = Annotated[float, Quantity(VOLTAGE, above=0)]
-Current = Annotated[float, Quantity(CURRENT, above=0)]
-BiasCurrent = Annotated[float, Quantity(CURRENT, least=0)]
 Resistance = Annotated[float, Quantity(RESISTANCE, above=0)]
 Inductance = Annotated[float, Quantity(INDUCTANCE, above=0)]
 Energy = Annotated[float, Quantity(ENERGY, above=0)]
 Power = Annotated[float, Quantity(POWER, above=0)]
 Temperature = Annotated[float, Quantity(TEMPERATURE, above=-273.15)]
 Share = Annotated[float, Quantity(FRACTION, above=0, below=1)]
-Count = Annotated[Whole, Field(ge=2, le=10_000)]
-Budget = Annotated[Whole, Field(ge=4, le=1000)]
 
 COPPER_ALPHA_20 = 3.93e-3  # 1/K at 20 degC, annealed copper (IEC 60028)
 
@@ -121,124 +126,8 @@ class Temperatures(FileModel):
     at_degC: Annotated[tuple[Temperature, ...], Field(min_length=1)] = Field(
         alias="at", examples=[["25 degC", "85 degC"]], description="Chamber set-points."
     )
-    soak: Soak = Soak()
+    soak: Soak = Field(default_factory=Soak)
     order: Literal["as written", "least travel"] = "as written"
-
-
-class Until(FileModel):
-    """The interval at which a search is done."""
-
-    isat: Annotated[float, Quantity(FRACTION, above=0, below=1, help="Interval of Isat, as a share of it.")]
-
-
-class WidthSeek(FileModel):
-    """Pulse widths placed by the runner where they tell most about the knee."""
-
-    seek: Literal["knee"]
-    from_: Width = Field(alias="from")
-    to: Width
-    budget: Budget = Field(default=18, description="Most points at one temperature.")
-    until: Until = Until.model_construct(isat=0.005)
-
-    @model_validator(mode="after")
-    def _climbs(self) -> Self:
-        _refuse_falling(self.from_, self.to)
-        return self
-
-
-class CurrentSeek(FileModel):
-    """Bias currents placed by the runner where they tell most about the knee."""
-
-    seek: Literal["knee"]
-    from_: BiasCurrent = Field(default=0.0, alias="from")
-    to: Current
-    budget: Budget = Field(default=18, description="Most points at one temperature.")
-    until: Until = Until.model_construct(isat=0.005)
-
-    @model_validator(mode="after")
-    def _climbs(self) -> Self:
-        _refuse_falling(self.from_, self.to)
-        return self
-
-
-class WidthRange(FileModel):
-    """Evenly spaced pulse widths."""
-
-    from_: Width = Field(alias="from")
-    to: Width
-    count: Count = Field(examples=[18])
-
-    @model_validator(mode="after")
-    def _climbs(self) -> Self:
-        _refuse_falling(self.from_, self.to)
-        return self
-
-
-class CurrentRange(FileModel):
-    """Evenly spaced bias currents."""
-
-    from_: BiasCurrent = Field(default=0.0, alias="from")
-    to: Current
-    count: Count = Field(examples=[21])
-    both_ways: Annotated[bool, Field(strict=True, description="Climb, then come back down.")] = False
-
-    @model_validator(mode="after")
-    def _climbs(self) -> Self:
-        _refuse_falling(self.from_, self.to)
-        return self
-
-
-class CurrentList(FileModel):
-    """Chosen bias currents."""
-
-    at: Annotated[tuple[BiasCurrent, ...], Field(min_length=1)] = Field(examples=[["0 A", "2 A", "4 A"]])
-    both_ways: Annotated[bool, Field(strict=True, description="Climb, then come back down.")] = False
-
-    @field_validator("at")
-    @classmethod
-    def _each_once(cls, values: tuple[float, ...]) -> tuple[float, ...]:
-        return climbing(values, "A", 1.0)
-
-
-def _shape_of_widths(written: Any) -> str:
-    if isinstance(written, dict):
-        return "seek" if "seek" in written else "range"
-    return "list"
-
-
-def _shape_of_currents(written: Any) -> str:
-    if isinstance(written, dict):
-        return "seek" if "seek" in written else ("chosen" if "at" in written else "range")
-    return "list"
-
-
-def _widths(written: "tuple[float, ...] | WidthRange | WidthSeek") -> "tuple[float, ...] | WidthSeek":
-    if isinstance(written, WidthRange):
-        return evenly(written.from_, written.to, written.count)
-    return written if isinstance(written, WidthSeek) else climbing(written, "us", 1e6)
-
-
-def _currents(
-    written: "tuple[float, ...] | CurrentRange | CurrentList | CurrentSeek",
-) -> "tuple[float, ...] | CurrentSeek":
-    if isinstance(written, CurrentSeek):
-        return written
-    if isinstance(written, tuple):
-        return climbing(written, "A", 1.0)
-    up = written.at if isinstance(written, CurrentList) else evenly(written.from_, written.to, written.count)
-    return up + up[-2::-1] if written.both_ways and len(up) > 1 else up
-
-
-WIDTHS = one_of(
-    _shape_of_widths, list=Annotated[tuple[Width, ...], Field(min_length=1)], range=WidthRange, seek=WidthSeek
-)
-CURRENTS = one_of(
-    _shape_of_currents,
-    list=Annotated[tuple[BiasCurrent, ...], Field(min_length=1)],
-    range=CurrentRange,
-    chosen=CurrentList,
-    seek=CurrentSeek,
-)
 
 
 class StopAt(FileModel):
@@ -258,7 +147,7 @@ class Pulse(FileModel):
     """The pulse method: differential inductance from voltage pulses."""
 
     rail: Annotated[float, Quantity(VOLTAGE, above=0, help="Voltage of the capacitor bank.")]
-    width: Annotated[tuple[float, ...] | WidthSeek, Written(WIDTHS, _widths)] = Field(
+    width: Annotated[tuple[float, ...] | WidthSeek, Written(WIDTHS, as_widths)] = Field(
         examples=[{"from": "2 us", "to": "20 us", "count": 18}]
     )
     repeats: Annotated[Whole, Field(ge=1, le=10_000, description="Captures of each width.")] = 8
@@ -288,7 +177,7 @@ class Bias(FileModel):
         current: in the order in which they are visited, climbing and then, when both ways, back down [A].
     """
 
-    current: Annotated[tuple[float, ...] | CurrentSeek, Written(CURRENTS, _currents)] = Field(
+    current: Annotated[tuple[float, ...] | CurrentSeek, Written(CURRENTS, as_currents)] = Field(
         examples=[{"from": "0 A", "to": "10 A", "count": 21, "both_ways": True}]
     )
     settle: Annotated[float, Quantity(TIME, least=0, help="From the current's arrival to the reading.")] = 0.2
@@ -404,7 +293,7 @@ class Plan(FileModel):
             }
         ]
     )
-    extract: Extract = Extract()
+    extract: Extract = Field(default_factory=Extract)
 
     @field_validator("parts", mode="before")
     @classmethod
@@ -412,35 +301,8 @@ class Plan(FileModel):
         return number_parts(written)
 
 
-def evenly(first: float, last: float, count: int) -> tuple[float, ...]:
-    """``count`` values from ``first`` to ``last``, both included, evenly spaced."""
-    step = (last - first) / (count - 1)
-    # Twelve digits: 2 us + 6 steps of a third of a microsecond is 4 us to the user.
-    return (*(float(f"{first + index * step:.12g}") for index in range(count - 1)), last)
-
-
-def climbing(values: tuple[float, ...], unit: str, scale: float) -> tuple[float, ...]:
-    """The same values, climbing.
-
-    Raises:
-        PydanticCustomError: a value stands twice, or the values do not climb; shown times ``scale`` in ``unit``.
-    """
-    for index, (before, after) in enumerate(pairwise(values)):
-        if after == before:
-            raise fault(f"{after * scale:g} {unit} stands twice; keep one of them")
-        if after < before:
-            said = f"{after * scale:g} {unit} (value {index + 2}) comes after {before * scale:g} {unit}"
-            raise fault(f"{said}, but values must climb; sort the list from the smallest")
-    return values
-
-
 def cold_first(range_degC: tuple[float, float]) -> tuple[float, float]:
     """A range of temperatures whose cold end comes first [degC]."""
     if range_degC[0] >= range_degC[1]:
         raise fault(f"{range_degC[0]:g} degC is not below {range_degC[1]:g} degC; write the cold end first")
     return range_degC
-
-
-def _refuse_falling(first: float, last: float) -> None:
-    if last <= first:
-        raise fault("'to' is not above 'from'; values climb, so write the smallest as 'from'")

@@ -17,7 +17,7 @@ Words = Annotated[str, Field(strict=True, min_length=1)]
 class FileModel(BaseModel):
     """A mapping in a file that users write."""
 
-    model_config = ConfigDict(frozen=True, extra="forbid", hide_input_in_errors=True)
+    model_config = ConfigDict(frozen=True, extra="forbid", hide_input_in_errors=True, defer_build=True)
 
 
 @dataclass(frozen=True, slots=True)

@@ -118,7 +118,7 @@ class Simulation(FileModel):
         examples=[{1: {"law": "gapped", "inductance": "22 uH", "knee": "9.5 A"}}],
         description="By multiplexer channel.",
     )
-    departures: Departures = Departures()
+    departures: Departures = Field(default_factory=Departures)
 
 
 def simulation_spec(bench: "Bench") -> dict[str, Any]:

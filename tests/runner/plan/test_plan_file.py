@@ -11,7 +11,8 @@ from pydantic import ValidationError
 
 from runner.errors import InputError
 from runner.plan import load_plan, parse_plan
-from runner.plan.plan_file import CurrentSeek, Plan, WidthSeek, evenly
+from runner.plan.grids import CurrentSeek, WidthSeek, evenly
+from runner.plan.plan_file import Plan
 
 Written = Callable[..., Path]
 
