@@ -24,14 +24,14 @@ from runner.report.tables import Table
 # Shown elsewhere on the page, or known to the reader from there.
 ELSEWHERE = frozenset(
     {
-        "initial_inductance", "saturation_current", "winding_resistance", "budget", "rated_current", "inductance_kind",
+        "initial_inductance", "saturation_current", "winding_resistance", "budget",
+        "margin", "rated_current", "inductance_kind",
         "inductance", "resistance", "description",
         "cross_check", "sentences", "label", "flags", "methods",
     }
 )  # fmt: skip
 
 TITLES = {
-    "margin": "Margin to the rated current",
     "derating": "Derating: largest current advised",
     "core_view": "Seen from the core",
     "temperature_coefficient": "Temperature coefficient of the saturation current",

@@ -11,6 +11,7 @@ from runner.report.digits import Scale, percent, scale_for, short
 from runner.report.facts import METHOD_TITLES, AtTemperature, Facts, Knee, MethodFacts, PartFacts
 from runner.report.look import DROP_COLOURS, DROP_MARKERS, RATED, label_ends, new_figure
 from runner.report.picture import Picture, Sheet
+from runner.report.words import counted_from
 
 _STYLE = {"pulse": ("-", "full"), "bias": ((0, (4, 2)), "none")}
 
@@ -185,7 +186,7 @@ def _numbers(entry: AtTemperature) -> tuple[float, float, float, float]:
 def _caption(facts: Facts, part: PartFacts, methods: Sequence[MethodFacts]) -> str:
     references = sorted({knee.reference for method in methods for knee in method.knees})
     text = (
-        f"Saturation current of {part.label} against temperature; drop counted from: {', '.join(references)}. "
+        f"Saturation current of {part.label} against temperature. Drop {'; '.join(map(counted_from, references))}. "
         f"Bars: {percent(facts.coverage)} interval, often smaller than the marks."
     )
     if len(methods) > 1:

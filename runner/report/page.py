@@ -21,7 +21,7 @@ from runner.record import Run, open_run
 from runner.report import look
 from runner.report.captures import draw_captures
 from runner.report.curves import draw_curves, draw_surface
-from runner.report.digits import NOTHING, duration, fixed, quantity
+from runner.report.digits import NOTHING, duration, fixed
 from runner.report.doubts import doubts
 from runner.report.extras import extra_tables, extra_texts
 from runner.report.facts import INDUCTANCE, METHOD_TITLES, Facts, MethodFacts, PartFacts, gather
@@ -29,14 +29,13 @@ from runner.report.knee import draw_knees, draw_overview, draw_resistance
 from runner.report.night import MOST_NUMBERS, Mark, draw_night, marks
 from runner.report.picture import Pasted, Picture, save
 from runner.report.provenance import calibration, instruments, versions
-from runner.report.tables import Table, budget_table, knee_tables, temperature_table
+from runner.report.tables import Table, budget_table, knee_tables, temperature_table, together_table
 from runner.report.words import (
     headline,
     headline_drop,
     hold_together,
     plan_in_words,
     read_plan,
-    short_margin,
 )
 
 CAUTIONS = (
@@ -190,30 +189,7 @@ def _together(facts: Facts, paste: Any) -> dict[str, Any] | None:
     if not drops:
         return None
     drop = max(set(drops), key=drops.count)
-    rows = []
-    for part in facts.parts:
-        method = next((m for m in part.methods if m.knees_at(drop)), None)
-        knees = method.knees_at(drop) if method else ()
-        reached = [knee for knee in knees if knee.is_reached]
-        if method is None or not reached:
-            rows.append((part.label, NOTHING, NOTHING, knees[0].status if knees else NOTHING, NOTHING))
-            continue
-        worst = min(reached, key=lambda knee: knee.estimate.value)
-        rows.append(
-            (
-                part.label,
-                method.name,
-                fixed(worst.temperature_degC, 1),
-                quantity(worst.estimate.value, "A"),
-                short_margin(worst, part.rated_current) if part.rated_current > 0 else NOTHING,
-            )
-        )
-    table = Table(
-        f"Lowest saturation current of each part, {100 * drop:.3g} % drop",
-        ("Part", "Method", "Temperature (°C)", "Saturation current", "Margin to the rated current"),
-        tuple(rows),
-    )
-    return {"table": table, "picture": paste(draw_overview(facts, drop))}
+    return {"table": together_table(facts, drop), "picture": paste(draw_overview(facts, drop))}
 
 
 def _has(facts: Facts, method: str) -> bool:
@@ -238,6 +214,10 @@ def _troubles(run: Run, facts: Facts) -> Iterator[tuple[str, str]]:
         yield ("No points.", "Nothing was measured, or nothing that can be used.")
     elif not facts.is_extracted:
         yield ("Not extracted yet.", "There are points but no result; 'kneemap extract' makes it.")
+    for part in facts.parts:
+        for row in part.extras.get("cross_check") or []:
+            if row.get("agrees") is False:
+                yield (f"The two methods disagree about {part.label}.", str(row.get("text", "")))
 
 
 def _run_in_time(run: Run) -> str:

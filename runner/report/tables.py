@@ -101,6 +101,35 @@ def _knee_table(facts: Facts, part: PartFacts, method: MethodFacts, drops: tuple
     )
 
 
+def together_table(facts: Facts, drop: float) -> Table:
+    """The lowest saturation current of each part at one drop, a line a part."""
+    worst = []
+    for part in facts.parts:
+        method = next((m for m in part.methods if m.knees_at(drop)), None)
+        reached = [knee for knee in method.knees_at(drop) if knee.is_reached] if method else []
+        worst.append((part, method, min(reached, key=lambda knee: knee.estimate.value, default=None)))
+    scale = scale_for([knee.estimate.value for _, _, knee in worst if knee], "A")
+    rows = []
+    for part, method, knee in worst:
+        name = method.name if method else NOTHING
+        if knee is None:
+            rows.append((part.label, name, NOTHING, "not reached" if method else NOTHING, NOTHING, NOTHING))
+            continue
+        estimate = knee.estimate
+        text = interval_text(estimate.value, estimate.low, estimate.high, factor=scale.factor)
+        margin = short_margin(knee, part.rated_current) if part.rated_current > 0 else NOTHING
+        rows.append((part.label, name, fixed(knee.temperature_degC, 1), text.value, _interval(text), margin))
+    head = (
+        "Part",
+        "Method",
+        "At (°C)",
+        f"Isat ({scale.unit})",
+        f"{percent(facts.coverage)} interval",
+        "Margin to rating",
+    )
+    return Table(f"Lowest saturation current of each part, {percent(drop)} drop", head, tuple(rows))
+
+
 def temperature_table(
     facts: Facts, quantity: str, entries: Sequence[AtTemperature], unit: str, *, title: str
 ) -> Table:

@@ -239,7 +239,8 @@ def _against_rating(knee: Knee, rated_current: float) -> str:
     rated = short(rated_current, "A")
     if knee.estimate.low > rated_current or knee.estimate.high < rated_current:
         side = "above" if knee.estimate.value > rated_current else "below"
-        away = percent(round(abs(knee.estimate.value / rated_current - 1), 2))
+        fraction = abs(knee.estimate.value / rated_current - 1)
+        away = percent(round(fraction, 2 if fraction >= 0.05 else 3))
         return f", {away} {side} the rated {rated}."
     return f", which cannot be told apart from the rated {rated}."
 

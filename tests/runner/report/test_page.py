@@ -291,6 +291,22 @@ def test_a_status_is_shown_under_its_own_name(make_run):
     )
 
 
+@pytest.mark.usefixtures("coarse")
+def test_methods_that_disagree_are_said_on_top(make_run):
+    def disagree(result):
+        result["parts"][0]["cross_check"] = [
+            {"temperature_degC": 25.1, "text": "L_0 differs by 10 %.", "agrees": False},
+            {"temperature_degC": 85.1, "text": "Agrees at 85 °C.", "agrees": True},
+        ]
+
+    text = words(write_report(make_run(change=disagree, temperatures=(25.0,))))
+    assert text.index("The two methods disagree about DRUM-22-A. L_0 differs by 10 %.") < text.index(
+        "What was tested, and"
+    )
+    assert "The two methods compared" in text
+    assert "Agrees at 85 °C." in text
+
+
 # ------------------------------------------------------------- several parts
 
 NASTY = "<script>alert('x')</script> & \"Größe\" µ/$x_1$ {{ 7*7 }}"

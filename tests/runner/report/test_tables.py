@@ -141,13 +141,13 @@ def test_a_budget_without_contributions_is_no_table(drop):
             ("12", "yes", "first shot lower", "–"),
         ),
         (
-            {"margin": [{"drop": 0.3, "fraction": 0.15, "low": 0.14, "high": 0.16}]},
-            "Margin to the rated current",
+            {"change": [{"drop": 0.3, "fraction": 0.15, "low": 0.14, "high": 0.16}]},
+            "Change",
             ("Drop", "Fraction (%)", "95 % interval (%)"),
             ("30 %", "15.0", "14.0 to 16.0"),
         ),
     ],
-    ids=["core", "derating", "unknown", "margin"],
+    ids=["core", "derating", "unknown", "fraction"],
 )  # fmt: skip
 def test_an_extra_becomes_a_table_by_its_keys(extras, title, head, row):
     (table,) = extra_tables(extras, 0.95)

@@ -43,6 +43,7 @@ def test_the_headline_gives_the_lowest_current_with_interval_and_margin():
     ("made", "words"),
     [
         (part(knee(25, 5.0, 4.9, 5.1)), "17 % below the rated 6 A."),
+        (part(knee(25, 6.04, 6.02, 6.06)), "0.7 % above the rated 6 A."),
         (part(knee(25, 6.02, 5.9, 6.1)), "which cannot be told apart from the rated 6 A."),
         (part(knee(25, 5.0, 4.9, 5.1), rated=NAN), "(95 % interval 4.90 A to 5.10 A)."),
         (
