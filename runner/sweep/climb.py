@@ -29,8 +29,8 @@ from runner.sweep.retry import Kind, Phase
 from runner.sweep.seek import Next, SeekRule, Sought, next_point
 from runner.sweep.stopping import StopAt, judge_stop
 
-_SCOUT_REPEATS = 2
-_MOST_SCOUTS = 60  # in one climb; one that needs more is not getting anywhere
+_SCOUT_REPEATS = 1
+_MOST_SCOUTS = 120  # in one climb; one that needs more is not getting anywhere
 
 
 def climb(night: Night, leg: int, part: int, *, settled: Settled, resistance: float) -> None:

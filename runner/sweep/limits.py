@@ -2,15 +2,14 @@
 
 A wider pulse adds flux linkage dλ = v dt, at most the voltage at the start of the last pulse times the added time, and
 current by the slope di/dλ = 1/L_d. At the end of the last capture that slope is known; beyond it the inductance may
-fall. The steepest knees of the trade (ungapped or sharply gapped ferrite) lose nine tenths of L_d within a fifth more
-flux linkage: slope ~ λ**13. So the worst case lets the slope grow as λ**STEEPEST from its measured value (or one and a
-half times as steep as the capture itself bends, if that is more), up to that of a part with hardly any core left.
+fall. Over current it falls like a power: L_d ~ i**-(p+1) past the knee of a part that saturates as
+λ ~ i / (1 + i**p)**(1/p), and sharply gapped ferrite has p of 6 to 10. So the worst case lets the slope grow from its
+measured value as i**STEEPEST (or half as steep again as the capture itself bends, if that is more), up to that of a part
+with hardly any core left; then the current has no end but the limit, which is as it should be.
 
-A law that saturates outright bends faster than any power in the end, so no step may use more than HEADROOM of what is
-left to the limit: the bound may be wrong by its own size and the limit still holds.
-
-Where a step asked for is not safe by that bound, a shorter one may be: the climb then fires scouting pulses in between,
-each of which tells more. A plan with few widths is thus climbed as carefully as one with many.
+No step may use more than HEADROOM of what is left to the limit: the bound may be wrong by its own size and the limit still
+holds. Where a step asked for is not safe, a shorter one may be: the climb then fires scouting pulses in between, each of
+which tells more. A plan with few widths is thus climbed as carefully as one with many.
 """
 
 import math
@@ -18,15 +17,19 @@ from dataclasses import dataclass
 
 from runner.sweep.look import Look
 
-STEEPEST = 15.0
+STEEPEST = 14.0
 _BEND_FACTOR = 1.5  # on the exponent seen, for noise and for knees that are still turning
-_LEFT = 0.01  # of the initial inductance, left when the core is saturated (air-core value of a wound core is 1 to 5 %)
-_SLOPE_FACTOR = 1.05  # on the measured slope, for noise and calibration
+_LEFT = 0.02  # of the initial inductance, left when the core is saturated (without its core a winding has 2 to 6 %)
+_SLOPE_FACTOR = 1.05  # on the measured slope, for noise and calibration ...
+_CARRIED = (
+    1.08  # ... and from the middle of the last window of current to its end, by half the exponent again
+)
 HEADROOM = 0.5
 _MARGIN = 0.97  # of a limit may be predicted; the rest is for the current's own calibration
 _FIRST_LEFT = 0.02  # of the nominal inductance, assumed for a part nobody has pulsed yet
-_SMALLEST_GAIN = 1.01  # a scouting pulse must be at least this much wider than the last, or the climb ends
+_SMALLEST_GAIN = 1.005  # a scouting pulse must be at least this much wider than the last, or the climb ends
 _BISECTIONS = 40
+_FAR = 300.0  # more than this many e-foldings of current are not looked at
 
 
 @dataclass(frozen=True, slots=True)
@@ -70,10 +73,13 @@ def predict(last: Look, width: float) -> Prediction:
         Prediction in A and J; for a width not above the last one, what was seen.
     """
     added = max(width - last.width, 0.0)
-    flux = last.flux_linkage + last.drive * added
-    likely = last.peak + _rise(last, flux, min(last.growth, STEEPEST), last.end_slope)
-    steepest = max(STEEPEST, _BEND_FACTOR * last.growth)
-    worst = last.peak + _rise(last, flux, steepest, _SLOPE_FACTOR * last.end_slope)
+    flux = last.drive * added
+    bend = max(last.growth, 0.0)
+    ceiling = max(last.start_slope / _LEFT, last.end_slope)
+    steepest = max(STEEPEST, _BEND_FACTOR * bend)
+    likely = last.peak + _rise(last.end_current, last.end_slope, min(bend, STEEPEST), flux, ceiling)
+    slope = min(_SLOPE_FACTOR * last.end_slope * _CARRIED ** (0.5 * bend), ceiling)
+    worst = last.peak + _rise(last.end_current, slope, steepest, flux, ceiling)
     supply = last.energy / last.charge if last.charge > 0 else last.drive
     energy = last.energy + supply * added * (last.peak + likely) / 2
     # Current only rises during a pulse, so its end value times the time bounds the charge.
@@ -150,17 +156,24 @@ def _broken(last: Look, prediction: Prediction, limits: PulseLimits, period: flo
     return None
 
 
-def _rise(last: Look, flux: float, growth: float, slope: float) -> float:
-    """Integral of slope * (λ/λ_end)**growth from the last flux linkage to `flux`, the slope held at its ceiling [A]."""
-    end = last.flux_linkage
-    if flux <= end or slope <= 0:
-        return 0.0
-    ceiling = max(last.start_slope / _LEFT, slope)
-    # Flux linkage, relative to the last, at which the slope is at its ceiling; compared by logarithms, as a growth near
-    # zero puts it beyond any number.
-    if growth * math.log(flux / end) <= math.log(ceiling / slope):
-        bend: float = flux / end
+def _rise(current: float, slope: float, growth: float, flux: float, ceiling: float) -> float:
+    """How far the current rises over `flux` [Wb], where its slope over flux grows as current**growth up to a ceiling [A].
+
+    di/dλ = s (i/i0)**m has the solution i = i0 (1 - (m-1) s λ / i0)**(-1/(m-1)), and the exponential for m = 1.
+    """
+    if flux <= 0 or slope <= 0 or current <= 0:
+        return ceiling * max(flux, 0.0)
+    unit = slope * flux / current  # the rise with the slope as it is, relative to the current
+    log_ceiling = math.log(ceiling / slope)
+    # The current, relative to now, at which the slope is at its ceiling; beyond e**_FAR it is out of any reach.
+    top = math.exp(log_ceiling / growth) if log_ceiling < _FAR * growth else math.inf
+    power = growth - 1
+    if abs(power) < 1e-9:
+        reach = math.log(top)
+        grown = math.expm1(min(unit, reach))
     else:
-        bend = math.exp(math.log(ceiling / slope) / growth)
-    rise = slope * end / (growth + 1) * float(bend ** (growth + 1) - 1)
-    return float(rise + ceiling * max(flux - bend * end, 0.0))
+        # `reach`: the `unit` at which the ceiling is met.
+        reach = (1 - top**-power) / power if math.isfinite(top) else (math.inf if power < 0 else 1 / power)
+        grown = math.exp(-math.log1p(-power * unit) / power) - 1 if unit < reach else top - 1
+    beyond = ceiling * flux * (1 - reach / unit) if unit > reach else 0.0
+    return current * grown + beyond

@@ -12,6 +12,8 @@ from runner.arrays import FloatArray
 
 _ON = 0.5  # of the largest voltage: the switch is on
 _FEWEST = 12  # samples of a pulse, below which slopes are not looked at
+_LAST, _BEFORE = 0.85, 0.65  # of the end current: where the last window of it begins, and the one before
+_START = 0.3  # of the end current: up to here is the start of the pulse
 _STEEPEST_SEEN = 40.0  # exponents beyond this are noise
 
 
@@ -31,7 +33,7 @@ class Look:
         end_drive: voltage at the end.
         start_slope: di/dflux at the start of the pulse, 1/H.
         end_slope: the same at its end.
-        growth: exponent of the slope over flux linkage near the end: slope ~ flux ** growth.
+        growth: exponent of that slope over the current near the end: slope ~ current ** growth.
     """
 
     width: float
@@ -117,29 +119,45 @@ def look_at(
 
 
 def _slopes(flux: FloatArray, current: FloatArray) -> tuple[float, float, float] | None:
-    """Slope of current over flux linkage at the start and the end, and the exponent between the last two fifths."""
-    top = float(flux[-1])
-    if not top > 0:
+    """Slope of current over flux linkage at the start and at the end, and its exponent over current near the end.
+
+    The end is looked at in two windows of the current, the last one from `_LAST` of its end value: past a knee these are
+    short in time, and the slope of a longer one would be that of the knee and not of its far side.
+    """
+    count = flux.size
+    width = max(count // 60, 1)
+    sums = np.concatenate([[0.0], np.cumsum(current)])
+    smooth = np.maximum.accumulate((sums[width:] - sums[:-width]) / width)
+    end = float(smooth[-1])
+    if not (end > 0 and flux[-1] > 0):
         return None
-    start = _line(flux, current, 0.05 * top, 0.35 * top)
-    before = _line(flux, current, 0.6 * top, 0.8 * top)
-    last = _line(flux, current, 0.8 * top, top)
-    if start is None or before is None or last is None:
+    last_from = min(int(np.searchsorted(smooth, _LAST * end)), count - _FEWEST)
+    before_from = min(int(np.searchsorted(smooth, _BEFORE * end)), last_from - _FEWEST)
+    start_to = max(int(np.searchsorted(smooth, _START * end)), _FEWEST)
+    if before_from < 0:
         return None
+    start = _line(flux, current, 0, start_to)
+    before = _line(flux, current, before_from, last_from)
+    last = _line(flux, current, last_from, count)
     growth = 0.0
-    if before[1] > 0 and last[1] > before[1]:
-        growth = float(np.log(last[1] / before[1]) / np.log(last[0] / before[0]))
+    if 0 < before.slope < last.slope and 0 < before.current < last.current:
+        growth = float(np.log(last.slope / before.slope) / np.log(last.current / before.current))
     growth = min(growth, _STEEPEST_SEEN)
-    # The slope found is that of the middle of the last fifth; carry it to the end.
-    end_slope = last[1] * (top / last[0]) ** growth
-    return max(start[1], 0.0), max(float(end_slope), 0.0), growth
+    # The slope found is that of the middle of the last window; carry it to the end.
+    end_slope = last.slope * (end / last.current) ** growth if last.current > 0 else last.slope
+    return max(start.slope, 0.0), max(float(end_slope), 0.0), growth
 
 
-def _line(flux: FloatArray, current: FloatArray, low: float, high: float) -> tuple[float, float] | None:
-    inside = (flux >= low) & (flux <= high)
-    if np.count_nonzero(inside) < 2:
-        return None
-    x, y = flux[inside], current[inside]
+@dataclass(frozen=True, slots=True)
+class _Line:
+    """Least squares through a window: slope of current over flux linkage [1/H], and the mean current in it [A]."""
+
+    slope: float
+    current: float
+
+
+def _line(flux: FloatArray, current: FloatArray, first: int, stop: int) -> _Line:
+    x, y = flux[first:stop], current[first:stop]
     centred = x - x.mean()
     weight = float(centred @ centred)
-    return (float(x.mean()), float(centred @ y / weight)) if weight > 0 else None
+    return _Line(float(centred @ y) / weight if weight > 0 else 0.0, float(y.mean()))

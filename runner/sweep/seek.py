@@ -18,7 +18,9 @@ from runner.arrays import FloatArray
 _GROW = 1.35  # of x while bracketing: five steps from a quarter of the range to its end
 _BIAS_STEPS = 8  # a bias current starts from zero, where no factor helps
 _COVERAGE = 2.0  # standard uncertainties on each side of an interval
-_NEAR = 7  # points that a crossing is found from
+_NEAR = 0.25  # of the crossing: the points that it is found from lie within this of it
+_NARROW = 0.08  # a gap not wider than this, relative, is not divided further; repeats beside it bring the noise down
+_SIDES = (1.0, -1.0, 0.4, -0.4)  # of it, in turn
 _FOR_A_PARABOLA = 5
 _UNKNOWN_SCATTER = 5e-3  # of the inductance, until the points themselves tell
 _LEAST_SCATTER = 5e-4
@@ -74,11 +76,20 @@ class Done:
 
 @dataclass(frozen=True, slots=True)
 class Crossing:
-    """Saturation current from the points so far: where it lies, its standard uncertainty, and x there."""
+    """A saturation current from the points so far [A].
+
+    Attributes:
+        current: where the inductance has fallen by the drop; x: what must be set for it.
+        uncertainty: standard, of `current`.
+        reference: the part of it that comes from the reference point.
+        gap: between the points on its two sides, relative.
+    """
 
     current: float
-    uncertainty: float
     x: float
+    uncertainty: float
+    reference: float
+    gap: float
 
 
 def next_point(history: Sequence[Sought], rule: SeekRule, *, ceiling: float = math.inf) -> Next | Done:
@@ -93,49 +104,49 @@ def next_point(history: Sequence[Sought], rule: SeekRule, *, ceiling: float = ma
         `Next`, or `Done` with the reason.
     """
     high = min(rule.high, ceiling)
-    points = sorted((one for one in history if one.inductance > 0), key=lambda one: one.x)
+    points = sorted(
+        (one for one in history if one.inductance > 0), key=lambda one: (one.x, one.current, one.inductance)
+    )
     if len(history) >= rule.budget:
         return Done(f"budget of {rule.budget} points used")
     if not points:
-        return Next(rule.low, "first point") if not history else Done("no usable point")
-    reference = points[0].inductance
-    lowest = min(one.inductance for one in points)
-    deepest = max(rule.drops)
-    if lowest > (1 - deepest) * reference and points[-1].x < high * (1 - 1e-9):
-        return Next(_step_up(points, rule, high), f"bracketing: down by {1 - lowest / reference:.0%} so far")
-    widest: tuple[float, Crossing, float] | None = None
-    for drop in rule.drops:
-        crossing = find_crossing(points, drop)
-        if crossing is None:
-            continue
-        interval = 2 * _COVERAGE * crossing.uncertainty / crossing.current
-        if interval > rule.until and (widest is None or interval > widest[0]):
-            widest = (interval, crossing, drop)
-    if widest is None:
-        reached = sum(find_crossing(points, drop) is not None for drop in rule.drops)
-        if reached < len(rule.drops):
-            return Done(
-                f"{reached} of {len(rule.drops)} drops lie below what may be reached; their intervals are met"
-            )
-        return Done("every interval asked for is reached")
-    interval, crossing, drop = widest
-    x = _beside(points, crossing.x, high, sequence=len(points))
-    return Next(x, f"closing in on {drop:.0%}: interval {interval:.2%}, {rule.until:.2%} asked for")
+        return Done("no usable point") if history else Next(rule.low, "first point")
+    fallen = 1 - min(one.inductance for one in points) / _reference(points)
+    if fallen < max(rule.drops) and points[-1].x < high * (1 - 1e-9):
+        return Next(_step_up(points[-1].x, rule, high), f"bracketing: down by {max(fallen, 0.0):.0%} so far")
+    crossings = {drop: find_crossing(points, drop) for drop in rule.drops}
+    intervals = {
+        drop: 2 * _COVERAGE * crossing.uncertainty / crossing.current
+        for drop, crossing in crossings.items()
+        if crossing is not None
+    }
+    drop = max(intervals, key=lambda drop: intervals[drop], default=0.0)
+    crossing = crossings.get(drop)
+    if crossing is None or intervals[drop] <= rule.until:
+        found = f"the intervals at {len(intervals)} of {len(rule.drops)} drops are reached"
+        return Done(
+            found if len(intervals) == len(rule.drops) else f"{found}; the others lie beyond what may be set"
+        )
+    why = f"interval at {drop:.0%} is {intervals[drop]:.2%}, {rule.until:.2%} asked for"
+    if crossing.reference > 0.7 * crossing.uncertainty:
+        return Next(points[0].x, f"reference again: {why}")
+    return Next(_close_in(points, crossing, high), f"closing in: {why}")
 
 
 def find_crossing(points: Sequence[Sought], drop: float) -> Crossing | None:
-    """Where the inductance falls past 1 - drop of that of the lowest point.
+    """Where the inductance falls past 1 - drop of its reference.
 
     Args:
         points: sorted by x.
         drop: fraction.
 
     Returns:
-        The crossing, from a parabola through the points near it (a line through fewer than five). Its uncertainty is the
-        points' scatter, carried through the fit, and half of what parabola and line disagree by. None if no crossing.
+        The crossing, from a parabola through the points about it, or from a straight line where there are too few. Its
+        uncertainty: the points' scatter carried through that fit, the scatter of the reference, and half of what parabola
+        and line disagree by (a quarter of the gap where there is only the line). None if no point lies beyond.
     """
     current = np.array([one.current for one in points])
-    ratio = np.array([one.inductance for one in points]) / points[0].inductance
+    ratio = np.array([one.inductance for one in points]) / _reference(points)
     level = 1 - drop
     below = np.flatnonzero(ratio < level)
     if below.size == 0 or below[0] == 0:
@@ -143,30 +154,56 @@ def find_crossing(points: Sequence[Sought], drop: float) -> Crossing | None:
     right = int(below[0])
     left = right - 1
     gap = float(current[right] - current[left])
-    if gap <= 0:
+    slope = float(ratio[left] - ratio[right]) / gap if gap > 0 else 0.0
+    if slope <= 0:
         return None
-    share = float((level - ratio[left]) / (ratio[right] - ratio[left]))
+    share = float(ratio[left] - level) / float(ratio[left] - ratio[right])
     straight = float(current[left]) + share * gap
-    x = points[left].x + share * (points[right].x - points[left].x)
-    noise = _scatter(current, ratio)
-    near = np.sort(np.argsort(np.abs(current - straight), kind="stable")[:_NEAR])
-    slope = float(ratio[right] - ratio[left]) / gap
-    if near.size < _FOR_A_PARABOLA or np.ptp(current[near]) <= 0:
-        return Crossing(straight, math.hypot(noise / abs(slope), gap / 4), float(x))
-    span = float(np.ptp(current[near]))
-    scaled = (current[near] - straight) / span
-    columns = np.vander(scaled, 3)
-    solution = np.asarray(np.linalg.lstsq(columns, ratio[near] - level, rcond=None)[0], dtype=float)
-    curved = _root(
-        solution, (float(current[left]) - straight) / span, (float(current[right]) - straight) / span
+    scatter = _scatter(current, ratio)
+    curved = _parabola(
+        current - straight, ratio - level, reach=max(_NEAR * straight, 1.01 * gap), largest=gap
     )
-    at = straight if curved is None else straight + curved * span
-    leverage = float(np.linalg.pinv(columns.T @ columns)[-1, -1])
-    statistical = (
-        noise * math.sqrt(leverage + level**2) / abs(slope)
-    )  # level: the reference point's own scatter
-    model = gap / 4 if curved is None else abs(at - straight) / 2
-    return Crossing(at, math.hypot(statistical, model), float(x))
+    if curved is None:
+        at, spread, model = straight, scatter, gap / 4
+    else:
+        at, slope, spread = (
+            straight + curved.root,
+            curved.slope,
+            max(scatter, curved.scatter) * curved.leverage,
+        )
+        model = abs(curved.root) / 2
+    references = sum(one.x == points[0].x for one in points)
+    reference = scatter * level / references**0.5 / slope
+    x = float(np.interp(at, current[left : right + 1], [points[left].x, points[right].x]))
+    return Crossing(at, x, math.hypot(spread / slope, reference, model), reference, gap / straight)
+
+
+@dataclass(frozen=True, slots=True)
+class _Curved:
+    """A parabola near its root: where that is, how steep it falls there, the points' scatter, the root's leverage."""
+
+    root: float
+    slope: float
+    scatter: float
+    leverage: float
+
+
+def _parabola(current: FloatArray, ratio: FloatArray, *, reach: float, largest: float) -> _Curved | None:
+    """Through the points within `reach` of zero [A]; None if they are too few or its root is farther than `largest`."""
+    near = np.abs(current) <= reach
+    if np.unique(current[near]).size < _FOR_A_PARABOLA:
+        return None
+    columns = np.vander(current[near] / reach, 3)
+    solution = np.asarray(np.linalg.lstsq(columns, ratio[near], rcond=None)[0], dtype=float)
+    root = _root(solution, -largest / reach, largest / reach)
+    if root is None:
+        return None
+    row = np.array([root**2, root, 1.0])
+    leverage = float(np.sqrt(row @ np.linalg.pinv(columns.T @ columns) @ row))
+    slope = -(2 * solution[0] * root + solution[1]) / reach
+    freedom = max(int(np.count_nonzero(near)) - 3, 1)
+    scatter = float(np.linalg.norm(columns @ solution - ratio[near])) / freedom**0.5
+    return _Curved(root * reach, float(slope), scatter, leverage) if slope > 0 else None
 
 
 def _root(parabola: FloatArray, low: float, high: float) -> float | None:
@@ -180,38 +217,38 @@ def _root(parabola: FloatArray, low: float, high: float) -> float | None:
     return (low + high) / 2
 
 
+def _reference(points: Sequence[Sought]) -> float:
+    """Inductance at the lowest x, the mean where it was measured more than once [H]."""
+    lowest = [one.inductance for one in points if one.x == points[0].x]
+    return sum(lowest) / len(lowest)
+
+
 def _scatter(current: FloatArray, ratio: FloatArray) -> float:
     """Scatter of the points about a smooth curve: residuals of parabolas through five neighbours, their median."""
-    if current.size < _FOR_A_PARABOLA + 1:
-        return _UNKNOWN_SCATTER
     found = []
     for first in range(current.size - _FOR_A_PARABOLA + 1):
         part = slice(first, first + _FOR_A_PARABOLA)
         span = float(np.ptp(current[part]))
         if span > 0:
             columns = np.vander((current[part] - current[part][0]) / span, 3)
-            solution, *_ = np.linalg.lstsq(columns, ratio[part], rcond=None)
+            solution = np.linalg.lstsq(columns, ratio[part], rcond=None)[0]
             found.append(
                 float(np.linalg.norm(columns @ solution - ratio[part])) / (_FOR_A_PARABOLA - 3) ** 0.5
             )
-    return max(float(np.median(found)) if found else _UNKNOWN_SCATTER, _LEAST_SCATTER)
+    return max(float(np.median(found)), _LEAST_SCATTER) if found else _UNKNOWN_SCATTER
 
 
-def _step_up(points: Sequence[Sought], rule: SeekRule, high: float) -> float:
-    last = points[-1].x
+def _step_up(last: float, rule: SeekRule, high: float) -> float:
     if rule.low <= 0:
         return min(last + (rule.high - rule.low) / _BIAS_STEPS, high)
     return min(last * _GROW, high)
 
 
-def _beside(points: Sequence[Sought], x: float, high: float, *, sequence: int) -> float:
-    """The crossing itself, or, where a point stands there already, the middle of the wider gap beside it."""
+def _close_in(points: Sequence[Sought], crossing: Crossing, high: float) -> float:
+    """Into a wide gap about the crossing; about the crossing itself, on both its sides, where the gap is narrow."""
+    if crossing.gap <= _NARROW:
+        return min(crossing.x * (1 + _NARROW / 2 * _SIDES[len(points) % len(_SIDES)]), high)
     xs = [one.x for one in points]
-    right = next((index for index, one in enumerate(xs) if one >= x), len(xs) - 1)
-    left = max(right - 1, 0)
-    gap = xs[right] - xs[left]
-    if gap <= 0.004 * xs[right]:
-        # The gap is as narrow as settings make sense: more repeats of its two ends bring the noise down.
-        return xs[right] if sequence % 2 else xs[left]
-    inside = min(max(x, xs[left] + 0.25 * gap), xs[right] - 0.25 * gap)
-    return min(inside, high)
+    right = next(index for index, x in enumerate(xs) if x >= crossing.x)
+    low, up = xs[max(right - 1, 0)], xs[right]
+    return min(max(crossing.x, low + 0.25 * (up - low)), up - 0.25 * (up - low), high)

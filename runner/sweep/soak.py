@@ -129,24 +129,25 @@ def _judge(rule: SoakRule, trace: Trace) -> Verdict:
     recent = time >= time[-1] - window
     if abs(air[-1] - trace.setpoint_degC) > _AIR_NEAR:
         return Verdict(Soak.WAIT, f"air at {air[-1]:.1f} degC on its way to {trace.setpoint_degC:g} degC")
+    drift = _steepest(time[recent], body[recent])
+    stuck = _why_stuck(rule, trace.setpoint_degC, time, body, air)
+    if stuck is None and drift > rule.drift:
+        return Verdict(Soak.WAIT, f"drifting {drift * 60:.2f} K/min", drift=drift)
     approaches = [
         fit_approach(time, body, air, final_air_degC=final, at=time[-1] - rule.hold)
         for final in _final_airs(rule, trace.setpoint_degC, time[recent], air[recent])
     ]
     approach = max(approaches, key=lambda one: one.rest)
-    drift = _steepest(time[recent], body[recent])
 
     def verdict(soak: Soak, why: str, *, is_stuck: bool = False) -> Verdict:
         return Verdict(soak, why, approach.rest, drift, approach.final_degC, is_stuck)
 
-    if (stuck := _why_stuck(rule, trace.setpoint_degC, time, body, air)) is not None:
+    if stuck is not None:
         return verdict(Soak.WAIT, stuck, is_stuck=True)
     if abs(approach.final_degC - trace.setpoint_degC) > max(_AGREE, 3 * rule.within):
         return verdict(Soak.WAIT, f"body heads for {approach.final_degC:.1f} degC, far from the set-point")
     if approach.rest > rule.within:
         return verdict(Soak.WAIT, f"up to {approach.rest:.2f} K of drift to come")
-    if drift > rule.drift:
-        return verdict(Soak.WAIT, f"drifting {drift * 60:.2f} K/min")
     return verdict(Soak.SETTLED, _settled_why(approach, drift))
 
 

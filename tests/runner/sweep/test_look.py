@@ -1,0 +1,40 @@
+"""A look at captures that are not as they should be."""
+
+import numpy as np
+
+from runner.sweep.look import look_at
+
+ABOUT = {"interval": 1e-8, "pretrigger": 200, "width": 1e-5, "rail": 12.0, "resistance": 0.0}
+
+
+def test_nothing_is_seen_where_nothing_happened() -> None:
+    assert look_at(np.zeros((2, 2000)), np.zeros((2, 2000)), **ABOUT) is None
+
+
+def test_a_pulse_of_a_few_samples_is_not_looked_at() -> None:
+    voltage = np.zeros((1, 2000))
+    voltage[0, 200:205] = 12.0
+    assert look_at(voltage, voltage / 10, **ABOUT) is None
+
+
+def test_offsets_of_both_channels_are_taken_off() -> None:
+    time = (np.arange(2000) - 200) * 1e-8
+    on = (time >= 0) & (time < 1e-5)
+    voltage, current = np.where(on, 12.0, 0.0), np.where(on, 12.0 / 22e-6 * time, 0.0)
+    plain = look_at(voltage[None], current[None], **ABOUT)
+    shifted = look_at(voltage[None] + 0.3, current[None] - 0.2, **ABOUT)
+    assert plain is not None
+    assert shifted is not None
+    assert abs(shifted.peak - plain.peak) < 1e-9
+    assert abs(shifted.flux_linkage - plain.flux_linkage) < 1e-12
+    assert abs(shifted.start_current - plain.start_current + 0.2) < 1e-9
+
+
+def test_the_peak_is_the_largest_of_all_repeats() -> None:
+    time = (np.arange(2000) - 200) * 1e-8
+    on = (time >= 0) & (time < 1e-5)
+    voltage = np.where(on, 12.0, 0.0)
+    current = np.where(on, 12.0 / 22e-6 * time, 0.0)
+    look = look_at(np.stack([voltage] * 2), np.stack([current, 1.2 * current]), **ABOUT)
+    assert look is not None
+    assert look.peak == (1.2 * current).max()
