@@ -7,6 +7,7 @@ command line.
 
 from runner.extraction.calibration import Calibration, Constant
 from runner.extraction.from_run import Extraction, extract
+from runner.extraction.surface import Surface
 from runner.record import open_run
 
-__all__ = ["Calibration", "Constant", "Extraction", "extract", "open_run"]
+__all__ = ["Calibration", "Constant", "Extraction", "Surface", "extract", "open_run"]

@@ -22,11 +22,10 @@ ROWS = slice(None)
 
 @dataclass(frozen=True, slots=True)
 class Readings:
-    """Corrected readings of one branch: ``current`` [n] A, ``inductance`` [n] H, ``frequency`` [Hz]."""
+    """Corrected readings of one branch: ``current`` [n] A, ``inductance`` [n] H, the part's temperature [n] degC."""
 
     current: FloatArray
     inductance: FloatArray
-    frequency: float
     temperature_degC: FloatArray
 
 
@@ -65,6 +64,7 @@ class ReadingData:
 
     current: FloatArray
     inductance: FloatArray
+    temperatures: FloatArray
     current_scale: float
     inductance_scale: float
 
@@ -111,7 +111,7 @@ def bias_leg(readings: Readings, calibration: Calibration, *, temperature_degC: 
     top, first = float(current[-1]), float(inductance[0])
     if not first > 0:
         return None
-    data = ReadingData(current / top, inductance / first, top, first)
+    data = ReadingData(current / top, inductance / first, readings.temperature_degC[order], top, first)
     fit = fit_curve(data)
     return leg_curve(
         fit, Scale(top, first * top), temperature_degC=temperature_degC, shifts=_shifts(fit, data, calibration)

@@ -14,6 +14,7 @@ import numpy as np
 from runner.arrays import FloatArray
 from runner.extraction.curve_fit import COMMON, Fit
 from runner.extraction.curve_model import running_integral
+from runner.extraction.gum import combine
 
 
 @dataclass(frozen=True, slots=True)
@@ -31,7 +32,7 @@ class Quantity:
     @property
     def uncertainty(self) -> float:
         """Combined standard uncertainty."""
-        return float(np.sqrt(sum(u * u for u in (*self.own.values(), *self.shared.values()))))
+        return combine((*self.own.values(), *self.shared.values()))
 
     def contributions(self) -> list[tuple[str, float]]:
         """Name and standard uncertainty of each contribution, the largest first."""
@@ -82,11 +83,16 @@ class LegCurve:
     delay: FloatArray
     shifts: Mapping[str, FloatArray]
     fit: Fit
+    scale: Scale
 
     @property
     def top(self) -> float:
         """The largest current behind the curve [A]."""
         return float(self.current[-1])
+
+    def with_fit(self, fit: Fit) -> "LegCurve":
+        """The same leg with another fit of the same rows."""
+        return leg_curve(fit, self.scale, temperature_degC=self.temperature_degC, shifts=self.shifts)
 
     def initial_inductance(self) -> Quantity:
         """L_d at zero current [H]."""
@@ -184,4 +190,5 @@ def leg_curve(fit: Fit, scale: Scale, *, temperature_degC: float, shifts: Mappin
         delay=covariance - fit.covariance_without_delay[:-COMMON, :-COMMON],
         shifts=shifts,
         fit=fit,
+        scale=scale,
     )

@@ -7,7 +7,7 @@ ramps, and enter as i = g(λ) through dg/dλ = 1/L. `whiten` makes independent u
 """
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Protocol
 
 import numpy as np
@@ -32,6 +32,8 @@ class FitData(Protocol):
     def noise_known(self) -> bool: ...
     @property
     def delay_sigmas(self) -> tuple[float, float]: ...
+    @property
+    def temperatures(self) -> FloatArray: ...
     def pilot(self) -> tuple[FloatArray, FloatArray]: ...
     def linearise(
         self, model: CurveModel, shape: Shape, z: FloatArray
@@ -57,6 +59,13 @@ class Noise:
             out[member] = solve_triangular(
                 factor, rows[member], lower=True, trans="T" if transposed else "N", check_finite=False
             )
+        return out
+
+    def color(self, white: FloatArray) -> FloatArray:
+        """The opposite of `whiten`: noise of this covariance from independent unit normals [n]."""
+        out = np.empty_like(white)
+        for factor, member in zip(self.factors, self.members, strict=True):
+            out[member] = factor @ white[member]
         return out
 
 
@@ -93,6 +102,15 @@ class CurveData:
     @property
     def noise_known(self) -> bool:
         return True
+
+    @property
+    def temperatures(self) -> FloatArray:
+        """Of the part at each row [n] degC."""
+        return np.concatenate([np.full(len(ramp.current), ramp.temperature_degC) for ramp in self.ramps])
+
+    def with_rows(self, current: FloatArray, flux: FloatArray) -> "CurveData":
+        """The same bins with other values (scaled)."""
+        return replace(self, current=current, flux=flux)
 
     def pilot(self) -> tuple[FloatArray, FloatArray]:
         """A few of the rows, evenly along the flux, for the first look at the laws."""

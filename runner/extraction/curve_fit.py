@@ -6,7 +6,7 @@ deviation's size and length and the noise's factor by the marginal likelihood of
 evidence is kept. Covariances are those of the last linearisation.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy.optimize import least_squares
@@ -66,6 +66,44 @@ def fit_curve(data: FitData) -> Fit:
     return max(fits, key=lambda fit: fit.evidence)
 
 
+def refit(fit: Fit, data: FitData, turns: int = 3) -> Fit:
+    """The same fit to other values of the same rows; what the evidence chose, and the covariances, are kept."""
+    hyper = np.log(np.array([fit.size, fit.length, fit.inflation]))
+    mean, prior = _priors(fit.model.law, data)
+    noise = data.noise(fit.inductance_at_rows)
+    z = fit.z
+    for _ in range(turns):
+        problem, *_ = _problem_at(fit.model, data, z, noise, mean, prior)
+        z, *_ = _move(fit.model, data, noise, z, problem, hyper)
+    problem, _, shape, residual, inductance = _problem_at(fit.model, data, z, noise, mean, prior)
+    return replace(
+        fit, data=data, z=z, shape=shape, residuals=residual, inductance_at_rows=inductance, misfit=problem.misfit
+    )
+
+
+def _priors(law: Law, data: FitData) -> tuple[FloatArray, FloatArray]:
+    """Mean and inverse variance of the parameters' priors; the deviation's knots hold ones, which nobody reads."""
+    split = law.parameters
+    mean, prior = np.zeros(split + KNOTS + COMMON), np.ones(split + KNOTS + COMMON)
+    mean[:split] = PRIOR_MEAN[:split]
+    prior[:split] = PRIOR_SIGMA[:split] ** -2.0
+    prior[-COMMON:] = np.array(data.delay_sigmas) ** -2.0
+    return mean, prior
+
+
+def _problem_at(
+    model: CurveModel, data: FitData, z: FloatArray, noise: Noise | None, mean: FloatArray, prior: FloatArray
+) -> tuple[Problem, Noise, Shape, FloatArray, FloatArray]:
+    """The problem linearised at z; the noise is worked out anew when None."""
+    shape = model.shape(z[:-COMMON])
+    residual, jacobian, inductance = data.linearise(model, shape, z)
+    noise = noise or data.noise(inductance)
+    r, j = noise.whiten(residual), noise.whiten(jacobian)
+    split = model.law.parameters
+    made = Problem(r, j, z, prior=prior, mean=mean, split=split, noise_known=data.noise_known)
+    return made, noise, shape, residual, inductance
+
+
 def _pilot(law: Law, data: FitData) -> tuple[FloatArray, float, Law]:
     """The law alone through some of the rows: its parameters and its misfit."""
     current, flux = data.pilot()
@@ -94,25 +132,12 @@ def _pilot(law: Law, data: FitData) -> tuple[FloatArray, float, Law]:
 def _fit_law(law: Law, data: FitData, start: FloatArray) -> Fit:
     model = CurveModel.around(law, start)
     z = np.concatenate([start, np.zeros(KNOTS + COMMON)])
-    mean, prior = np.zeros(len(z)), np.zeros(len(z))
-    split = law.parameters
-    mean[:split] = PRIOR_MEAN[:split]
-    prior[:split] = PRIOR_SIGMA[:split] ** -2.0
-    prior[split:-COMMON] = 1.0
-    prior[-COMMON:] = np.array(data.delay_sigmas) ** -2.0
-
-    def problem_at(z: FloatArray, noise: Noise | None) -> tuple[Problem, Noise, Shape, FloatArray, FloatArray]:
-        shape = model.shape(z[:-COMMON])
-        residual, jacobian, inductance = data.linearise(model, shape, z)
-        noise = noise or data.noise(inductance)
-        r, j = noise.whiten(residual), noise.whiten(jacobian)
-        made = Problem(r, j, z, prior=prior, mean=mean, split=split, noise_known=data.noise_known)
-        return made, noise, shape, residual, inductance
-
-    hyper, noise, value = np.array([-4.0, -1.2, 0.3]), None, np.inf
+    mean, prior = _priors(law, data)
+    hyper, value = np.array([-4.0, -1.2, 0.3]), np.inf
+    noise: Noise | None = None
     for turn in range(TURNS):
         # The noise of λ reaches the current through 1/L: twice is enough to have it right.
-        problem, noise, *_ = problem_at(z, None if turn in (0, 1, 3) else noise)
+        problem, noise, *_ = _problem_at(model, data, z, None if turn in (0, 1, 3) else noise, mean, prior)
         away = 0.5 * float(np.log(problem.misfit))
         if far := away > FAR and turn < TURNS // 2:
             hyper = np.array([*APPROACH, away - 0.7])
@@ -122,7 +147,7 @@ def _fit_law(law: Law, data: FitData, start: FloatArray) -> Fit:
         previous, value = value, problem.evidence(hyper) + noise.log_determinant
         if turn > 2 and whole and not far and abs(before - after) < 0.05 and abs(previous - value) < 0.1:
             break
-    problem, noise, shape, residual, inductance = problem_at(z, noise)
+    problem, noise, shape, residual, inductance = _problem_at(model, data, z, noise, mean, prior)
     return _finish(problem, model, data, noise, shape, hyper, inductance, residual)
 
 

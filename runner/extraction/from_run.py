@@ -4,7 +4,7 @@ Captures are read point by point and averaged at once, so memory holds one point
 """
 
 from collections.abc import Iterator
-from dataclasses import dataclass, field
+from dataclasses import dataclass, replace
 from datetime import UTC, datetime
 from typing import Any
 
@@ -13,41 +13,23 @@ import numpy as np
 from runner.arrays import FloatArray, IntArray
 from runner.extraction.bench_constants import from_bench, from_captures_file
 from runner.extraction.bias import Readings, bias_leg, correct
-from runner.extraction.calibration import Calibration, Constant
-from runner.extraction.curve import LegCurve
+from runner.extraction.calibration import Calibration
+from runner.extraction.cross_check import compare, verdict
 from runner.extraction.flags import Doubt, capture_doubts
 from runner.extraction.mean_capture import Setting, average
-from runner.extraction.part_result import Knees, Settings, find_knees, method_result
+from runner.extraction.method import MethodLegs, PartFacts, finish_method
+from runner.extraction.part_result import Settings
 from runner.extraction.pulse_leg import pulse_leg
 from runner.extraction.ramp import Ramp, make_ramp
 from runner.extraction.resistance import Resistance, winding_resistance
+from runner.extraction.surface import Surface
 from runner.plan import parse_bench, parse_captures, parse_plan
 from runner.record import SENTENCES, ExtractionTables, Flag, IsatTable, Run, SurfaceTable, is_acceptable
 from runner.versions import software
 
 PULSE, BIAS = 1, 2
+METHODS = {"pulse": PULSE, "bias": BIAS}
 GRID = 161  # currents of a surface table
-
-
-@dataclass(frozen=True, slots=True)
-class PartFacts:
-    """What the plan says about a part."""
-
-    label: str
-    inductance: float
-    rated_current: float
-    resistance_20: float
-    core: Any = None
-
-
-@dataclass(slots=True)
-class MethodLegs:
-    """One part by one method: curves from cold to hot, their knees, resistances."""
-
-    legs: list[LegCurve] = field(default_factory=list)
-    resistances: list[Resistance] = field(default_factory=list)
-    peaks: list[FloatArray] = field(default_factory=list)
-    knees: Knees | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -57,6 +39,16 @@ class Extraction:
     result: dict[str, Any]
     tables: ExtractionTables
     methods: dict[tuple[int, str], MethodLegs]
+
+    def surface(self, part: int = 0, method: str = "pulse") -> Surface:
+        """L(I,T) of one part by one method.
+
+        Raises:
+            KeyError: the run has nothing of that part and method.
+        """
+        found = self.methods[part, method]
+        assert found.surface is not None
+        return found.surface
 
 
 def extract(run: Run) -> Extraction:
@@ -74,34 +66,28 @@ def extract(run: Run) -> Extraction:
     for index, facts in enumerate(parts):
         doubts = list(_record_doubts(run, index))
         methods: dict[str, Any] = {}
-        for name, number in (("pulse", PULSE), ("bias", BIAS)):
+        for name, number in METHODS.items():
             mine = np.flatnonzero((points["part"] == index) & (points["method"] == number))
             if mine.size == 0:
                 continue
-            legs = _pulse_legs if number == PULSE else _bias_legs
-            method = legs(run, mine, facts, calibration, doubts)
+            read = _pulse_legs if number == PULSE else _bias_legs
+            method = read(run, mine, facts, calibration, doubts)
             if not method.legs:
+                doubts.append(Doubt(-1, "no_curve", f"the {name} method gave no curve at any temperature."))
                 continue
-            method.knees = find_knees(
-                method.legs,
-                settings,
-                nominal=facts.inductance,
-                temperature_uncertainty=calibration.body_offset.uncertainty,
-            )
-            kind = "differential" if number == PULSE else "incremental"
-            methods[name] = method_result(method.legs, method.knees, method.resistances, settings, kind)
+            methods[name] = finish_method(method, facts, settings, calibration, doubts)
             every[index, name] = method
             surfaces.append(_surface_table(index, name, method))
             isats.append(_isat_table(index, name, method, settings))
-        rows.append(
-            {
-                "label": facts.label,
-                "inductance": facts.inductance,
-                "rated_current": facts.rated_current,
-                "methods": methods,
-                "flags": [doubt.as_row() for doubt in doubts],
-            }
-        )
+        row: dict[str, Any] = {
+            "label": facts.label,
+            "inductance": facts.inductance,
+            "rated_current": facts.rated_current,
+            "methods": methods,
+        }
+        if (index, "pulse") in every and (index, "bias") in every:
+            row["cross_check"] = _cross_check(every[index, "pulse"], every[index, "bias"], settings, doubts)
+        rows.append({**row, "flags": [doubt.as_row() for doubt in doubts]})
     program, _, version = software().partition(" ")
     tables = ExtractionTables(
         program=program,
@@ -139,30 +125,36 @@ def _record_doubts(run: Run, part: int) -> Iterator[Doubt]:
                 yield Doubt(int(points["point"][row]), str(flag.name).lower(), SENTENCES[flag])
 
 
-def _by_leg(points: dict[str, Any], mine: IntArray) -> list[tuple[float, IntArray]]:
-    """Rows of each leg with the mean body temperature there, from cold to hot."""
+def _by_leg(
+    points: dict[str, Any], mine: IntArray, calibration: Calibration
+) -> list[tuple[float, IntArray]]:
+    """Rows of each leg with the part's mean temperature there, from cold to hot."""
     groups = []
     for leg in np.unique(points["leg"][mine]):
         rows = mine[points["leg"][mine] == leg]
-        body = points["body_temperature"][rows]
-        body = np.where(np.isfinite(body), body, points["temperature_setpoint"][rows])
-        groups.append((float(np.mean(body)), rows))
+        groups.append((float(np.mean(_body(points, rows, calibration))), rows))
     return sorted(groups, key=lambda group: group[0])
+
+
+def _body(points: dict[str, Any], rows: IntArray, calibration: Calibration) -> FloatArray:
+    """The part's temperature at each row [degC]: its sensor's, or the set-point where that gave nothing."""
+    body = points["body_temperature"][rows] - calibration.body_offset.value
+    return np.where(np.isfinite(body), body, points["temperature_setpoint"][rows])
 
 
 def _pulse_legs(
     run: Run, mine: IntArray, facts: PartFacts, calibration: Calibration, doubts: list[Doubt]
 ) -> MethodLegs:
     points = run.points
-    method = MethodLegs()
-    for temperature, rows in _by_leg(points, mine):
-        at = temperature - calibration.body_offset.value
+    method = MethodLegs("pulse")
+    for at, rows in _by_leg(points, mine, calibration):
         resistance = _resistance(points, rows, calibration, facts, at)
+        body = dict(zip(rows.tolist(), _body(points, rows, calibration), strict=True))
         ramps = []
         for row in rows.tolist():
-            ramp = _ramp(run, int(points["point"][row]), at, calibration, doubts)
+            ramp = _ramp(run, int(points["point"][row]), calibration, doubts)
             if ramp is not None:
-                ramps.append(ramp)
+                ramps.append(replace(ramp, temperature_degC=float(body[row])))
         if not ramps:
             continue
         method.legs.append(
@@ -179,9 +171,7 @@ def _pulse_legs(
     return method
 
 
-def _ramp(
-    run: Run, point: int, temperature: float, calibration: Calibration, doubts: list[Doubt]
-) -> Ramp | None:
+def _ramp(run: Run, point: int, calibration: Calibration, doubts: list[Doubt]) -> Ramp | None:
     captures = run.captures(point)
     if captures is None:
         return None
@@ -197,7 +187,7 @@ def _ramp(
         code_max=float(detail["code_max"]),
     )
     mean = average(captures.voltage_codes, captures.current_codes, setting, guard=_guard(calibration))
-    ramp = make_ramp(mean, calibration, point=point, temperature_degC=temperature)
+    ramp = make_ramp(mean, calibration, point=point)
     doubts += capture_doubts(point, mean, ramp)
     return ramp
 
@@ -210,7 +200,7 @@ def _guard(calibration: Calibration) -> float:
 def _resistance(
     points: dict[str, Any], rows: IntArray, calibration: Calibration, facts: PartFacts, at: float
 ) -> Resistance:
-    body = points["body_temperature"][rows] - calibration.body_offset.value
+    body = _body(points, rows, calibration)
     return winding_resistance(
         points["resistance"][rows], body, calibration, at_degC=at, nominal_20=facts.resistance_20
     )
@@ -220,9 +210,8 @@ def _bias_legs(
     run: Run, mine: IntArray, facts: PartFacts, calibration: Calibration, doubts: list[Doubt]
 ) -> MethodLegs:
     points = run.points
-    method = MethodLegs()
-    for temperature, rows in _by_leg(points, mine):
-        at = temperature - calibration.body_offset.value
+    method = MethodLegs("bias")
+    for at, rows in _by_leg(points, mine, calibration):
         current, inductance = correct(
             points["bias_current"][rows],
             points["inductance"][rows],
@@ -234,7 +223,7 @@ def _bias_legs(
         top = int(np.argmax(np.where(good, current, -1.0)))
         climbing = good & (np.arange(len(rows)) <= top)
         leg = bias_leg(
-            Readings(current[climbing], inductance[climbing], float("nan"), np.full(climbing.sum(), at)),
+            Readings(current[climbing], inductance[climbing], _body(points, rows, calibration)[climbing]),
             calibration,
             temperature_degC=at,
         )
@@ -281,6 +270,11 @@ def _isat_table(part: int, name: str, method: MethodLegs, settings: Settings) ->
     )
 
 
-def constant(value: float, uncertainty: float = 0.0) -> Constant:
-    """A constant, for callers without a bench file."""
-    return Constant(value, uncertainty)
+def _cross_check(
+    pulse: MethodLegs, bias: MethodLegs, settings: Settings, doubts: list[Doubt]
+) -> list[dict[str, Any]]:
+    assert pulse.knees is not None and bias.knees is not None
+    comparisons = compare((pulse.legs, pulse.knees), (bias.legs, bias.knees), settings)
+    if (said := verdict(comparisons)) is not None:
+        doubts.append(Doubt(-1, "methods_disagree", said))
+    return [comparison.as_row() for comparison in comparisons]

@@ -1,0 +1,56 @@
+"""A leg's points were taken at slightly different temperatures; here they are all brought to the leg's own.
+
+The legs themselves say how the curve moves with temperature, so a first pass over all legs gives the correction of
+each row: at the row's flux for the pulse method (its current moves), at its current for the bias method (its
+inductance moves). It is small, so the fit is not repeated: its parameters move linearly with the rows.
+"""
+
+from collections.abc import Sequence
+from dataclasses import replace
+
+import numpy as np
+
+from runner.arrays import FloatArray
+from runner.extraction.bias import ReadingData
+from runner.extraction.curve import LegCurve
+from runner.extraction.curve_data import CurveData
+from runner.extraction.curve_fit import COMMON
+from runner.extraction.surface import Surface
+
+WORTH = 0.01  # K: smaller departures are left alone
+HALF_STEP = 3.0  # K for the slope in temperature
+
+
+def at_one_temperature(legs: Sequence[LegCurve], *, kind: str) -> list[LegCurve]:
+    """The legs with every row brought to its leg's temperature; unchanged where there is one leg only."""
+    if len(legs) < 2:
+        return list(legs)
+    surface = Surface(legs, kind=kind)
+    return [_corrected(leg, surface) for leg in legs]
+
+
+def _corrected(leg: LegCurve, surface: Surface) -> LegCurve:
+    away = leg.fit.data.temperatures - leg.temperature_degC
+    if not np.any(np.abs(away) > WORTH):
+        return leg
+    move = _row_slopes(leg, surface) * away
+    fit = leg.fit
+    z = fit.z - fit.gain @ move
+    return leg.with_fit(replace(fit, z=z, shape=fit.model.shape(z[:-COMMON])))
+
+
+def _row_slopes(leg: LegCurve, surface: Surface) -> FloatArray:
+    """Change of each row per kelvin [n], in the data's scale."""
+    low, high = surface.temperature_degC[0], surface.temperature_degC[-1]
+    cold = max(low, leg.temperature_degC - HALF_STEP)
+    hot = min(high, leg.temperature_degC + HALF_STEP)
+    data = leg.fit.data
+    current = data.current * leg.scale.current  # type: ignore[attr-defined]
+    ask = surface.flux_linkage if isinstance(data, CurveData) else surface
+    top = min(surface.top(cold), surface.top(hot))
+    grid = np.linspace(0.0, top, 200)
+    slope = (ask(grid, hot) - ask(grid, cold)) / (hot - cold)
+    per_kelvin = np.interp(current, grid, slope)
+    if isinstance(data, ReadingData):
+        return np.asarray(per_kelvin / leg.scale.inductance)
+    return np.asarray(-per_kelvin / leg.scale.flux / leg.fit.inductance_at_rows)

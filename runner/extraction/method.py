@@ -1,0 +1,117 @@
+"""One part by one method, all legs: what follows from its curves, and what is doubtful about them."""
+
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+
+from runner.arrays import FloatArray
+from runner.extraction.calibration import Calibration
+from runner.extraction.core_view import at_knees
+from runner.extraction.curve import LegCurve
+from runner.extraction.derating import derating, margins, temperature_coefficients
+from runner.extraction.drift import at_one_temperature
+from runner.extraction.flags import Doubt
+from runner.extraction.part_result import Knees, Settings, find_knees, method_result
+from runner.extraction.resistance import Resistance
+from runner.extraction.shape_test import judge_shape
+from runner.extraction.surface import Surface, left_out_error
+
+KINDS = {"pulse": "differential", "bias": "incremental"}
+MUCH_NOISE = 2.0  # residuals this many times the noise that the captures themselves show
+
+
+@dataclass(frozen=True, slots=True)
+class PartFacts:
+    """What the plan says about a part; ``core`` has ``turns``, ``area`` and ``path``, or is None."""
+
+    label: str
+    inductance: float
+    rated_current: float
+    resistance_20: float
+    core: Any = None
+
+
+@dataclass(slots=True)
+class MethodLegs:
+    """Curves from cold to hot, and what belongs to each: resistance, and the currents of its points [A].
+
+    ``surface`` and ``knees`` are there once `finish_method` has been through it.
+    """
+
+    name: str
+    legs: list[LegCurve] = field(default_factory=list)
+    resistances: list[Resistance] = field(default_factory=list)
+    peaks: list[FloatArray] = field(default_factory=list)
+    down: list[LegCurve | None] = field(default_factory=list)
+    knees: Knees | None = None
+    surface: Surface | None = None
+
+
+def finish_method(
+    method: MethodLegs, facts: PartFacts, settings: Settings, calibration: Calibration, doubts: list[Doubt]
+) -> dict[str, Any]:
+    """Brings the legs to their temperatures, finds knees and surface, adds doubts, and gives the method's entry."""
+    kind = KINDS[method.name]
+    method.legs = at_one_temperature(method.legs, kind=kind)
+    method.surface = Surface(method.legs, kind=kind)
+    method.knees = find_knees(
+        method.legs,
+        settings,
+        nominal=facts.inductance,
+        temperature_uncertainty=calibration.body_offset.uncertainty,
+    )
+    doubts += _doubts(method.name, method.legs, method.knees, method.resistances, settings)
+    entry = method_result(method.legs, method.knees, method.resistances, settings, kind)
+    entry["margin"] = margins(method.legs, method.knees, settings, rated=facts.rated_current)
+    entry["derating"] = derating(method.legs, method.knees, settings)
+    entry["temperature_coefficient"] = temperature_coefficients(method.legs, method.knees, settings)
+    if (left_out := left_out_error(method.surface)) is not None:
+        entry["left_out_error"] = [{"fraction": left_out["rms"], "largest": left_out["largest"]}]
+    if facts.core is not None and method.name == "pulse":
+        entry["core_view"] = at_knees(
+            method.legs, method.knees.found, turns=facts.core.turns, area=facts.core.area, path=facts.core.path
+        )
+    return entry
+
+
+def _doubts(
+    name: str, legs: Sequence[LegCurve], knees: Knees, resistances: Sequence[Resistance], settings: Settings
+) -> list[Doubt]:
+    found = []
+    for k, (leg, resistance) in enumerate(zip(legs, resistances, strict=True)):
+        at = f"{name} at {leg.temperature_degC:.0f} °C"
+        missed = [drop for drop in settings.drops if knees.found[drop][k] is None]
+        if missed:
+            drops = ", ".join(f"{100 * drop:g} %" for drop in missed)
+            found.append(
+                Doubt(-1, "not_reached", f"{at}: the inductance did not fall by {drops} up to {leg.top:.3g} A; "
+                      f"{'widen the pulses' if name == 'pulse' else 'raise the bias'} if the limits allow.")
+            )  # fmt: skip
+        shape = judge_shape(leg)
+        if not shape.has_one_knee:
+            places = " and ".join(f"{knee:.3g} A" for knee in shape.knees)
+            found.append(
+                Doubt(-1, "two_plateaus", f"{at}: the inductance falls in steps, near {places} (a stepped gap does that); "
+                      "one saturation current does not describe it.")
+            )  # fmt: skip
+        if not shape.is_falling:
+            found.append(
+                Doubt(-1, "inductance_rises", f"{at}: the inductance rises by {100 * shape.rise:.1f} % up to "
+                      f"{shape.rise_at:.3g} A before it falls; a core with memory does that. Drops count from zero current.")
+            )  # fmt: skip
+        if name == "pulse" and not resistance.is_measured:
+            found.append(Doubt(-1, "resistance_assumed", f"{at}: winding resistance from the plan and the copper law."))
+        if name == "pulse" and leg.fit.inflation > MUCH_NOISE:
+            found.append(
+                Doubt(-1, "misfit", f"{at}: widths disagree {leg.fit.inflation:.1f} times more than their noise; the "
+                      "intervals were widened. Ringing, pickup or a part that warms between pulses would do that.")
+            )  # fmt: skip
+        away = leg.fit.data.temperatures - leg.temperature_degC
+        if float(np.ptp(away)) > 1.0:
+            found.append(
+                Doubt(-1, "part_warmed", f"{at}: the part's temperature moved by {float(np.ptp(away)):.1f} K while it was "
+                      "measured; each point was brought to the mean.")
+            )  # fmt: skip
+    return found

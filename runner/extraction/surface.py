@@ -1,0 +1,244 @@
+"""L(I,T) and what follows from it, over all legs of one part and method, callable anywhere inside what was measured.
+
+Legs are laid over each other before anything is interpolated in temperature: current over the leg's knee, inductance
+over the leg's L_0. What is left, F(x, T) = L/L_0 at x = I/I_knee, hardly changes with temperature, while L at a fixed
+current near the knee changes a lot; so L = L_0(T)·F(I/I_knee(T), T), each factor smooth in T by a criterion of the
+data (`along_temperature.py`). Outside the measured region the answer is NaN: below zero, above the largest current
+(between two legs the smaller of theirs, in units of the knee), and beyond the coldest and hottest leg.
+"""
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+import xarray as xr
+from numpy.typing import ArrayLike
+
+from runner.arrays import FloatArray
+from runner.extraction.along_temperature import Smoother, best_smoother
+from runner.extraction.curve import LegCurve
+from runner.extraction.curve_model import running_integral
+from runner.extraction.gum import combine
+
+POINTS = 400  # of the scaled current
+EDGE = 0.75  # K beyond the outermost legs that still count as there: a set-point is not met to the last tenth
+DROPS = (0.5, 0.4, 0.3, 0.2, 0.1, 0.05)
+
+
+@dataclass(frozen=True, slots=True)
+class Slice:
+    """The curve at one temperature: ``current`` [n] A, L_d, λ, energy [n] with standard uncertainties."""
+
+    current: FloatArray
+    inductance: FloatArray
+    inductance_uncertainty: FloatArray
+    flux: FloatArray
+    flux_uncertainty: FloatArray
+    energy: FloatArray
+    energy_uncertainty: FloatArray
+
+
+class Surface:
+    """The surface of one part by one method; call it with currents [A] and temperatures [degC] of any shapes."""
+
+    def __init__(self, legs: Sequence[LegCurve], *, kind: str = "differential") -> None:
+        """``legs``: at least one, from cold to hot; ``kind``: which inductance their ``inductance`` is."""
+        self.legs = tuple(legs)
+        self.kind = kind
+        self.temperature_degC = np.array([leg.temperature_degC for leg in legs])
+        self._initial = np.array([leg.inductance[0] for leg in legs])
+        self._knee = _knee_scales(legs)
+        self._reach = np.array([leg.top for leg in legs]) / self._knee
+        self._x = np.linspace(0.0, float(self._reach.max()), POINTS)
+        self._shape = np.array(
+            [
+                np.interp(self._x, leg.current / knee, leg.inductance / leg.inductance[0], right=np.nan)
+                for leg, knee in zip(legs, self._knee, strict=True)
+            ]
+        )
+        own = np.array([combine(leg.initial_inductance().own.values()) for leg in legs]) / self._initial
+        self._own = own
+        rows = [(np.log(self._initial), own), (np.log(self._knee), own)]
+        self._smoother: Smoother = best_smoother(self.temperature_degC, rows)
+        self._sizes = tuple(self._smoother.size_and_likelihood(values, u)[0] for values, u in rows)
+        common = self._shape[:, np.all(np.isfinite(self._shape), axis=0)]
+        spread = [self._smoother.size_and_likelihood(column, own)[0] for column in common[:, ::20].T]
+        self._shape_size = float(np.median(spread)) if spread else 0.0
+
+    def __call__(self, current: ArrayLike, temperature_degC: ArrayLike) -> FloatArray:
+        """L_d [H] at ``current`` [A] and ``temperature_degC``, broadcast against each other; NaN outside."""
+        return self._ask(current, temperature_degC, "inductance")
+
+    def uncertainty(self, current: ArrayLike, temperature_degC: ArrayLike) -> FloatArray:
+        """Standard uncertainty [H] of L_d, shape as called; NaN outside."""
+        return self._ask(current, temperature_degC, "inductance_uncertainty")
+
+    def flux_linkage(self, current: ArrayLike, temperature_degC: ArrayLike) -> FloatArray:
+        """λ [Wb], shape as called; NaN outside."""
+        return self._ask(current, temperature_degC, "flux")
+
+    def secant_inductance(self, current: ArrayLike, temperature_degC: ArrayLike) -> FloatArray:
+        """L_s = λ/I [H], L_0 at zero current; NaN outside."""
+        i, _ = np.broadcast_arrays(np.asarray(current, dtype=np.float64), np.asarray(temperature_degC))
+        flux = self.flux_linkage(current, temperature_degC)
+        return np.where(i > 0, flux / np.where(i > 0, i, 1.0), self(current, temperature_degC))
+
+    def energy(self, current: ArrayLike, temperature_degC: ArrayLike) -> FloatArray:
+        """∫ I dλ [J], shape as called; NaN outside."""
+        return self._ask(current, temperature_degC, "energy")
+
+    def top(self, temperature_degC: float) -> float:
+        """The largest current [A] the surface answers at this temperature; NaN outside the legs' temperatures."""
+        found = self.at(temperature_degC)
+        return float("nan") if found is None else float(found.current[-1])
+
+    def at(self, temperature_degC: float) -> Slice | None:
+        """The curve at one temperature, None outside."""
+        low, high = self.temperature_degC[0] - EDGE, self.temperature_degC[-1] + EDGE
+        if not low <= temperature_degC <= high:
+            return None
+        t = np.array([np.clip(temperature_degC, self.temperature_degC[0], self.temperature_degC[-1])])
+        (w_initial, open_initial), (w_knee, open_knee) = (
+            self._smoother.weights(t, size, self._own) for size in self._sizes
+        )
+        initial = float(np.exp(w_initial[0] @ np.log(self._initial)))
+        knee = float(np.exp(w_knee[0] @ np.log(self._knee)))
+        reach = self._reach_at(float(t[0]))
+        x = self._x[self._x < reach]
+        x = np.append(x, reach)
+        shape, open_shape = self._shape_at(x, t)
+        current, inductance = x * knee, initial * shape
+        steep = np.gradient(np.log(np.maximum(shape, 1e-12)), x) * x if len(x) > 2 else np.zeros_like(x)
+        between = np.sqrt(
+            open_initial[0] ** 2 + (steep * open_knee[0]) ** 2 + (open_shape / np.maximum(shape, 1e-3)) ** 2
+        )
+        return self._slice(x, current, inductance, w_initial[0], between)
+
+    def _reach_at(self, t: float) -> float:
+        """The largest scaled current: a leg's own at its temperature, the smaller of both neighbours' between legs."""
+        nearest = int(np.argmin(np.abs(self.temperature_degC - t)))
+        if abs(self.temperature_degC[nearest] - t) <= EDGE or len(self.legs) == 1:
+            return float(self._reach[nearest])
+        right = int(np.searchsorted(self.temperature_degC, t))
+        return float(min(self._reach[right - 1], self._reach[right]))
+
+    def _shape_at(self, x: FloatArray, t: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """F [n] at scaled currents, and what temperature leaves open of it, from the legs that reach each of them."""
+        shape, left_open = np.empty(len(x)), np.empty(len(x))
+        reached = self._reach[None, :] * (1 + 1e-9) >= x[:, None]
+        for legs in np.unique(reached, axis=0):
+            here = np.all(reached == legs, axis=1)
+            some = Smoother(self.temperature_degC[legs], self._smoother.length)
+            weights, rest = some.weights(t, self._shape_size, self._own[legs])
+            rows = np.array(
+                [
+                    np.interp(x[here], leg.current / knee, leg.inductance / leg.inductance[0])
+                    for leg, knee, is_in in zip(self.legs, self._knee, legs, strict=True)
+                    if is_in
+                ]
+            )
+            shape[here], left_open[here] = weights[0] @ rows, rest[0]
+        return shape, left_open
+
+    def to_dataset(self, current: ArrayLike, temperature_degC: ArrayLike | None = None) -> xr.Dataset:
+        """L_d, its uncertainty, L_s, λ and energy on a grid of currents and temperatures (the legs' when None)."""
+        i = np.asarray(current, dtype=np.float64)
+        t = self.temperature_degC if temperature_degC is None else np.asarray(temperature_degC, dtype=np.float64)
+        grid = (i[None, :], t[:, None])
+        dims = ("temperature_degC", "current")
+        return xr.Dataset(
+            {
+                f"{self.kind}_inductance": (dims, self(*grid), {"units": "H"}),
+                f"{self.kind}_inductance_errors": (dims, self.uncertainty(*grid), {"units": "H"}),
+                "secant_inductance": (dims, self.secant_inductance(*grid), {"units": "H"}),
+                "flux_linkage": (dims, self.flux_linkage(*grid), {"units": "Wb"}),
+                "energy": (dims, self.energy(*grid), {"units": "J"}),
+            },
+            coords={
+                "current": ("current", i, {"units": "A"}),
+                "temperature_degC": ("temperature_degC", t, {"units": "degC"}),
+            },
+        )
+
+    def _slice(
+        self, x: FloatArray, current: FloatArray, inductance: FloatArray, weights: FloatArray, between: FloatArray
+    ) -> Slice:
+        """Adds flux, energy and uncertainties: those of each leg at the same scaled current, weighted (own ones
+        independent, shared ones with their signs), and what temperature between the legs leaves open."""
+        names = {name for leg in self.legs for name in leg.shifts}
+        own = [np.zeros(len(x)) for _ in range(3)]
+        shared = {name: [np.zeros(len(x)) for _ in range(3)] for name in names}
+        for leg, knee, weight in zip(self.legs, self._knee, weights, strict=True):
+            if abs(weight) < 1e-9:
+                continue
+            at = np.clip(x * knee, 0.0, leg.top)
+            for k, (value, slopes) in enumerate(_answers(leg)):
+                there = np.maximum(np.abs(np.interp(at, leg.current, value)), 1e-30)
+                variance = np.einsum("ij,jk,ik->i", slopes, leg.covariance, slopes)
+                own[k] += (weight * np.interp(at, leg.current, np.sqrt(np.maximum(variance, 0.0))) / there) ** 2
+                for name, shift in leg.shifts.items():
+                    shared[name][k] += weight * np.interp(at, leg.current, slopes @ shift) / there
+        relative = [
+            np.sqrt(own[k] + between**2 + sum(moves[k] ** 2 for moves in shared.values())) for k in range(3)
+        ]
+        fine = np.linspace(0.0, current[-1], 2 * POINTS)
+        curve = np.interp(fine, current, inductance)
+        flux = np.interp(current, fine, running_integral(curve, float(fine[1])))
+        energy = np.interp(current, fine, running_integral(curve * fine, float(fine[1])))
+        for k in (1, 2):  # at zero current flux and energy are zero and known
+            relative[k][0] = 0.0
+        return Slice(
+            current, inductance, relative[0] * inductance, flux, relative[1] * flux, energy, relative[2] * energy
+        )
+
+    def _ask(self, current: ArrayLike, temperature_degC: ArrayLike, what: str) -> FloatArray:
+        i, t = np.broadcast_arrays(
+            np.asarray(current, dtype=np.float64), np.asarray(temperature_degC, dtype=np.float64)
+        )
+        out = np.full(i.shape, np.nan)
+        for value in np.unique(t[np.isfinite(t)]):
+            found = self.at(float(value))
+            if found is None:
+                continue
+            here = (t == value) & (i >= 0) & (i <= found.current[-1] * (1 + 1e-12))
+            out[here] = np.interp(i[here], found.current, getattr(found, what))
+        return out
+
+
+def left_out_error(surface: Surface) -> Mapping[str, float] | None:
+    """What the surface would have said at each inner leg without it: root-mean-square relative error of L_d over the
+    leg's currents, and the largest (fractions). None with fewer than four legs."""
+    legs = surface.legs
+    if len(legs) < 4:
+        return None
+    errors = []
+    for k in range(1, len(legs) - 1):
+        rest = Surface((*legs[:k], *legs[k + 1 :]), kind=surface.kind)
+        guessed = rest(legs[k].current, legs[k].temperature_degC)
+        errors.append(guessed / legs[k].inductance - 1)
+    every = np.concatenate(errors)
+    every = every[np.isfinite(every)]
+    return {"rms": float(np.sqrt(np.mean(every**2))), "largest": float(np.abs(every).max())}
+
+
+def _answers(leg: LegCurve) -> tuple[tuple[FloatArray, FloatArray], ...]:
+    """L_d, λ and energy on the leg's grid with their slopes."""
+    step = float(leg.current[1])
+    return (
+        (leg.inductance, leg.inductance_slopes),
+        (leg.flux, leg.flux_slopes),
+        (
+            running_integral(leg.current * leg.inductance, step),
+            running_integral(leg.current[:, None] * leg.inductance_slopes, step),
+        ),
+    )
+
+
+def _knee_scales(legs: Sequence[LegCurve]) -> FloatArray:
+    """A current of each leg by which they are laid over each other: the knee of the largest drop that all reached."""
+    for drop in DROPS:
+        knees = [leg.knee(drop) for leg in legs]
+        found = [knee.value for knee in knees if knee is not None]
+        if len(found) == len(legs):
+            return np.array(found)
+    return np.full(len(legs), max(leg.top for leg in legs))
