@@ -9,7 +9,7 @@ at which it was made, so the same run gives the same page.
 import re
 from collections.abc import Iterator, Mapping
 from datetime import UTC, datetime
-from pathlib import Path
+from pathlib import Path, PurePath
 from typing import Any
 
 import jinja2
@@ -112,7 +112,7 @@ def _context(run: Run, into: Path) -> dict[str, Any]:
         "calibration": calibration(run),
         "versions": list(versions(run)),
         "files": [
-            (name, data.decode("utf-8", errors="replace"))
+            (PurePath(name).name, data.decode("utf-8", errors="replace"))
             for name, data in ((run.plan_name, run.plan_bytes), (run.bench_name, run.bench_bytes))
             if data
         ],

@@ -27,7 +27,7 @@ def calibration(run: Run) -> list[tuple[str, ...]]:
                     instrument.role.replace("_", " "),
                     name.replace("_", " "),
                     _constant(constant.value, unit),
-                    _constant(constant.uncertainty, unit) if constant.uncertainty else NOTHING,
+                    _uncertainty(constant.uncertainty, unit),
                     constant.date or NOTHING,
                     constant.certificate or NOTHING,
                 )
@@ -48,7 +48,15 @@ def versions(run: Run) -> Iterator[tuple[str, str]]:
 
 
 def _constant(value: float, unit: str) -> str:
-    # An SI prefix cannot stand before "K" differences in ppm or a plain ratio: those are written out.
+    if unit == "1/K":
+        return f"{1e6 * value:.6g} ppm/K"
+    # An SI prefix before a difference of temperature or a plain ratio would be read by nobody.
     return (
         short(value, unit, 6) if unit in {"ohm", "s", "H", "V", "A", "F"} else f"{value:.6g} {unit}".strip()
     )
+
+
+def _uncertainty(value: float, unit: str) -> str:
+    if not value:
+        return NOTHING
+    return f"{100 * value:.6g} %" if not unit else _constant(value, unit)

@@ -208,7 +208,7 @@ def write_run(
         text, bench = PLAN.format(title=json.dumps(title), parts=parts), BENCH.encode()
     header = RunHeader(
         run_id="1e0e8ac2-0000-4000-8000-000000000001", title=title, kind=kind, start=START,
-        plan_name="night.yaml" if kind == "plan" else "captures.yaml", plan_bytes=text.encode(),
+        plan_name="/somewhere/private/night.yaml" if kind == "plan" else "captures.yaml", plan_bytes=text.encode(),
         bench_name="mock.yaml" if bench else "", bench_bytes=bench,
         parts=tuple(PartRow(label, "", channel=k + 1) for k, label in enumerate(labels)),
         leg_setpoints=tuple(temperatures),
@@ -219,6 +219,7 @@ def write_run(
         if kind == "plan":
             constants = {
                 "voltage_gain": CalibrationRow(1.0, "1", 5e-4, "2026-03-02"),
+                "tempco": CalibrationRow(2e-5, "1/K", 1e-5, "2026-03-02"),
                 "skew": CalibrationRow(12e-9, "s", 1e-9, "2026-03-02", "C-17"),
             }
             journal.instrument(

@@ -114,7 +114,8 @@ def test_the_answer_comes_before_the_explanations(report):
         "no safety device", "stays charged", "burn", "pacemakers", "rules of the place",
         "clipped", "voltage channel above 11.8 V; raise its range", "2 (−40 °C, 5.6 µs)",
         "lcr: no reply to 'READ?' in 2.0 s; the connection was opened again. (and 1 more alike)", "instrument lost",
-        "Mock bench", "Digitizer 2", "0007", "1.4", "12 ns", "2026-03-02", "C-17", "kneemap 0.1.0", "numpy 2.4.6",
+        "Mock bench", "Digitizer 2", "0007", "1.4", "12 ns", "0.05 %",
+        "20 ppm/K", "2026-03-02", "C-17", "kneemap 0.1.0", "numpy 2.4.6",
         "1e0e8ac2-0000-4000-8000-000000000001",
         "width: {from: 2 us, to: 20 us, count: 6} # climbed from the shortest", "# a comment with ümlauts & <angles>",
         "-39.9".replace("-", "−"), "25.1", "125.1",
@@ -126,6 +127,10 @@ def test_the_page_says(report, needed):
 
 def test_the_ordinary_course_of_the_night_is_not_among_the_events(report):
     assert "Ordinary course" not in words(report / "index.html")
+
+
+def test_the_page_tells_no_path_of_the_machine(report):
+    assert "private" not in (report / "index.html").read_text(encoding="utf-8")
 
 
 def test_every_picture_has_a_png_and_a_csv(report):
