@@ -52,7 +52,7 @@ def doubts(run: Run, part: PartFacts) -> tuple[Doubt, ...]:
 def _named(concerned: list[int], places: dict[int, str]) -> str:
     known = sorted(point for point in set(concerned) if point >= 0)
     if not known:
-        return "the part as a whole"
+        return "no single point"
     named = [
         f"{point} ({places[point]})" if places.get(point) else str(point) for point in known[:MOST_NAMED]
     ]

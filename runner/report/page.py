@@ -77,10 +77,18 @@ def write_report(folder: Path) -> Path:
     with open_run(folder) as run, look.settings():
         into = run.folder / "report"
         into.mkdir(exist_ok=True)
+        _clear(into)
         page = into / "index.html"
         text = _render(_context(run, into))
     page.write_text(text, encoding="utf-8", newline="\n")
     return page
+
+
+def _clear(folder: Path) -> None:
+    """Take away the pictures of an earlier report, lest one that is no longer made passes for a new one."""
+    for path in folder.iterdir():
+        if path.suffix in (".png", ".csv") and re.match(r"part_\d\d_|night$|together_", path.stem):
+            path.unlink()
 
 
 def _context(run: Run, into: Path) -> dict[str, Any]:

@@ -218,6 +218,18 @@ def test_writing_again_gives_the_same_bytes(make_run):
     assert first == second
 
 
+@pytest.mark.usefixtures("coarse")
+def test_an_earlier_report_leaves_no_pictures_behind_and_other_files_stay(make_run):
+    folder = make_run(methods=("pulse",), temperatures=(25.0,))
+    into = folder / "report"
+    into.mkdir()
+    for name in ("part_07_bias_curves.png", "together_saturation.csv", "my_notes.csv", "night_shift.png"):
+        (into / name).write_text("old", encoding="utf-8")
+    write_report(folder)
+    kept = {path.name for path in into.iterdir() if path.read_bytes() == b"old"}
+    assert kept == {"my_notes.csv", "night_shift.png"}
+
+
 # ------------------------------------------------------- what may be missing
 
 
