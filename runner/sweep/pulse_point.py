@@ -17,7 +17,7 @@ from runner.sweep.retry import Kind
 _SHORTEST_SAMPLES = 40  # of a pulse that can be looked at
 _COMPARATOR_DELAY = 100e-9  # s from a current above the fixture's comparator level to an open switch
 _SHORTED = 0.05  # of the nominal inductance, left by shorted turns
-_LOWEST_TRIP = 0.5  # of the limit; below that the comparator would be in the way of ordinary pulses
+_LOWEST_TRIP = 0.85  # of the limit; below that the comparator would be in the way of ordinary pulses
 _MOST_ENLARGED = 2  # larger ranges tried at one point
 
 

@@ -24,7 +24,7 @@ def flat(current: float) -> float:
 
 
 def sought(
-    rule: SeekRule, law=soft, *, noise: float = 0.0, ceiling: float = math.inf
+    rule: SeekRule, law: Callable[[float], float] = soft, *, noise: float = 0.0, ceiling: float = math.inf
 ) -> tuple[list[Sought], Done]:
     draws = random.Random(SEED)
     history: list[Sought] = []
