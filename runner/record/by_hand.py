@@ -9,11 +9,11 @@ import uuid
 from collections.abc import Mapping, Sequence
 from datetime import UTC, datetime
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
 
 from runner.errors import Fault, InputError
-from runner.plan import CapturesFile, LoadedCaptures
 from runner.record.consolidation import consolidate
 from runner.record.folder import new_run_folder
 from runner.record.hand_waveforms import Waveform, read_waveform
@@ -28,6 +28,10 @@ from runner.record.rows import (
     SettingRow,
 )
 
+if TYPE_CHECKING:
+    # Only names for the reader: whoever records a night must not wait for the reader of plans, nor depend on it.
+    from runner.plan import CapturesFile, LoadedCaptures
+
 # Captures whose temperatures lie within this of each other form one leg [K].
 LEG_SPAN = 2.0
 # The driven part of a pulse, for its width: from where the current leaves this share of its peak to where it comes
@@ -36,7 +40,7 @@ _START, _END = 0.02, 0.98
 
 
 def write_captures_run(
-    loaded: LoadedCaptures, *, into: Path, software: str, versions: Mapping[str, str]
+    loaded: "LoadedCaptures", *, into: Path, software: str, versions: Mapping[str, str]
 ) -> Path:
     """Read the waveforms a captures file names and write them as a run below ``into``; its folder comes back.
 
@@ -98,7 +102,7 @@ def group_legs(temperatures_degC: Sequence[float]) -> list[tuple[float, list[int
     ]
 
 
-def _read_all(captures: CapturesFile, beside: Path) -> list[Waveform]:
+def _read_all(captures: "CapturesFile", beside: Path) -> list[Waveform]:
     columns = captures.columns
     current = columns.shunt_voltage or columns.current or ""
     names = {"time": columns.time, "voltage": columns.voltage, "current": current}
@@ -115,7 +119,7 @@ def _read_all(captures: CapturesFile, beside: Path) -> list[Waveform]:
 
 
 def _add(
-    journal: Journal, captures: CapturesFile, wave: Waveform, *, index: int, leg: int, member: int, t: float
+    journal: Journal, captures: "CapturesFile", wave: Waveform, *, index: int, leg: int, member: int, t: float
 ) -> None:
     capture = captures.captures[member]
     by_shunt = captures.columns.shunt_voltage is not None and captures.shunt is not None
@@ -152,7 +156,7 @@ def _add(
     )
 
 
-def _shunt_row(captures: CapturesFile) -> InstrumentRow:
+def _shunt_row(captures: "CapturesFile") -> InstrumentRow:
     shunt = captures.shunt
     assert shunt is not None
     constants = {"resistance": (shunt.resistance, "ohm"), "series_inductance": (shunt.series_inductance, "H")}
