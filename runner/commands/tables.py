@@ -40,7 +40,9 @@ def isat_table(label: str, method: str, numbers: Mapping[str, Any], *, coverage:
     columns = sorted({(row["drop"], row["reference"]) for row in currents})
     references = {reference for _, reference in columns}
     against = f"; drop from {references.pop()}" if len(references) == 1 else ""
-    table = plain_table(f"{label}: {METHOD_TITLES.get(method, method)} ({coverage:.0%} intervals{against})")
+    table = plain_table(f"{label}: {METHOD_TITLES.get(method, method)}")
+    table.caption = f"{coverage:.0%} intervals{against}"
+    table.caption_justify = "left"
     table.add_column("T / °C", justify="right")
     table.add_column("L₀ / µH", justify="right")
     for drop, reference in columns:
