@@ -269,10 +269,12 @@ class Bench:
         state = after(self.state, Move.DISCHARGE)
         self.pulser.off()
         self.supply.off()
-        waited = 0.0
+        # Known by what it was charged to: a voltmeter that is stuck may say that there is nothing left at once.
+        waited = discharge_time(self._rail, self.ratings.bleed)
+        self.clock.sleep(waited)
         voltage = self.bank()
         while voltage > DISCHARGED:
-            seconds = discharge_time(1.02 * voltage, self.ratings.bleed)
+            seconds = max(discharge_time(1.02 * voltage, self.ratings.bleed), 0.02 * self.ratings.bleed)
             self.clock.sleep(seconds)
             waited += seconds
             if waited > 10 * max(self.ratings.bleed, 1.0):
@@ -321,7 +323,8 @@ class Bench:
     def make_safe(self, rule: SafeRule, say: Callable[[str], None]) -> SafeReport:
         """The way out; legal in every state, and the bench counts as at rest afterwards."""
         state = after(self.state, Move.MAKE_SAFE)
-        report = reach_safe_state(self.roles, rule, self.clock, say=say)
+        bank = self._rail if self.state is State.CHARGED else 0.0
+        report = reach_safe_state(self.roles, rule, self.clock, bank=bank, say=say)
         self.state = state
         return report
 

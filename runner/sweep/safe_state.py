@@ -67,7 +67,12 @@ def discharge_time(voltage: float, bleed: float) -> float:
 
 
 def reach_safe_state(
-    roles: Mapping[str, Any], rule: SafeRule, clock: Clock, *, say: Callable[[str], None] = lambda text: None
+    roles: Mapping[str, Any],
+    rule: SafeRule,
+    clock: Clock,
+    *,
+    bank: float | None = None,
+    say: Callable[[str], None] = lambda text: None,
 ) -> SafeReport:
     """Walk to the safe state.
 
@@ -75,6 +80,8 @@ def reach_safe_state(
         roles: instruments by role; those that are missing were never there. Asking for one may raise.
         rule: times and set-points.
         clock: for ramps and the bleeder.
+        bank: what the bank may be charged to [V], None where nobody knows. A voltmeter alone is not believed when it says
+            that there is nothing in the bank: it may be stuck.
         say: told each step as it is done, and how long the bank will take.
 
     Returns:
@@ -84,7 +91,7 @@ def reach_safe_state(
     walk.step("pulser", "pulser off", lambda pulser: pulser.off())
     walk.step("bias_source", "bias at zero and off", lambda source: _end_bias(source, rule, clock))
     walk.step("supply", "rail off", lambda supply: supply.off())
-    is_discharged = _discharge(walk, rule, clock)
+    is_discharged = _discharge(walk, rule, clock, rule.highest_rail if bank is None else bank)
     if is_discharged:
         walk.step("multiplexer", "relays open", lambda multiplexer: multiplexer.open_all())
     elif "multiplexer" in roles:
@@ -148,14 +155,15 @@ def _end_bias(source: Any, rule: SafeRule, clock: Clock) -> None:
     source.off()
 
 
-def _discharge(walk: _Walk, rule: SafeRule, clock: Clock) -> bool:
-    """Wait for the bleeder; the supply's voltmeter sits on the bank. Without it, wait for the worst case."""
+def _discharge(walk: _Walk, rule: SafeRule, clock: Clock, bank: float) -> bool:
+    """Wait for the bleeder, from `bank` [V] or from what the supply's voltmeter shows, whichever is more."""
     if "supply" not in walk.roles or rule.bleed <= 0:
         return True
     voltage = _bank_voltage(walk)
-    seconds = discharge_time(rule.highest_rail if math.isnan(voltage) else voltage, rule.bleed)
+    charged = max(rule.highest_rail, bank) if math.isnan(voltage) else max(voltage, bank)
+    seconds = discharge_time(charged, rule.bleed)
     if seconds:
-        walk.say(f"bank at {voltage:.1f} V, discharged in {seconds:.0f} s")
+        walk.say(f"bank at {voltage:.1f} V, or {charged:.1f} V at most; discharged in {seconds:.0f} s")
         clock.sleep(seconds)
     for _ in range(_DISCHARGE_LOOKS):
         if math.isnan(voltage):
@@ -178,8 +186,10 @@ def _discharge(walk: _Walk, rule: SafeRule, clock: Clock) -> bool:
 def _bank_voltage(walk: _Walk) -> float:
     """Voltage of the bank [V], NaN where it cannot be read."""
     for _ in range(2):
-        try:
-            return abs(float(walk.roles["supply"].measure()[0]))
-        except Exception:  # as in `_Walk.step`
-            walk.reconnect("supply")
+        # Exception: as in `_Walk.step`.
+        with contextlib.suppress(Exception):
+            voltage = abs(float(walk.roles["supply"].measure()[0]))
+            if math.isfinite(voltage):
+                return voltage
+        walk.reconnect("supply")
     return math.nan

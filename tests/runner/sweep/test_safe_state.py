@@ -72,8 +72,8 @@ class FakeBench:
         self.log.append((role, name, *map(str, arguments)))
         return None
 
-    def walk(self) -> Any:
-        return reach_safe_state(self.roles, RULE, self.clock)
+    def walk(self, bank: float | None = 0.0) -> Any:
+        return reach_safe_state(self.roles, RULE, self.clock, bank=bank)
 
     def order(self) -> list[str]:
         return [f"{role}.{name}" for role, name, *_ in self.log]
@@ -152,6 +152,18 @@ def test_a_bank_whose_voltmeter_is_lost_gets_the_longest_time_it_could_need() ->
     assert bench.clock.time >= discharge_time(RULE.highest_rail, RULE.bleed)
     assert "multiplexer.open_all" in bench.order()
     assert not report.is_confirmed
+
+
+@pytest.mark.parametrize("reads", [0.2, math.inf, math.nan])
+def test_a_voltmeter_is_not_believed_when_it_says_that_the_bank_is_empty(reads: float) -> None:
+    bench = FakeBench(bank=12.0)
+    bench.voltage = lambda: reads  # type: ignore[method-assign]
+    bench.walk(bank=12.0)
+    assert bench.clock.time >= discharge_time(12.0, RULE.bleed)
+    bench = FakeBench(bank=12.0)
+    bench.voltage = lambda: reads  # type: ignore[method-assign]
+    bench.walk(bank=None)
+    assert bench.clock.time >= discharge_time(RULE.highest_rail, RULE.bleed)
 
 
 def test_even_a_fault_of_ours_in_one_step_does_not_stop_the_walk() -> None:
