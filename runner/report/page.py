@@ -1,7 +1,7 @@
 """The page: everything gathered, drawn, written into tables, and set into one template.
 
 `write_report` is the only function of this room that touches the disk, apart from saving pictures: it writes
-into the folder ``report/`` of the run, and replaces what an earlier report left there under the same names.
+into the folder ``report/`` of the run, and takes away the pictures that an earlier report left there.
 The page holds its pictures and its style; it asks the network for nothing. Nothing on it depends on the time
 at which it was made, so the same run gives the same page.
 """
@@ -21,15 +21,22 @@ from runner.record import Run, open_run
 from runner.report import look
 from runner.report.captures import draw_captures
 from runner.report.curves import draw_curves, draw_surface
-from runner.report.digits import NOTHING, duration, fixed
+from runner.report.digits import NOTHING, celsius, duration, fixed
 from runner.report.doubts import doubts
 from runner.report.extras import extra_tables, extra_texts
-from runner.report.facts import INDUCTANCE, METHOD_TITLES, Facts, MethodFacts, PartFacts, gather
+from runner.report.facts import INDUCTANCE, METHOD_TITLES, Facts, MethodFacts, PartFacts, gather, number
 from runner.report.knee import draw_knees, draw_overview, draw_resistance
 from runner.report.night import MOST_NUMBERS, Mark, draw_night, marks
 from runner.report.picture import Pasted, Picture, save
 from runner.report.provenance import calibration, instruments, versions
-from runner.report.tables import Table, budget_table, knee_tables, temperature_table, together_table
+from runner.report.tables import (
+    Table,
+    budget_table,
+    cross_check_table,
+    knee_tables,
+    temperature_table,
+    together_table,
+)
 from runner.report.words import (
     headline,
     headline_drop,
@@ -157,7 +164,7 @@ def _part(run: Run, facts: Facts, part: PartFacts, paste: Any) -> dict[str, Any]
         "resistance_tables": _resistance_tables(facts, part),
         "captures": paste(draw_captures(run, part, _knee_by_leg(run, part))),
         "extras": list(extra_tables(part.extras, facts.coverage)),
-        "cross_check": [str(row.get("text", "")) for row in part.extras.get("cross_check") or []],
+        "cross_check": cross_check_table(part),
         "doubts": doubts(run, part),
     }
 
@@ -223,9 +230,12 @@ def _troubles(run: Run, facts: Facts) -> Iterator[tuple[str, str]]:
     elif not facts.is_extracted:
         yield ("Not extracted yet.", "There are points but no result; 'kneemap extract' makes it.")
     for part in facts.parts:
-        for row in part.extras.get("cross_check") or []:
-            if row.get("agrees") is False:
-                yield (f"The two methods disagree about {part.label}.", str(row.get("text", "")))
+        against = [row for row in part.extras.get("cross_check") or [] if row.get("agrees") is False]
+        if against:
+            told = " ".join(
+                f"At {celsius(number(r.get('temperature_degC')), 0)}, {r.get('text', '')}" for r in against
+            )
+            yield f"The two methods disagree about {part.label}.", told
 
 
 def _run_in_time(run: Run) -> str:

@@ -190,6 +190,15 @@ def budget_table(method: MethodFacts, drop: float | None) -> Table | None:
     )
 
 
+def cross_check_table(part: PartFacts) -> Table | None:
+    """What comparing the two methods gave, a line a comparison; None when they were not compared."""
+    rows = tuple(
+        (fixed(number(row.get("temperature_degC")), 1), str(row.get("text", "")))
+        for row in part.extras.get("cross_check") or []
+    )
+    return Table("", ("Temperature (°C)", "Comparison"), rows) if rows else None
+
+
 def _largest_shares(budgets: Sequence[Mapping[str, float]], totals: Sequence[float]) -> dict[str, float]:
     """Each contribution over the whole, where it is largest."""
     shares: dict[str, float] = {}

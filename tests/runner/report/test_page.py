@@ -317,9 +317,9 @@ def test_methods_that_disagree_are_said_on_top(make_run):
         ]
 
     text = words(write_report(make_run(change=disagree, temperatures=(25.0,))))
-    assert text.index("The two methods disagree about DRUM-22-A. L_0 differs by 10 %.") < text.index(
-        "What was tested, and"
-    )
+    assert text.index(
+        "The two methods disagree about DRUM-22-A. At 25 °C, L_0 differs by 10 %."
+    ) < text.index("What was tested, and")
     assert "The two methods compared" in text
     assert "Agrees at 85 °C." in text
 

@@ -122,17 +122,14 @@ def test_a_budget_without_contributions_is_no_table(drop):
     ("extras", "title", "head", "row"),
     [
         (
-            {"core_view": [{"temperature_degC": 25.1, "drop": 0.3, "tesla": 0.3456, "low": 0.3446, "high": 0.3466,
-                            "relative_permeability": 60.123}]},
-            "Seen from the core",
-            ("Temperature (°C)", "Drop", "Flux density (mT)", "95 % interval (mT)", "Relative permeability"),
-            ("25.1", "30 %", "345.6", "344.6 to 346.6", "60.12"),
-        ),
-        (
-            {"derating": [{"temperature_degC": 125.0, "guard_band": 0.2, "ampere": 5.459}]},
-            "Derating: largest current advised",
-            ("Temperature (°C)", "Guard band", "Current (A)"),
-            ("125.0", "20.0 %", "5.459"),
+            {
+                "temperature_coefficient": [
+                    {"drop": 0.3, "fraction_per_kelvin": -0.0025, "low": -0.0028, "high": -0.0022}
+                ]
+            },
+            "Temperature coefficient of the saturation current",
+            ("Drop (%)", "Change (%/K)", "95 % interval (%/K)"),
+            ("30", "−0.250", "−0.280 to −0.220"),
         ),
         (
             {"a_new_study": {"shots": 12, "remembers": True, "note": "first shot lower", "ampere": None}},
@@ -143,15 +140,54 @@ def test_a_budget_without_contributions_is_no_table(drop):
         (
             {"change": [{"drop": 0.3, "fraction": 0.15, "low": 0.14, "high": 0.16}]},
             "Change",
-            ("Drop", "Fraction (%)", "95 % interval (%)"),
-            ("30 %", "15.0", "14.0 to 16.0"),
+            ("Drop (%)", "Fraction (%)", "95 % interval (%)"),
+            ("30", "15.0", "14.0 to 16.0"),
+        ),
+        (
+            {"left_out_error": {"fraction": 0.000901, "largest": 0.00216}},
+            "Check: each temperature foretold from the others",
+            ("Fraction (%)", "Largest (%)"),
+            ("0.090", "0.22"),
+        ),
+        (
+            {"shift": [{"temperature_degC": 25.0, "millennium_units": 2.0, "low": 1.9, "high": 2.1}]},
+            "Shift",
+            ("Temperature (°C)", "Millennium units", "95 % interval"),
+            ("25.0", "2.00", "1.90 to 2.10"),
+        ),
+        (
+            {"field": [{"ampere_per_metre": 2386.08, "relative_permeability": 61.91298}]},
+            "Field",
+            ("H (kA/m)", "µr"),
+            ("2.386", "61.91"),
         ),
     ],
-    ids=["core", "derating", "unknown", "fraction"],
-)  # fmt: skip
+    ids=["coefficient", "unknown", "fraction", "left out", "unknown unit", "field"],
+)
 def test_an_extra_becomes_a_table_by_its_keys(extras, title, head, row):
     (table,) = extra_tables(extras, 0.95)
     assert (table.title, table.head, table.rows[0]) == (title, head, row)
+
+
+def test_records_at_temperature_and_drop_are_laid_out_like_the_saturation_current():
+    records = [
+        {"temperature_degC": t, "drop": d, "ampere": 10 * d + t / 100, "guard_band": 0.2}
+        for d in (0.1, 0.3)
+        for t in (125.0, 25.0)
+    ]
+    (table,) = extra_tables({"derating": records[:-1]}, 0.95)
+    assert table.title == "Derating: largest current advised"
+    assert table.groups == (("", 1), ("10 % drop", 1), ("30 % drop", 1))
+    assert table.head == ("Temperature (°C)", "Current (A)", "Current (A)")
+    assert table.rows == (("25.0", "1.250", "–"), ("125.0", "2.250", "4.250"))
+    assert table.note == "Guard band: 20 %."
+
+
+def test_records_that_would_fall_on_each_other_stay_lines():
+    records = [{"temperature_degC": 25.0, "drop": 0.3, "ampere": 1.0 + k, "shot": k} for k in range(2)]
+    (table,) = extra_tables({"study": records}, 0.95)
+    assert len(table.rows) == 2
+    assert table.groups == ()
 
 
 @pytest.mark.parametrize("value", [[], [1, 2], "text", 3.0, None, [{}], [{"nested": {"a": 1}}]])
