@@ -64,7 +64,7 @@ def flag_lines(flags: Sequence[Mapping[str, Any]]) -> list[str]:
     points: dict[tuple[str, str], list[int]] = {}
     for flag in flags:
         points.setdefault((flag["flag"], flag["text"]), [])
-        if flag.get("point") is not None:
+        if flag.get("point", -1) not in (None, -1):  # a flag may belong to a leg and to no point of it
             points[flag["flag"], flag["text"]].append(int(flag["point"]))
     return [
         f"{name}: {text}" + (f" (points {_ranges(numbers)})" if numbers else "")

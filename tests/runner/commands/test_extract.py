@@ -12,6 +12,7 @@ from runner.commands.extract import flag_lines
             ["clipped: raise its range (points 3, 7–9)"],
         ),
         ([{"flag": "two_knees", "text": "two plateaus"}], ["two_knees: two plateaus"]),
+        ([{"point": -1, "flag": "two_knees", "text": "two plateaus"}], ["two_knees: two plateaus"]),
     ],
 )
 def test_points_with_the_same_flag_are_told_in_one_line(flags, lines):
