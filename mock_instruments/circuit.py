@@ -11,7 +11,7 @@ Everything here is in the frame of the pulse's own polarity: currents and voltag
 
 import math
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -164,7 +164,9 @@ def fire(
         time, current, bank_voltage, slope = _on(bank, switch, loop, voltage, cut, rising, initial_current)
     t, i, v, didt = (np.asarray(each) for each in (time, current, bank_voltage, slope))
     peak = float(i[-1])
-    falling = rising.curve.still(rising.offset_at(peak)) if rising.curve.memory else rising
+    falling = rising
+    if rising.curve.memory:
+        falling = replace(rising.curve.still(rising.offset_at(peak)), field=rising.field)
     rest = max(0.0, min(initial_current, peak))
     off_t, off_i, off_slope = _freewheel(loop, falling, peak, rest, start=float(t[-1]))
     supplied = np.clip((bank.supply_voltage - v) / bank.supply_resistance, 0.0, bank.supply_current)

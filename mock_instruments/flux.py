@@ -129,17 +129,19 @@ class Branch:
     """One way through the flux law at one temperature, for a current that moves in one direction.
 
     ``moving`` branches write the memory on the way (from ``start`` on, with ``offset`` before); others keep
-    it.
+    it. ``field`` [A] is what a second winding adds to the current in magnetising the core (its ampere-turns over the
+    turns of this one); `flux`, `slope` and `offset_at` take the current of this winding.
     """
 
     curve: "FluxCurve"
     offset: float = 0.0
     start: float = 0.0
     moving: bool = False
+    field: float = 0.0
 
     def flux(self, current: FloatArray) -> FloatArray:
         """Flux linkage [Wb], shape of ``current`` [A]; zero for a fresh part at zero current."""
-        i = np.asarray(current, dtype=float)
+        i = np.asarray(current, dtype=float) + self.field
         h, _ = self._offset(i)
         out = self.curve.floor * i
         for term in self.curve.terms:
@@ -148,7 +150,7 @@ class Branch:
 
     def slope(self, current: FloatArray) -> FloatArray:
         """Differential inductance dλ/di [H] along this branch, shape of ``current`` [A]."""
-        i = np.asarray(current, dtype=float)
+        i = np.asarray(current, dtype=float) + self.field
         h, growth = self._offset(i)
         core = np.zeros_like(i)
         for term in self.curve.terms:
@@ -157,6 +159,9 @@ class Branch:
 
     def plain_slope(self) -> Callable[[float], float]:
         """`slope` for plain floats."""
+        if self.field:
+            there, field = replace(self, field=0.0).plain_slope(), self.field
+            return lambda i: there(i + field)
         floor = self.curve.floor
         slopes = [term.plain_slope() for term in self.curve.terms]
         memory, offset = self.curve.memory, self.offset
@@ -170,7 +175,7 @@ class Branch:
 
     def offset_at(self, current: float) -> float:
         """What the core remembers [A] once the current has travelled to ``current`` [A] on this branch."""
-        return float(self._offset(np.asarray(current, dtype=float))[0])
+        return float(self._offset(np.asarray(current, dtype=float) + self.field)[0])
 
     def _offset(self, i: FloatArray) -> tuple[FloatArray, FloatArray]:
         memory = self.curve.memory

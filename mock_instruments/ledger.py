@@ -12,6 +12,7 @@ class Ledger:
 
     current: float = 0.0
     part_current: dict[int, float] = field(default_factory=dict)
+    offset_current: dict[int, float] = field(default_factory=dict)
     bank_voltage: float = 0.0
     bank_energy: float = 0.0
     pulse_energy: float = 0.0
@@ -32,6 +33,10 @@ class Ledger:
         if ampere > self.part_current.get(channel, -1.0):
             self.part_current[channel] = ampere
             self.current = max(self.current, ampere)
+
+    def saw_offset(self, channel: int, ampere: float) -> None:
+        """A current in the offset winding of a part, which is not a current through the part."""
+        self.offset_current[channel] = max(self.offset_current.get(channel, 0.0), abs(ampere))
 
     def saw_bank(self, voltage: float, capacitance: float) -> None:
         if voltage > self.bank_voltage:
@@ -69,6 +74,7 @@ class Ledger:
                 "body_degC": {str(k): v for k, v in sorted(self.body_degC.items())},
                 "chamber_degC": list(self.chamber_degC),
             },
+            "offset_current": {str(k): v for k, v in sorted(self.offset_current.items())},
             "pulses": self.pulses,
             "relay_moves": self.relay_moves,
             "relay_moves_under_current": self.relay_moves_under_current,

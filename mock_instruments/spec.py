@@ -69,7 +69,10 @@ LAW_DEFAULTS: dict[str, dict[str, float]] = {
 
 @dataclass(frozen=True, slots=True)
 class PartSpec:
-    """One simulated part: its law, its winding at 20 degC [ohm] and how it warms."""
+    """One simulated part: its law, its winding at 20 degC [ohm] and how it warms.
+
+    ``offset_turns``: of a second winding for an offset field, beside the ``turns`` of the part's own; 0: none.
+    """
 
     law: FluxLaw
     label: str = "part"
@@ -77,6 +80,8 @@ class PartSpec:
     time_constants: tuple[float, float] = DEFAULT_TIME_CONSTANTS
     weight: float = 0.6
     thermal_resistance: float = 8.0  # K/W in moving air
+    turns: float = 12.0
+    offset_turns: float = 0.0
 
 
 @dataclass(frozen=True, slots=True)

@@ -9,7 +9,7 @@ each message.
 import math
 import threading
 from collections.abc import Callable, Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -23,7 +23,9 @@ LONGEST_THERMAL_STEP = 10.0  # s; chords of the overshoot over this are good to 
 SUPPLY_OUTPUT_RESISTANCE = 0.05  # ohm, leads included
 CHARGED = 1.0  # V: a bank above this counts as charged when a relay moves
 FLOWING = 1e-3  # A: more than this counts as current when a relay moves
-PATHS = ("pulse", "bias", "resistance")
+PATHS = ("pulse", "bias", "resistance", "offset")
+# The offset winding is not the part's own: its path may be closed beside the pulse path, and beside no other.
+TOGETHER = frozenset({"pulse", "offset"})
 
 
 @dataclass(slots=True)
@@ -48,6 +50,27 @@ class Part:
     def winding_resistance(self) -> float:
         whole = copper_resistance(self.spec.resistance, self.temperature_degC)
         return 0.2 * whole if self.fault == "short" else whole
+
+
+@dataclass(frozen=True, slots=True)
+class Fed:
+    """What the bias source drives: a winding of ``part`` with ``ratio`` of the turns of the part's own.
+
+    An offset winding is of the same wire, so its resistance goes with its turns. Its source holds the current whatever a
+    pulse induces (a choke in series, as on real benches).
+    """
+
+    part: Part
+    is_offset: bool
+    ratio: float
+
+    @property
+    def resistance(self) -> float:
+        return self.ratio * self.part.winding_resistance
+
+    @property
+    def is_open(self) -> bool:
+        return self.part.fault == "open" and not self.is_offset
 
 
 @dataclass(frozen=True, slots=True)
@@ -129,14 +152,14 @@ class World:
                 supply=supply,
             )
             self.ledger.saw_bank(self.bank_voltage, self.spec.bank_capacitance)
-        biased = self.connected("bias") if self.bias_current or self.bias_on else None
+        biased = self._fed() if self.bias_current or self.bias_on else None
         left = seconds
         while left > 0.0:
             step = self._thermal_step(left, biased)
             left = left - step if left - step > 1e-12 else 0.0
         return self.now
 
-    def _thermal_step(self, left: float, biased: Part | None) -> float:
+    def _thermal_step(self, left: float, biased: "Fed | None") -> float:
         before = self.bias_current
         goal = self._bias_goal(biased)
         # Break where the ramp of the bias ends: until then the power is a parabola, afterwards it is
@@ -154,7 +177,7 @@ class World:
         air_after = self.chamber.air_degC(self.now)
         self.ledger.saw_air(air_after)
         for part in self.parts.values():
-            power = mean_square * part.winding_resistance if part is biased else 0.0
+            power = mean_square * biased.resistance if biased and part is biased.part else 0.0
             part.body.step(step, air_before, air_after, power)
             self.ledger.saw_body(part.channel, part.temperature_degC)
         return step
@@ -173,17 +196,17 @@ class World:
         """Target of the bias source; the current slews there. Switching off interrupts it at once."""
         self.bias_on, self.bias_target, self.bias_voltage_limit = on, current, voltage_limit
         if not on:
-            self._move_bias(0.0, self.connected("bias"))
+            self._move_bias(0.0, self._fed())
 
     @property
     def bias_voltage(self) -> float:
         """Voltage the bias source sees across the part, sensed [V]; its limit when nothing carries the current."""
-        part = self.connected("bias")
+        fed = self._fed()
         if not self.bias_on:
             return 0.0
-        if part is None or part.fault == "open":
+        if fed is None or fed.is_open:
             return self.bias_voltage_limit if self.bias_target else 0.0
-        return self.bias_current * part.winding_resistance
+        return self.bias_current * fed.resistance
 
     def set_chamber(self, *, on: bool, setpoint_degC: float) -> None:
         """The chamber brings its own sensor to the set-point, so the air ends up off by the sensor's offset."""
@@ -200,14 +223,14 @@ class World:
         self.ledger.relay_moves += 1
         self.ledger.relay_moves_under_current += abs(self.bias_current) > FLOWING
         self.ledger.relay_moves_on_charged_bank += self.bank_voltage > CHARGED
-        carrying = self.connected("bias")
+        carrying = self._fed()
         self.closed = wanted
         if self.spec.relays.present:
-            paths = sum(number in wanted for number in self.spec.relays.paths.values())
+            paths = {name for name, number in self.spec.relays.paths.items() if number in wanted}
             parts = sum(number in wanted for number in self.spec.relays.parts.values())
-            self.ledger.paths_joined += paths > 1
+            self.ledger.paths_joined += len(paths) > 1 and paths != TOGETHER
             self.ledger.parts_joined += parts > 1
-        if self.connected("bias") is not carrying:
+        if self._fed() != carrying:
             self._move_bias(0.0, carrying)
 
     def connected(self, path: str) -> Part | None:
@@ -281,6 +304,10 @@ class World:
     def _shoot(self, part: Part, width: float, polarity: int, trip_current: float) -> Shot:
         curve = part.law.at(part.temperature_degC)
         standing = polarity * self.bias_current if self.connected("bias") is part else 0.0
+        fed = self._fed()
+        field = (
+            polarity * fed.ratio * self.bias_current if fed and fed.is_offset and fed.part is part else 0.0
+        )
         shot = fire(
             self._bank(),
             Switch(self.spec.switch_resistance),
@@ -289,26 +316,38 @@ class World:
             width=width,
             initial_current=standing,
             trip_current=trip_current,
-            rising=curve.growing(polarity * part.offset, max(0.0, standing)),
+            rising=replace(curve.growing(polarity * part.offset, max(0.0, standing, field)), field=field),
         )
         part.offset = polarity * shot.falling.offset
         return shot
 
-    def _bias_goal(self, part: Part | None) -> float:
-        if not self.bias_on or part is None or part.fault == "open":
+    def _fed(self) -> "Fed | None":
+        """What the bias source drives: the part's own winding on the bias path, or its offset winding."""
+        part = self.connected("bias")
+        if part is not None:
+            return Fed(part, False, 1.0)
+        part = self.connected("offset") if self.spec.relays.present else None
+        if part is None or not part.spec.offset_turns:
+            return None
+        return Fed(part, True, part.spec.offset_turns / part.spec.turns)
+
+    def _bias_goal(self, fed: "Fed | None") -> float:
+        if not self.bias_on or fed is None or fed.is_open:
             return 0.0
-        most = self.bias_voltage_limit / part.winding_resistance
+        most = self.bias_voltage_limit / fed.resistance
         return max(-most, min(most, self.bias_target))
 
-    def _move_bias(self, current: float, part: Part | None) -> None:
-        if part is not None and abs(current) > abs(self.bias_current) and part.law.memory:
+    def _move_bias(self, current: float, fed: "Fed | None") -> None:
+        part = fed.part if fed else None
+        if fed and part is not None and abs(current) > abs(self.bias_current) and part.law.memory:
             sign = math.copysign(1.0, current)
-            start = max(0.0, sign * self.bias_current)
+            start = max(0.0, sign * self.bias_current * fed.ratio)
             growing = part.law.at(part.temperature_degC).growing(sign * part.offset, start)
-            part.offset = sign * growing.offset_at(abs(current))
+            part.offset = sign * growing.offset_at(abs(current) * fed.ratio)
         self.bias_current = current
-        if part is not None and current:
-            self.ledger.saw_current(part.channel, current)
+        if fed and current:
+            saw = self.ledger.saw_offset if fed.is_offset else self.ledger.saw_current
+            saw(fed.part.channel, current)
 
     def _used(self, path: str) -> Part | None:
         """The part that ``path`` is about to use, unless it is open; whoever plans part faults is told first."""

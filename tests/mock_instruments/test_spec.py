@@ -35,7 +35,7 @@ def test_an_empty_mapping_is_a_bench_with_a_gapped_choke():
         ({"sede": 1}, "'sede'"),
         ({"spelling": "weird"}, "'weird'"),
         ({"parts": {"1": {"law": "glass"}}}, "'glass'"),
-        ({"parts": {"1": {"law": "gapped", "turns": 5}}}, "'turns'"),
+        ({"parts": {"1": {"law": "gapped", "colour": 5}}}, "'colour'"),
         ({"departures": {"shunt": 1}}, "'shunt'"),
         ({"departures": {"digitizer": {"bit": 8}}}, "'bit'"),
         ({"departures": {"digitizer": {"bits": 24}}}, "24"),

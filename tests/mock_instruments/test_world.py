@@ -216,3 +216,78 @@ def test_the_default_noise_and_offsets_are_small_enough_to_extract_from(mapping)
     grid = np.linspace(linkage[near][0], linkage[near][-1], 4000)
     at = grid[np.argmin(np.abs(cubic.deriv()(grid) - slope / 0.7))]
     assert float(cubic(at)) == pytest.approx(knee, rel=1e-2)
+
+
+def with_offset_winding(mapping, **part):
+    """Part 1 with 12 turns and an offset winding of 6, pulse path and offset path closed, bank at 12 V."""
+    mapping["parts"]["1"] |= {"turns": 12.0, "offset_turns": 6.0, **part}
+    mapping["bench"]["multiplexer"] = {
+        "parts": {1: 101, 2: 102},
+        "paths": {"pulse": 201, "bias": 202, "resistance": 203, "offset": 204},
+    }
+    world = World(WorldSpec.from_mapping(mapping))
+    world.move_relays((101, 201, 204))
+    world.set_supply(on=True, voltage=12.0, limit=1.0)
+    world.advance(2.0)
+    return world
+
+
+def test_an_offset_field_adds_its_ampere_turns_over_the_turns_of_the_part(mapping):
+    """6 turns with 8 A are 4 A of a winding of 12: a pulse goes on along the flux law from there, or away from it."""
+    world = with_offset_winding(mapping)
+    curve = world.parts[1].law.at(world.parts[1].temperature_degC)
+    plain = world.fire(12e-6).shot.peak
+    world.set_bias(on=True, current=8.0, voltage_limit=10.0)
+    world.advance(5.0)
+    with_it, against_it = world.fire(12e-6), world.fire(12e-6, polarity=-1)
+    assert with_it.shot.peak > plain > against_it.shot.peak
+    law, field = curve.still(), 6.0 / 12.0 * world.bias_current
+    assert field == pytest.approx(4.0, rel=1e-3)
+    for pulse, start in ((with_it, field), (against_it, -field)):
+        shot = pulse.shot
+        risen = float(law.flux(np.asarray(start + shot.peak)) - law.flux(np.asarray(start)))
+        t = np.linspace(0.0, 12e-6, 6001)
+        drive = shot.part_voltage(t) - shot.loop.winding * shot.motion(t)[0]
+        assert float(np.trapezoid(drive[:-1], t[:-1])) == pytest.approx(
+            risen, rel=1e-3
+        )  # the last sample is off
+
+
+def test_the_offset_winding_is_not_the_path_of_the_part(mapping):
+    world = with_offset_winding(mapping)
+    world.set_bias(on=True, current=8.0, voltage_limit=10.0)
+    world.advance(5.0)
+    ledger = world.ledger.as_mapping()
+    assert ledger["offset_current"] == {"1": pytest.approx(8.0)}
+    assert ledger["largest"]["part_current"]["1"] == 0.0
+    assert ledger["paths_joined"] == 0
+    assert ledger["relay_moves_under_current"] == 0
+    world.move_relays(
+        (101, 202, 204)
+    )  # bias source on both windings, moved under current and on a charged bank
+    ledger = world.ledger.as_mapping()
+    assert (
+        ledger["paths_joined"],
+        ledger["relay_moves_under_current"],
+        ledger["relay_moves_on_charged_bank"],
+    ) == (1, 1, 1)
+
+
+def test_an_offset_field_is_remembered_like_a_current_of_the_part(mapping):
+    world = with_offset_winding(mapping, law="remanent", memory=0.15)
+    part = world.parts[1]
+    world.set_bias(on=True, current=8.0, voltage_limit=10.0)
+    world.advance(5.0)
+    written = part.law.at(part.temperature_degC).growing(0.0).offset_at(0.5 * world.bias_current)
+    assert part.offset == pytest.approx(written, rel=1e-3)  # the winding warms the part meanwhile
+    assert part.offset > 0
+    world.set_bias(on=False, current=0.0, voltage_limit=10.0)
+    assert part.offset == pytest.approx(written, rel=1e-3)  # the winding warms the part meanwhile
+
+
+def test_a_part_without_an_offset_winding_is_open_to_the_bias_source(mapping):
+    world = with_offset_winding(mapping, offset_turns=0.0)
+    world.set_bias(on=True, current=8.0, voltage_limit=10.0)
+    world.advance(5.0)
+    assert world.bias_current == 0.0
+    assert world.bias_voltage == 10.0
