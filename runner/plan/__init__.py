@@ -7,6 +7,7 @@ one `InputError`, each located.
 
 from runner.plan.bench_file import Bench
 from runner.plan.captures_file import CapturesFile
+from runner.plan.demagnetise import demagnetising_widths
 from runner.plan.forecast import Forecast, LimitForecast, forecast
 from runner.plan.load import (
     LoadedBench,
@@ -37,6 +38,7 @@ __all__ = [
     "Plan",
     "Point",
     "Programme",
+    "demagnetising_widths",
     "expand",
     "forecast",
     "load_bench",

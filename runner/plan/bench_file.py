@@ -45,7 +45,6 @@ ROLES = (
     "ohmmeter",
     "multiplexer",
 )
-PATHS = ("pulse", "bias", "resistance")
 
 Relay = Annotated[Whole, Field(ge=0, le=99_999)]
 Temperature = Annotated[float, Quantity(TEMPERATURE, above=-273.15)]
@@ -210,6 +209,12 @@ class MultiplexerPaths(FileModel):
     pulse: Relay | None = None
     bias: Relay | None = None
     resistance: Relay | None = None
+    offset: Annotated[
+        Relay | None,
+        Field(
+            description="Bias source to an offset winding beside the part's own; it may be closed with the pulse path."
+        ),
+    ] = None
 
 
 class Multiplexer(Instrument):

@@ -3,7 +3,7 @@
 from collections.abc import Iterator
 
 from runner.plan.finding import Check, Finding, in_plan
-from runner.plan.plan_file import Bias, Extract, Limits, Part, Pulse, Temperatures
+from runner.plan.plan_file import Bias, Extract, Limits, Part, Pulse, Remanence, Temperatures
 from runner.plan.quantity import shown
 
 NEAR_ROOM = 10.0  # K: a leg this near 25 degC can be brought to it
@@ -155,6 +155,34 @@ def room_leg_is_there(extract: Extract, temperatures: Temperatures) -> Iterator[
         yield in_plan("extract", "reference", what=what)
 
 
+def remanence_has_its_pulses(remanence: Remanence | None, pulse: Pulse | None) -> Iterator[Finding]:
+    if remanence and pulse is None:
+        what = "the study takes rail and rest of its pulses from 'pulse', which is missing; add that section"
+        yield in_plan("remanence", what=what)
+
+
+def remanence_has_time(remanence: Remanence | None, pulse: Pulse | None) -> Iterator[Finding]:
+    if remanence and pulse and remanence.width >= pulse.rest:
+        what = (
+            f"a pulse of {shown(remanence.width, 's')} leaves no rest of {shown(pulse.rest, 's')}; shorten it"
+        )
+        yield in_plan("remanence", "width", what=what)
+
+
+def offset_keeps_the_limit(remanence: Remanence | None, limits: Limits) -> Iterator[Finding]:
+    # The bias source carries limits.current as its protection, whichever winding it feeds.
+    if remanence is None or remanence.winding is None:
+        return
+    for index, ampere_turns in enumerate(remanence.offset):
+        current = abs(remanence.offset_current(ampere_turns))
+        if current > limits.current:
+            what = (
+                f"{ampere_turns:g} A turns are {current:.3g} A in {remanence.winding} turns, above 'limits.current'"
+                f" ({limits.current:g} A), which holds for the offset winding too; ask for less"
+            )
+            yield in_plan("remanence", "offset", index, what=what)
+
+
 PLAN_CHECKS: tuple[Check, ...] = (
     temperatures_stand_once,
     temperatures_keep_the_limit,
@@ -168,6 +196,9 @@ PLAN_CHECKS: tuple[Check, ...] = (
     repeats_have_time,
     bias_keeps_the_limit,
     bias_keeps_the_parts_limits,
+    remanence_has_its_pulses,
+    remanence_has_time,
+    offset_keeps_the_limit,
     part_limits_are_lower,
     parts_differ,
     room_leg_is_there,

@@ -136,6 +136,52 @@ def fixture_can_reverse(remanence: Remanence | None, pulser: Pulser | None) -> I
         yield in_plan("remanence", "polarities", what=what)
 
 
+def pulser_reaches_the_test_pulse(
+    remanence: Remanence | None, pulser: Pulser | None, digitizer: Digitizer | None
+) -> Iterator[Finding]:
+    if remanence is None:
+        return
+    if pulser and remanence.width > pulser.maximum.width:
+        most = shown(pulser.maximum.width, "s")
+        what = f"a pulse of {shown(remanence.width, 's')} is longer than the pulser's maximum ({most}); shorten it"
+        yield in_plan("remanence", "width", what=what)
+    if digitizer:
+        window = digitizer.samples * (1 - digitizer.pretrigger) * digitizer.intervals[-1]
+        if remanence.width > window:
+            what = (
+                f"a pulse of {shown(remanence.width, 's')} does not fit into the digitizer's longest capture"
+                f" ({shown(window, 's')} after the trigger); shorten it"
+            )
+            yield in_plan("remanence", "width", what=what)
+
+
+def offset_can_be_fed(
+    remanence: Remanence | None, bias_source: BiasSource | None, multiplexer: Multiplexer | None
+) -> Iterator[Finding]:
+    if remanence is None or not any(remanence.offset):
+        return
+    if bias_source is None:
+        what = "the bench has no 'bias_source' to feed the offset winding; add it to the bench or take 'offset' out"
+        yield in_plan("remanence", "offset", what=what)
+    elif multiplexer is None or multiplexer.paths.offset is None or multiplexer.paths.pulse is None:
+        what = (
+            "the bench's multiplexer does not connect an offset winding; write the relays of both paths,"
+            " 'paths: {pulse: ..., offset: ...}', or take 'offset' out"
+        )
+        yield in_plan("remanence", "offset", what=what)
+    if bias_source is None or remanence.winding is None:
+        return
+    most = bias_source.maximum.current
+    for index, ampere_turns in enumerate(remanence.offset):
+        current = abs(remanence.offset_current(ampere_turns))
+        if current > most:
+            what = (
+                f"{ampere_turns:g} A turns are {current:.3g} A in {remanence.winding} turns, above the bias source's"
+                f" maximum ({most:g} A); ask for less, or wind more turns"
+            )
+            yield in_plan("remanence", "offset", index, what=what)
+
+
 JOINT_CHECKS: tuple[Check, ...] = (
     roles_are_there,
     pulse_fixture_is_described,
@@ -148,4 +194,6 @@ JOINT_CHECKS: tuple[Check, ...] = (
     source_reaches_the_bias,
     parts_have_relays,
     fixture_can_reverse,
+    pulser_reaches_the_test_pulse,
+    offset_can_be_fed,
 )

@@ -119,6 +119,25 @@ def width_forecasts(plan: Plan, fixture: Fixture, part: Part) -> tuple[WidthFore
     return tuple(found)
 
 
+def study_pulse(plan: Plan, fixture: Fixture, part: Part) -> list[WidthForecast]:
+    """The pulse of the remanence study on one part; empty without one."""
+    if plan.pulse is None or plan.remanence is None:
+        return []
+    resistance = part.resistance_at(min(plan.temperatures.at_degC)) + loop_resistance(fixture)
+    drive = (plan.pulse.rail, resistance, part.inductance, plan.remanence.width)
+    return [
+        WidthForecast(
+            part=part.label,
+            width=plan.remanence.width,
+            linear_current=charging_current(*drive),
+            saturated_current=saturated_current(*drive, knee=part.rated_current),
+            energy=charging_energy(*drive),
+            is_fired=True,
+            is_likely=True,
+        )
+    ]
+
+
 def loop_resistance(fixture: Fixture) -> float:
     """Of the pulse loop without the part [ohm]."""
     bank = fixture.bank.resistance if fixture.bank else 0.0

@@ -13,6 +13,7 @@ from itertools import pairwise
 
 from runner.plan.bench_file import Bench
 from runner.plan.currents import width_forecasts
+from runner.plan.demagnetise import demagnetising_widths
 from runner.plan.grids import CurrentSeek
 from runner.plan.plan_file import Part, Plan, Pulse, Soak
 from runner.plan.points import ROOM_DEGC, expand
@@ -22,6 +23,7 @@ DOUBT = 0.8  # of the band, inside which the true rest lies by the time the read
 LEARNING = 550.0  # s from the set-point to the verdict, without `hold`, where the chamber moved at all
 STANDING = 0.5  # K; a chamber that is nearer to its set-point does not move
 DISCHARGED = 0.5  # V, below which relays may move
+STUDY_SCOUTS = 20  # pulses before each remanence series that climb to its width
 SCOUTS = 6  # pulses of the climb that come before or between the widths asked for
 
 # What one message costs [s]: a setting with its confirmation, and each kind of reading. As on the mock bench; real
@@ -129,7 +131,27 @@ def _soak_time(soak: Soak, lags: list[_Lag], learning: float) -> float:
 
 def point_time(plan: Plan, bench: Bench) -> float:
     """All points of all parts at one leg [s]."""
-    return sum(_pulse_time(plan, bench, part) + _bias_time(plan, bench) for part in plan.parts)
+    study = _remanence_time(plan, bench)
+    return sum(_pulse_time(plan, bench, part) + study + _bias_time(plan, bench) for part in plan.parts)
+
+
+def _remanence_time(plan: Plan, bench: Bench) -> float:
+    """All series of one part at one leg [s]."""
+    study, pulse = plan.remanence, plan.pulse
+    if study is None or pulse is None:
+        return 0.0
+    one = pulse.rest + 3 * MESSAGE
+    train = len(demagnetising_widths(study.width)) if study.demagnetise != "none" else 0
+    readings = 12 * MESSAGE + THERMOMETER_READING + CHAMBER_READING
+    total = _path_time(bench) + _charge_time(pulse, bench)
+    for offset in study.offsets:
+        ramps = (
+            4 * abs(study.offset_current(offset)) / bench.bias_source.ramp
+            if offset and bench.bias_source
+            else 0.0
+        )
+        total += len(study.signs) * (STUDY_SCOUTS * one + (train + study.shots) * one + readings + ramps)
+    return total
 
 
 def _pulse_time(plan: Plan, bench: Bench, part: Part) -> float:

@@ -5,7 +5,7 @@ from dataclasses import asdict, dataclass
 from typing import Any
 
 from runner.plan.bench_file import Bench
-from runner.plan.currents import SATURATED_SHARE, WidthForecast, width_forecasts
+from runner.plan.currents import SATURATED_SHARE, WidthForecast, study_pulse, width_forecasts
 from runner.plan.durations import Times, forecast_times
 from runner.plan.plan_file import Part, Plan
 from runner.plan.points import expand
@@ -98,6 +98,7 @@ def forecast(plan: Plan, bench: Bench) -> Forecast:
     widths = tuple(row for part in plan.parts for row in width_forecasts(plan, bench.fixture, part))
     pulses = sum(point.method == "pulse" for point in programme.points)
     captures = pulses * plan.pulse.repeats if plan.pulse else 0
+    captures += _series(plan) * plan.remanence.shots if plan.remanence else 0
     bank = bench.fixture.bank
     rail = plan.pulse.rail if plan.pulse else 0.0
     loads = [_Load.of(plan, bench, part) for part in plan.parts]
@@ -134,6 +135,7 @@ class _Load:
     @staticmethod
     def of(plan: Plan, bench: Bench, part: Part) -> "_Load":
         fired = [row for row in width_forecasts(plan, bench.fixture, part) if row.is_fired]
+        fired += study_pulse(plan, bench.fixture, part)
         pulse = max((row.linear_current for row in fired), default=0.0)
         bias = plan.bias.largest if plan.bias else 0.0
         energy = max((row.energy for row in fired), default=0.0)
@@ -196,6 +198,8 @@ def _disk_bytes(
     samples = bench.digitizer.samples if bench.digitizer else 0
     pulses = legs * sum(row.is_likely for row in widths)
     captures = pulses * plan.pulse.repeats if plan.pulse else 0
+    captures += _series(plan) * plan.remanence.shots if plan.remanence else 0
+    pulses += _series(plan)
     biases = sum(point.method == "bias" for point in expand(plan).points)
     codes = captures * samples * 2 * CODE_BYTES
     overhead = captures * CAPTURE_OVERHEAD + (pulses + biases) * POINT_OVERHEAD + RUN_OVERHEAD
@@ -207,5 +211,7 @@ def _notes(plan: Plan) -> Iterator[str]:
         yield "a search may end before its budget is used; points and times are the most it may take"
     if plan.pulse and plan.pulse.stop_at:
         yield "the climb may stop before the longest width, at each temperature by itself"
-    if plan.remanence:
-        yield "the remanence study is not part of these figures"
+
+
+def _series(plan: Plan) -> int:
+    return sum(point.method == "remanence" for point in expand(plan).points)

@@ -4,6 +4,7 @@ Keys are spelled as users write them (aliases); attributes carry the unit where 
 is checked here, what values mean to each other and to the bench in `checks.py`.
 """
 
+import math
 from itertools import pairwise
 from typing import Annotated, Any, Literal, Self
 
@@ -243,13 +244,16 @@ class Extract(FileModel):
 class Remanence(FileModel):
     """A study of its own: what the part remembers, and how an offset field moves its knee.
 
+    Its pulses take rail and rest from `pulse`. Every polarity is measured without an offset field and with each offset.
+
     Attributes:
         width: of the test pulse, long enough to reach the knee [s].
         shots: recorded after each preparation, the first of them on the prepared state.
         demagnetise: how the state is prepared before first shots: by pulses of alternating polarity and falling width, or
-            not at all (as the conditioning left it).
+            not at all (as the pulses before left it: with both polarities, those of the other one).
         polarities: `forward`, or `both` where the fixture can reverse.
-        offset: ampere-turns of a bias winding or offset field, applied one after the other [A].
+        offset: ampere-turns of an offset winding beside the part's own, applied one after the other [A].
+        winding: turns of that winding; the bias source feeds it.
     """
 
     width: Width
@@ -257,6 +261,9 @@ class Remanence(FileModel):
     demagnetise: Literal["alternating pulses", "none"] = "none"
     polarities: Literal["forward", "both"] = "forward"
     offset: tuple[Annotated[float, Quantity(AMPERE_TURNS)], ...] = ()
+    winding: Annotated[Whole, Field(ge=1, le=100_000, description="Turns of the offset winding.")] | None = (
+        None
+    )
 
     @model_validator(mode="after")
     def _can_alternate(self) -> Self:
@@ -265,6 +272,26 @@ class Remanence(FileModel):
                 "alternating pulses need both polarities; write 'polarities: both' or 'demagnetise: none'"
             )
         return self
+
+    @model_validator(mode="after")
+    def _knows_its_winding(self) -> Self:
+        if any(self.offset) and self.winding is None:
+            raise fault("'offset' is in ampere-turns; add 'winding: 10', the turns of the offset winding")
+        return self
+
+    @property
+    def signs(self) -> tuple[Literal[1, -1], ...]:
+        """The polarities as signs of the current."""
+        return (1, -1) if self.polarities == "both" else (1,)
+
+    @property
+    def offsets(self) -> tuple[float, ...]:
+        """Ampere-turns in the order in which they are applied, none of them first [A]."""
+        return (0.0, *dict.fromkeys(offset for offset in self.offset if offset))
+
+    def offset_current(self, ampere_turns: float) -> float:
+        """Current of the offset winding [A]; NaN where the study has none."""
+        return math.nan if self.winding is None else ampere_turns / self.winding
 
 
 class Plan(FileModel):

@@ -1,4 +1,5 @@
-"""The points of a plan in the order in which they are measured: temperature outermost, then part, then pulse, then bias.
+"""The points of a plan in the order in which they are measured: temperature outermost, then part, then pulse, then
+remanence, then bias.
 
 Widths and currents climb (and bias currents come back down when the plan says so). A sought knee has as many points as
 its budget; where they lie is decided while the run goes on.
@@ -8,7 +9,7 @@ import math
 from dataclasses import dataclass
 from typing import Literal
 
-from runner.plan.plan_file import Bias, Plan, Pulse
+from runner.plan.plan_file import Bias, Plan, Pulse, Remanence
 
 ROOM_DEGC = 23.0  # where a chamber is taken to begin the night
 
@@ -23,25 +24,28 @@ class Leg:
 
 @dataclass(frozen=True, slots=True)
 class Point:
-    """One pulse width, or one bias current, of one part in one leg.
+    """One pulse width, one remanence series, or one bias current, of one part in one leg.
 
     Attributes:
         plan_index: place in the whole run, from 0.
         leg, part: indices into the legs and into the plan's parts.
         width: of the pulse [s]; NaN where it does not apply or is sought.
-        bias: current [A]; NaN where it does not apply or is sought.
+        bias: current [A], of a remanence series that of its offset winding; NaN where it does not apply or is sought.
         sought: the value is decided while the run goes on.
-        direction: of the bias current, +1 climbing, -1 coming down; 0 for pulses and sought points.
+        direction: of the bias current, +1 climbing, -1 coming down; 0 for pulses and sought points. Of a remanence series
+            the polarity of its pulses.
+        ampere_turns: of the offset field of a remanence series [A], 0 for all others.
     """
 
     plan_index: int
     leg: int
     part: int
-    method: Literal["pulse", "bias"]
+    method: Literal["pulse", "remanence", "bias"]
     width: float
     bias: float
     sought: bool
     direction: Literal[-1, 0, 1]
+    ampere_turns: float = 0.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -58,8 +62,8 @@ def expand(plan: Plan) -> Programme:
     points: list[Point] = []
     for leg in legs:
         for part in range(len(plan.parts)):
-            for method, width, bias, sought, direction in (*_pulses(plan.pulse), *_biases(plan.bias)):
-                points.append(Point(len(points), leg.index, part, method, width, bias, sought, direction))
+            for step in (*_pulses(plan.pulse), *_series(plan.remanence), *_biases(plan.bias)):
+                points.append(Point(len(points), leg.index, part, *step))
     return Programme(legs, tuple(points))
 
 
@@ -74,24 +78,34 @@ def visited(plan: Plan) -> tuple[float, ...]:
     return climbing if cold_first else climbing[::-1]
 
 
-_Step = tuple[Literal["pulse", "bias"], float, float, bool, Literal[-1, 0, 1]]
+_Step = tuple[Literal["pulse", "remanence", "bias"], float, float, bool, Literal[-1, 0, 1], float]
 
 
 def _pulses(pulse: Pulse | None) -> list[_Step]:
     if pulse is None:
         return []
     if isinstance(pulse.width, tuple):
-        return [("pulse", width, math.nan, False, 0) for width in pulse.width]
-    return [("pulse", math.nan, math.nan, True, 0)] * pulse.width.budget
+        return [("pulse", width, math.nan, False, 0, 0.0) for width in pulse.width]
+    return [("pulse", math.nan, math.nan, True, 0, 0.0)] * pulse.width.budget
+
+
+def _series(study: Remanence | None) -> list[_Step]:
+    if study is None:
+        return []
+    return [
+        ("remanence", study.width, study.offset_current(offset), False, sign, offset)
+        for offset in study.offsets
+        for sign in study.signs
+    ]
 
 
 def _biases(bias: Bias | None) -> list[_Step]:
     if bias is None:
         return []
     if not isinstance(bias.current, tuple):
-        return [("bias", math.nan, math.nan, True, 0)] * bias.current.budget
+        return [("bias", math.nan, math.nan, True, 0, 0.0)] * bias.current.budget
     top = bias.current.index(max(bias.current))
     return [
-        ("bias", math.nan, current, False, 1 if index <= top else -1)
+        ("bias", math.nan, current, False, 1 if index <= top else -1, 0.0)
         for index, current in enumerate(bias.current)
     ]

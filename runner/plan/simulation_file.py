@@ -68,6 +68,8 @@ class SimulatedPart(FileModel):
     thermal_resistance: Annotated[float | None, Quantity(THERMAL_RESISTANCE, least=0, help="To the air.")] = (
         None
     )
+    turns: Annotated[Whole, Field(ge=1)] | None = None
+    offset_turns: Annotated[Whole, Field(ge=0, description="Of an offset winding; 0 for none.")] | None = None
 
 
 class DigitizerDepartures(FileModel):

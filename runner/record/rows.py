@@ -14,11 +14,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 Kind = Literal["plan", "captures"]
-Method = Literal["pulse", "bias"]
+Method = Literal["pulse", "bias", "remanence"]
 NexusClass = Literal["NXsensor", "NXactuator", "NXenvironment"]
 Level = Literal["info", "warning", "error"]
 
-METHODS: dict[Method, int] = {"pulse": 1, "bias": 2}
+METHODS: dict[Method, int] = {"pulse": 1, "bias": 2, "remanence": 3}
 DTYPES = ("int8", "int16", "int32", "float32", "float64")
 
 Codes = NDArray[Any]
@@ -108,7 +108,12 @@ class CaptureRow:
 
 @dataclass(frozen=True, slots=True)
 class PointRow:
-    """One pulse width or bias current, measured once. The journal adds the attempt and the session."""
+    """One pulse width, bias current or remanence series, measured once. The journal adds the attempt and the session.
+
+    Of a remanence series the captures are the shots in order, the first of them on the prepared core. Its polarity is the
+    sign of ``peak_current`` (and of the captures); ``bias_current_setpoint`` and ``bias_current`` are those of its offset
+    winding.
+    """
 
     plan_index: int
     leg: int

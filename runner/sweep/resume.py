@@ -8,13 +8,12 @@ planned points unmeasured on purpose.
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
-from typing import Literal
 
 from runner.errors import Fault, InputError
 from runner.plan import LoadedPlan, load_plan, parse_bench, parse_plan
 from runner.record import METHODS, Flag, open_run
+from runner.record.rows import Method
 
-Method = Literal["pulse", "bias"]
 _NAMES: dict[int, Method] = {number: name for name, number in METHODS.items()}
 
 
@@ -83,7 +82,7 @@ def look_behind(folder: Path) -> Behind:
             continue
         done.add(index)
         place = places[columns["point"][row]]
-        is_pulse = place[2] == "pulse"
+        is_pulse = place[2] != "bias"
         history.setdefault(place, []).append(
             Recorded(
                 index,

@@ -99,21 +99,6 @@ def test_a_search_that_is_written_wrongly_is_shown(written: Written, seek: str, 
     assert says in str(caught.value)
 
 
-def test_a_remanence_study_is_read(written: Written) -> None:
-    study = (
-        "remanence: {width: 10 us, shots: 5, demagnetise: alternating pulses, polarities: both,"
-        " offset: [-20 A turns, 0 A, 20 A turns]}\nlimits:"
-    )
-    bench = {"maximum: {width: 1 ms}": "maximum: {width: 1 ms}, polarities: both"}
-    remanence = load_plan(written(plan={"limits:": study}, bench=bench)).plan.remanence
-    assert remanence is not None
-    assert remanence.offset == (-20.0, 0.0, 20.0)
-    with pytest.raises(
-        InputError, match=r"remanence\.polarities: the bench's fixture cannot reverse the pulse"
-    ):
-        load_plan(written(plan={"limits:": study}))
-
-
 def test_alternating_pulses_need_both_polarities(written: Written) -> None:
     study = "remanence: {width: 10 us, demagnetise: alternating pulses}\nlimits:"
     with pytest.raises(InputError, match="alternating pulses need both polarities"):
