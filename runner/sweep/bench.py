@@ -74,7 +74,7 @@ class Bench:
     """
 
     def __init__(self, roles: Mapping[str, Any], ratings: Ratings, clock: Clock) -> None:
-        self.roles = roles
+        self.roles = dict(roles)
         self.ratings = ratings
         self.clock = clock
         self.state = State.REST
@@ -143,6 +143,12 @@ class Bench:
         self.program_limits(role)
         if role == "multiplexer":
             instrument.open_all()
+
+    def do_without(self, role: str) -> None:
+        """Go on as if there were no such instrument."""
+        self.roles[role].close()
+        del self.roles[role]
+        self.identities.pop(role, None)
 
     def check_identity(self, role: str) -> None:
         """Make sure that the instrument is the one the run began with.

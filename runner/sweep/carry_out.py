@@ -210,8 +210,13 @@ class _Session:
 
     def _start(self, bench: Bench, night: Night) -> None:
         """Who is there, is anything wrong with them, limits into them; nothing is switched on yet."""
-        for role in bench.roles:
-            night.recovery.carry_out(Phase.START, partial(bench.meet, role))
+        for role in list(bench.roles):
+            try:
+                night.recovery.carry_out(Phase.START, partial(bench.meet, role))
+            except GivenUp as given_up:
+                if given_up.action is not Action.FLAG:
+                    raise BenchError(str(given_up)) from given_up
+                bench.do_without(role)
         for row in instrument_rows(self.loaded.bench, bench.identities, self.site.resources()):
             self.journal.instrument(row)
         self.journal.state("acquiring")
@@ -247,7 +252,12 @@ class _Session:
         parts = range(len(self.loaded.plan.parts))
         night.leg_points = (0, sum(len(self._left(night, leg.index, part)) for part in parts))
         for role in night.bench.roles:
-            night.recovery.carry_out(Phase.SOAK, partial(night.bench.check_identity, role))
+            try:
+                night.recovery.carry_out(Phase.SOAK, partial(night.bench.check_identity, role))
+            except GivenUp as given_up:
+                # One that only measures may be back by the time it is needed; then is the time to give it up.
+                if given_up.action is Action.STOP:
+                    raise
         settled = soak(night, leg)
         night.is_soaked = True
         night.seen_soak += self.clock.now() - night.soak_started

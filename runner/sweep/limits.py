@@ -21,6 +21,7 @@ STEEPEST = 14.0
 _BEND_FACTOR = 1.5  # on the exponent seen, for noise and for knees that are still turning
 _LEFT = 0.02  # of the initial inductance, left when the core is saturated (without its core a winding has 2 to 6 %)
 _SLOPE_FACTOR = 1.05  # on the measured slope, for noise and calibration ...
+_SLOPE_ERRORS = 3.0  # ... and for the scatter of the samples in small or short pulses ...
 _CARRIED = (
     1.08  # ... and from the middle of the last window of current to its end, by half the exponent again
 )
@@ -75,11 +76,13 @@ def predict(last: Look, width: float) -> Prediction:
     added = max(width - last.width, 0.0)
     flux = last.drive * added
     bend = max(last.growth, 0.0)
-    ceiling = max(last.start_slope / _LEFT, last.end_slope)
+    # A slope that the noise has hidden is at least that of the whole pulse.
+    worst_slope = max(last.end_slope + _SLOPE_ERRORS * last.slope_error, last.secant_slope)
+    ceiling = max(max(last.start_slope, last.secant_slope) / _LEFT, worst_slope)
     steepest = max(STEEPEST, _BEND_FACTOR * bend)
-    likely = last.peak + _rise(last.end_current, last.end_slope, min(bend, STEEPEST), flux, ceiling)
-    slope = min(_SLOPE_FACTOR * last.end_slope * _CARRIED ** (0.5 * bend), ceiling)
-    worst = last.peak + _rise(last.end_current, slope, steepest, flux, ceiling)
+    likely = last.peak + _rise(last.peak, last.end_slope, min(bend, STEEPEST), flux, ceiling)
+    slope = min(_SLOPE_FACTOR * worst_slope * _CARRIED ** (0.5 * bend), ceiling)
+    worst = last.peak + _rise(last.peak, slope, steepest, flux, ceiling)
     supply = last.energy / last.charge if last.charge > 0 else last.drive
     energy = last.energy + supply * added * (last.peak + likely) / 2
     # Current only rises during a pulse, so its end value times the time bounds the charge.

@@ -1,16 +1,20 @@
 """A quick look at a pulse, for decisions between two pulses: peak, flux linkage, slope at the end, how fast it steepens.
 
-Not the extraction: no skew, no shunt inductance, no uncertainty. What matters here is that nothing is underestimated, so
-the larger of two readings of a slope is taken. All repeats are averaged first; the peak is the largest of any repeat.
+Not the extraction: no fits over several pulses, no uncertainty budget. What matters here is that nothing is
+underestimated. The two errors of the fixture that would do that are undone: the shunt's series inductance, which shows a
+steeply rising current that is not there yet, and the skew between the channels, which looks for the end of the pulse where
+the current has begun to fall. All repeats are averaged first; the peak is the largest of any repeat.
 """
 
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.signal import lfilter
 
 from runner.arrays import FloatArray
 
 _ON = 0.5  # of the largest voltage: the switch is on
+_EDGE = 2  # samples of the falling edge
 _FEWEST = 12  # samples of a pulse, below which slopes are not looked at
 _LAST, _BEFORE = 0.85, 0.65  # of the end current: where the last window of it begins, and the one before
 _START = 0.3  # of the end current: up to here is the start of the pulse
@@ -32,7 +36,7 @@ class Look:
         drive: voltage at the start of the pulse, the largest there is.
         end_drive: voltage at the end.
         start_slope: di/dflux at the start of the pulse, 1/H.
-        end_slope: the same at its end.
+        end_slope: the same at its end; slope_error: its standard error from the scatter of the samples.
         growth: exponent of that slope over the current near the end: slope ~ current ** growth.
     """
 
@@ -47,7 +51,13 @@ class Look:
     end_drive: float
     start_slope: float
     end_slope: float
+    slope_error: float
     growth: float
+
+    @property
+    def secant_slope(self) -> float:
+        """Current over flux linkage of the whole pulse, 1/L_s [1/H]; the noise has no hold on it."""
+        return max(self.end_current, 0.0) / self.flux_linkage
 
     @property
     def inductance(self) -> float:
@@ -69,6 +79,8 @@ def look_at(
     width: float,
     rail: float,
     resistance: float,
+    shunt_time_constant: float = 0.0,
+    skew: float = 0.0,
 ) -> Look | None:
     """Look at the captures of one point.
 
@@ -80,26 +92,29 @@ def look_at(
         width: that was asked for [s].
         rail: voltage of the bank [V].
         resistance: of the winding, about [ohm].
+        shunt_time_constant: series inductance of the shunt over its resistance [s].
+        skew: how much later the voltage channel is than the current channel [s].
 
     Returns:
         The look, or None where no pulse is to be seen (the switch did not turn on, or too few samples).
     """
-    mean_voltage, mean_current = voltage.mean(axis=0), current.mean(axis=0)
+    current = _without_inductance(current, shunt_time_constant / interval, max(pretrigger // 2, 1))
+    mean_voltage, mean_current = _earlier(voltage.mean(axis=0), skew / interval), current.mean(axis=0)
     before = max(pretrigger // 2, 1)
     start_voltage, start_current = float(mean_voltage[:before].mean()), float(mean_current[:before].mean())
     drive = mean_voltage - start_voltage
     top = float(drive.max())
     on = np.flatnonzero(drive > _ON * top)
-    if top <= 0 or on.size < _FEWEST:
+    if top <= 0 or on.size < _FEWEST + _EDGE:
         return None
-    pulse = slice(int(on[0]), int(on[-1]) + 1)
+    pulse = slice(int(on[0]), int(on[-1]) + 1 - _EDGE)
     flux_rate = drive[pulse] - resistance * (mean_current[pulse] - start_current)
     flux = np.cumsum(flux_rate) * interval
     through = mean_current[pulse] - start_current
     slopes = _slopes(flux, through)
     if slopes is None:
         return None
-    start_slope, end_slope, growth = slopes
+    start_slope, end_slope, slope_error, growth = slopes
     count = flux.size
     charge = float(through.sum() * interval)
     return Look(
@@ -114,12 +129,30 @@ def look_at(
         end_drive=float(np.median(drive[pulse][-max(count // 10, 3) :])),
         start_slope=start_slope,
         end_slope=end_slope,
+        slope_error=slope_error,
         growth=growth,
     )
 
 
-def _slopes(flux: FloatArray, current: FloatArray) -> tuple[float, float, float] | None:
-    """Slope of current over flux linkage at the start and at the end, and its exponent over current near the end.
+def _without_inductance(current: FloatArray, samples: float, before: int) -> FloatArray:
+    """Current from what a shunt with series inductance shows: a low-pass of L/R undoes i + (L/R) di/dt."""
+    if samples <= 0:
+        return current
+    keep = float(np.exp(-1 / samples))
+    start = current[..., :before].mean(axis=-1, keepdims=True)
+    return np.asarray(lfilter([1 - keep], [1, -keep], current - start, axis=-1)) + start
+
+
+def _earlier(values: FloatArray, samples: float) -> FloatArray:
+    """The same values so many samples earlier, to the nearest; the last one fills up."""
+    shift = round(samples)
+    if shift == 0:
+        return values
+    return np.asarray(values[np.clip(np.arange(values.size) + shift, 0, values.size - 1)])
+
+
+def _slopes(flux: FloatArray, current: FloatArray) -> tuple[float, float, float, float] | None:
+    """Slope of current over flux linkage at the start and at the end, its error there, its exponent over current.
 
     The end is looked at in two windows of the current, the last one from `_LAST` of its end value: past a knee these are
     short in time, and the slope of a longer one would be that of the knee and not of its far side.
@@ -145,14 +178,15 @@ def _slopes(flux: FloatArray, current: FloatArray) -> tuple[float, float, float]
     growth = min(growth, _STEEPEST_SEEN)
     # The slope found is that of the middle of the last window; carry it to the end.
     end_slope = last.slope * (end / last.current) ** growth if last.current > 0 else last.slope
-    return max(start.slope, 0.0), max(float(end_slope), 0.0), growth
+    return max(start.slope, 0.0), max(float(end_slope), 0.0), last.error, growth
 
 
 @dataclass(frozen=True, slots=True)
 class _Line:
-    """Least squares through a window: slope of current over flux linkage [1/H], and the mean current in it [A]."""
+    """Least squares through a window: slope of current over flux linkage, its error [1/H], the mean current there [A]."""
 
     slope: float
+    error: float
     current: float
 
 
@@ -160,4 +194,8 @@ def _line(flux: FloatArray, current: FloatArray, first: int, stop: int) -> _Line
     x, y = flux[first:stop], current[first:stop]
     centred = x - x.mean()
     weight = float(centred @ centred)
-    return _Line(float(centred @ y) / weight if weight > 0 else 0.0, float(y.mean()))
+    if weight <= 0:
+        return _Line(0.0, float("inf"), float(y.mean()))
+    slope = float(centred @ y) / weight
+    misfit = y - y.mean() - slope * centred
+    return _Line(slope, (float(misfit @ misfit) / max(x.size - 2, 1) / weight) ** 0.5, float(y.mean()))

@@ -82,6 +82,14 @@ class PulseFixture:
         self._channel = loaded.plan.parts[part].channel
         self._resistance = resistance
         self.trip = trip_level(limit, rail=self._pulse.rail, inductance=loaded.plan.parts[part].inductance)
+        shunt, skew = loaded.bench.fixture.shunt, self._digitizer.calibration.get("skew")
+        series = (
+            shunt.series_inductance.value
+            if shunt is not None and shunt.series_inductance is not None
+            else 0.0
+        )
+        self._shunt_time_constant = series / bench.ratings.shunt
+        self._skew = skew.value if skew is not None else 0.0
         self._samples = self._digitizer.samples
         self._pretrigger = max(round(self._digitizer.pretrigger * self._samples), 1)
         self._least = (0.0, 0.0)  # ranges found too small are not gone back to in this climb
@@ -153,6 +161,8 @@ class PulseFixture:
             width=width,
             rail=self._pulse.rail,
             resistance=self._resistance,
+            shunt_time_constant=self._shunt_time_constant,
+            skew=self._skew,
         )
         return PulsePoint(
             width=width,

@@ -29,6 +29,7 @@ GOOD = Look(
     end_drive=11.9,
     start_slope=1 / 22e-6,
     end_slope=1 / 22e-6,
+    slope_error=0.0,
     growth=0.0,
 )
 RAIL = {"rail": 12.0, "rail_before": 11.99, "full_scale": 20.0}

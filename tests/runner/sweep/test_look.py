@@ -38,3 +38,30 @@ def test_the_peak_is_the_largest_of_all_repeats() -> None:
     look = look_at(np.stack([voltage] * 2), np.stack([current, 1.2 * current]), **ABOUT)
     assert look is not None
     assert look.peak == (1.2 * current).max()
+
+
+def test_a_shunt_with_inductance_shows_no_current_that_is_not_there() -> None:
+    # i = V t / L; the shunt shows i + tau V / L from the first instant of the pulse on.
+    time = (np.arange(2000) - 200) * 1e-8
+    on = (time >= 0) & (time < 1e-5)
+    rate, tau = 12.0 / 22e-6, 0.3e-6
+    voltage, current = np.where(on, 12.0, 0.0), np.where(on, rate * time, 0.0)
+    shown = current + np.where(on, tau * rate, 0.0)
+    look = look_at(voltage[None], shown[None], shunt_time_constant=tau, **ABOUT)
+    assert look is not None
+    assert abs(look.peak - current.max()) < 1.5 * rate * 1e-8  # a sample and a half
+    assert abs(1 / look.start_slope - 22e-6) < 0.05e-6
+
+
+def test_a_voltage_channel_that_is_late_is_brought_back() -> None:
+    time = (np.arange(2000) - 200) * 1e-8
+    on = (time >= 0) & (time < 1e-5)
+    voltage = np.where(on, 12.0, 0.0)
+    current = np.where(on, 12.0 / 22e-6 * time, 12.0 / 22e-6 * 1e-5 * np.exp(-(time - 1e-5) / 1e-4)) * (
+        time >= 0
+    )
+    look = look_at(np.roll(voltage, 5)[None], current[None], skew=5e-8, **ABOUT)
+    straight = look_at(voltage[None], current[None], **ABOUT)
+    assert look is not None
+    assert straight is not None
+    assert look.end_slope == straight.end_slope

@@ -19,6 +19,7 @@ LOOK = Look(
     end_drive=11.9,
     start_slope=1 / 22e-6,
     end_slope=1 / 11e-6,
+    slope_error=0.0,
     growth=2.0,
 )
 
