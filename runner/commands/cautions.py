@@ -5,8 +5,6 @@ from typing import TYPE_CHECKING
 if TYPE_CHECKING:
     from runner.plan import LoadedPlan
 
-# Above this a spark from a bank counts as hazardous where it can be touched (IEC 61010-1, from memory) [J].
-HAZARDOUS_ENERGY = 0.35
 # Above this a direct voltage counts as hazardous to touch (IEC 61010-1, from memory) [V].
 HAZARDOUS_VOLTAGE = 60.0
 # Bare metal at and above this burns in a few seconds (ISO 13732-1, from memory) [degC].
@@ -22,10 +20,9 @@ def cautions(loaded: "LoadedPlan") -> list[str]:
         if bank is not None:
             energy = bank.capacitance * plan.pulse.rail**2 / 2
             worst = bank.capacitance * plan.limits.rail**2 / 2
-            grave = " (enough to weld a ring or throw metal)" if worst > HAZARDOUS_ENERGY else ""
             said.append(
-                f"The bank will hold {energy:.2g} J at {plan.pulse.rail:g} V, {worst:.2g} J at the rail limit{grave}. "
-                "Discharge it, measure that it is discharged, and short it before you touch the fixture."
+                f"The bank will hold {energy:.2g} J at {plan.pulse.rail:g} V, {worst:.2g} J at the rail limit; "
+                "a short throws sparks and burns. Discharge it, measure that it is discharged, and short it before you touch the fixture."
             )
         if plan.limits.rail > HAZARDOUS_VOLTAGE:
             said.append(f"A rail of {plan.limits.rail:g} V is dangerous to touch.")

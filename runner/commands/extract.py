@@ -38,7 +38,7 @@ def extract_and_keep(path: Path) -> dict[str, Any]:
     if len(run.points["point"]) == 0:
         raise InputError([Fault(str(path), "the run holds no points yet; 'kneemap resume' goes on with it")])
     extraction = extract(run)
-    write_extraction(record_folder(path), extraction.tables, extraction.result)
+    write_extraction(record_folder(path), extraction.tables, extraction.result, made_from=run.raw_sha256)
     return extraction.result
 
 
@@ -55,6 +55,7 @@ def print_result(result: Mapping[str, Any]) -> None:
     for part in result["parts"]:
         for method, numbers in part["methods"].items():
             console.print(isat_table(part["label"], method, numbers, coverage=result["coverage"]))
+            console.print()
         for line in flag_lines(part.get("flags", [])):
             console.print(f"  {line}", markup=False)
 
