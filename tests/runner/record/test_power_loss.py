@@ -418,7 +418,7 @@ def test_the_replay_bites_where_a_sync_is_left_out(
 @needs_strace
 @pytest.mark.soak
 def test_many_power_cuts_lose_nothing(tmp_path: Path, knowledge: dict[str, Any]) -> None:
-    for seed in range(10):
+    for seed in range(5):
         assert bad_images(tmp_path / str(seed), knowledge, count=1000, seed=100 + seed, resume_each=20) == []
 
 
