@@ -81,9 +81,12 @@ class Bench:
         self.identities: dict[str, Identity] = {}
         self._channel = 0
         self._path = ""
+        self._beside = ""
+        self._offset: float | None = None
         self._rail = 0.0
         self._bias = 0.0
         self._width: float | None = None
+        self._polarity = 1
         self._trip: float | None = None
         self._setup: DigitizerSetup | None = None
         self._asked: DigitizerSetup | None = None
@@ -202,7 +205,7 @@ class Bench:
             if self._trip is not None:
                 self.pulser.protect(self._trip)
             if self._width is not None:
-                self.pulser.set(self._width)
+                self.pulser.set(self._width, self._polarity)
             if self.state is State.CHARGED:
                 self.pulser.on()
         elif role == "digitizer" and self._setup is not None:
@@ -235,10 +238,14 @@ class Bench:
 
     # ---- moves
 
-    def wire(self, channel: int, path: str) -> None:
-        """Close the relays that connect one part to one path: "pulse", "bias" or "resistance"."""
+    def wire(self, channel: int, path: str, *, beside: str = "") -> None:
+        """Close the relays that connect one part to one path: "pulse", "bias" or "resistance".
+
+        `beside`: "offset" also connects the bias source to the offset winding, which is not the part's own and carries no
+        current before the bank is charged or after it is discharged.
+        """
         state = after(self.state, Move.WIRE)
-        self._channel, self._path = channel, path
+        self._channel, self._path, self._beside = channel, path, beside
         self._close_relays()
         self.state = state
 
@@ -274,6 +281,7 @@ class Bench:
         """Rail off, wait for the bleeder; gives how long that took [s]."""
         state = after(self.state, Move.DISCHARGE)
         self.pulser.off()
+        self._end_offset()
         self.supply.off()
         # Known by what it was charged to: a voltmeter that is stuck may say that there is nothing left at once.
         waited = discharge_time(self._rail, self.ratings.bleed)
@@ -313,6 +321,33 @@ class Bench:
         self.bias_source.off()
         self.state = state
 
+    def offset(self, current: float) -> None:
+        """Ramp the current of the offset winding to `current` [A], either sign; at zero its source is switched off."""
+        self.state = after(self.state, Move.OFFSET)
+        if abs(current) > self.ratings.current_limit:
+            raise ValueError(f"offset of {current!r} A is above the limit; the plan's check let it through")
+        if current == 0.0:
+            self._end_offset()
+            return
+        if self._offset is None:
+            self._offset = 0.0
+            self.bias_source.set(0.0)
+            self.bias_source.on()
+        self._ramp_offset(current)
+
+    def _ramp_offset(self, current: float) -> None:
+        assert self._offset is not None
+        for step in ramp_steps(self._offset, current, self.ratings.ramp * _RAMP_STEP):
+            self.bias_source.set(step)
+            self.clock.sleep(abs(step - self._offset) / self.ratings.ramp)
+            self._offset = step
+
+    def _end_offset(self) -> None:
+        if self._offset is not None:
+            self._ramp_offset(0.0)
+            self.bias_source.off()
+            self._offset = None
+
     def relax(self) -> None:
         """Take the energy out by whatever move the state allows; afterwards nothing flows and nothing is charged."""
         if self.state is State.CHARGED:
@@ -332,12 +367,15 @@ class Bench:
         bank = self._rail if self.state is State.CHARGED else 0.0
         report = reach_safe_state(self.roles, rule, self.clock, bank=bank, say=say)
         self.state = state
+        self._offset = None
         return report
 
     # ---- what the measuring is set to; only what has changed is sent
 
-    def set_pulse(self, width: float, setup: DigitizerSetup, trip: float) -> DigitizerSetup:
-        """Width, comparator level of the fixture [A] and digitizer settings. Gives the settings as read back."""
+    def set_pulse(
+        self, width: float, setup: DigitizerSetup, trip: float, polarity: int = 1
+    ) -> DigitizerSetup:
+        """Width and polarity, comparator level of the fixture [A] and digitizer settings, which come back as read back."""
         if self._setup is None or self._asked != setup:
             self._setup = None
             self._setup = self.digitizer.set(setup)
@@ -346,10 +384,10 @@ class Bench:
             self._trip = None
             self.pulser.protect(trip)
             self._trip = trip
-        if self._width != width:
+        if (self._width, self._polarity) != (width, polarity):
             self._width = None
-            self.pulser.set(width)
-            self._width = width
+            self.pulser.set(width, polarity)
+            self._width, self._polarity = width, polarity
         return self._setup
 
     def set_signal(self, frequency: float, level: float) -> None:
@@ -374,6 +412,8 @@ class Bench:
         relays = [ratings.part_relays[self._channel]]
         if self._path in ratings.path_relays:
             relays.append(ratings.path_relays[self._path])
+        if self._beside:
+            relays.append(ratings.path_relays[self._beside])
         self.multiplexer.open_all()
         self.multiplexer.close(tuple(relays))
         self.clock.sleep(ratings.relay_settle)

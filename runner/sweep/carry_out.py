@@ -31,6 +31,7 @@ from runner.sweep.notify import Notifier
 from runner.sweep.opening import Site, on_site, ratings, roles_needed, safe_rule
 from runner.sweep.progress import Progress, Watch
 from runner.sweep.recovery import Recovery
+from runner.sweep.remanence_series import remanence_series
 from runner.sweep.requests import StopAtOnce, StopRequests
 from runner.sweep.resume import NOTHING, Behind, look_behind
 from runner.sweep.retry import Action, Phase
@@ -274,6 +275,7 @@ class _Session:
             night.recovery.carry_out(Phase.CLIMB, night.bench.rest)
             return
         climb(night, leg.index, part, settled=settled, resistance=resistance)
+        remanence_series(night, leg.index, part, settled=settled, resistance=resistance)
         bias_series(night, leg.index, part, settled=settled, resistance=resistance)
 
     def _skip_rest(self, night: Night, leg: Leg, given_up: GivenUp) -> None:
@@ -286,7 +288,11 @@ class _Session:
 
     @staticmethod
     def _left(night: Night, leg: int, part: int) -> list[Point]:
-        return night.to_do(leg, part, "pulse") + night.to_do(leg, part, "bias")
+        return [
+            *night.to_do(leg, part, "pulse"),
+            *night.to_do(leg, part, "remanence"),
+            *night.to_do(leg, part, "bias"),
+        ]
 
     # ---- the end
 

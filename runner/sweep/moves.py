@@ -1,5 +1,6 @@
 """The states of the bench and every legal move between them.
 
+The current of an offset winding is a move of its own: it flows only while the bank is charged, and discharging ends it.
 A relay moves only in REST, where nothing is charged and nothing flows. There is no move from a charged bank or a flowing
 bias to REST but through the ones that take the energy out; `make_safe` is legal everywhere and walks that way itself.
 """
@@ -26,6 +27,7 @@ class Move(enum.Enum):
     DISCHARGE = "discharge the bank"
     BIAS = "set the bias current"
     UNBIAS = "end the bias current"
+    OFFSET = "set the current of the offset winding"
     MAKE_SAFE = "reach the safe state"
 
 
@@ -34,6 +36,7 @@ LEGAL: dict[tuple[State, Move], State] = {
     (State.WIRED, Move.UNWIRE): State.REST,
     (State.WIRED, Move.CHARGE): State.CHARGED,
     (State.CHARGED, Move.FIRE): State.CHARGED,
+    (State.CHARGED, Move.OFFSET): State.CHARGED,
     (State.CHARGED, Move.DISCHARGE): State.WIRED,
     (State.WIRED, Move.BIAS): State.BIASED,
     (State.BIASED, Move.BIAS): State.BIASED,

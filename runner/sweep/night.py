@@ -12,7 +12,7 @@ from pathlib import Path
 
 from runner.errors import SafeStop
 from runner.plan import LoadedPlan, Point, Programme
-from runner.record import CaptureRow, Flag, Journal, PointRow, start_consolidation
+from runner.record import CaptureRow, Flag, Journal, Method, PointRow, start_consolidation
 from runner.sweep.bench import Bench
 from runner.sweep.clock import Clock
 from runner.sweep.faults import GivenUp
@@ -22,7 +22,7 @@ from runner.sweep.logbook import Logbook
 from runner.sweep.progress import Pace, Progress, Watch, remaining
 from runner.sweep.recovery import Recovery
 from runner.sweep.requests import StopRequests
-from runner.sweep.resume import Behind, Method
+from runner.sweep.resume import Behind
 from runner.sweep.retry import Action
 
 _REBUILD_EVERY = 600.0  # s of wall time: the record is never older than this (see record-layout.md)

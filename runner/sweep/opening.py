@@ -170,6 +170,8 @@ def roles_needed(plan: Plan, bench: BenchFile) -> tuple[str, ...]:
         needed |= {"supply", "pulser", "digitizer"}
     if plan.bias is not None:
         needed |= {"lcr", "bias_source"}
+    if plan.remanence is not None and any(plan.remanence.offset):
+        needed |= {"bias_source"}
     return tuple(role for role in bench.instruments if role in needed)
 
 

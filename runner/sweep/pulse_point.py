@@ -69,6 +69,10 @@ class PulseFixture:
         part: index.
         resistance: of the winding, about [ohm].
         limit: largest current of a pulse on this part [A].
+
+    Attributes:
+        polarity: of the pulses, +1 or -1; what is looked at and limited is the current in their direction.
+        beside: "offset" connects the offset winding too.
     """
 
     def __init__(
@@ -92,6 +96,8 @@ class PulseFixture:
         self._skew = skew.value if skew is not None else 0.0
         self._samples = self._digitizer.samples
         self._pretrigger = max(round(self._digitizer.pretrigger * self._samples), 1)
+        self.polarity = 1
+        self.beside = ""
         self._least = (0.0, 0.0)  # ranges found too small are not gone back to in this climb
         self._enlarged = 0
         self._clipped = (0, 0)
@@ -110,7 +116,7 @@ class PulseFixture:
     def get_ready(self) -> None:
         """Wired for pulses and charged, from any state."""
         self._bench.rest()
-        self._bench.wire(self._channel, "pulse")
+        self._bench.wire(self._channel, "pulse", beside=self.beside)
         self._bench.charge(self._pulse.rail)
 
     def fresh_point(self) -> None:
@@ -137,7 +143,7 @@ class PulseFixture:
         bench, rest = self._bench, self._pulse.rest
         if bench.state is not State.CHARGED:
             self.get_ready()
-        self._setup = bench.set_pulse(width, self._choose(width, current), self.trip)
+        self._setup = bench.set_pulse(width, self._choose(width, current), self.trip, self.polarity)
         bench.may_fire()
         start = now = bench.clock.now()
         if conditioning:
@@ -154,8 +160,8 @@ class PulseFixture:
         if _repeats_itself(shots):
             raise BadReading(Kind.STUCK, "digitizer", "two captures are equal to the last bit")
         look = look_at(
-            shots.voltage,
-            shots.current,
+            self.polarity * shots.voltage,
+            self.polarity * shots.current,
             interval=self._setup.interval,
             pretrigger=self._pretrigger,
             width=width,
@@ -177,6 +183,14 @@ class PulseFixture:
             body_degC=bench.body(self._channel),
             air_degC=bench.air(),
         )
+
+    def fire_unseen(self, width: float, polarity: int) -> None:
+        """One pulse of `width` [s] that nobody records, and a rest; only after a `measure` of one at least as wide."""
+        assert self._setup is not None
+        self._bench.set_pulse(width, self._setup, self.trip, polarity)
+        self._bench.may_fire()
+        self._bench.pulser.fire()
+        self._bench.clock.sleep(self._pulse.rest)
 
     def _condition(self, pulses: int) -> float:
         """Pulses that nobody records; gives the time afterwards [UTC s]."""

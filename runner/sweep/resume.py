@@ -11,8 +11,7 @@ from pathlib import Path
 
 from runner.errors import Fault, InputError
 from runner.plan import LoadedPlan, load_plan, parse_bench, parse_plan
-from runner.record import METHODS, Flag, open_run
-from runner.record.rows import Method
+from runner.record import METHODS, Flag, Method, open_run
 
 _NAMES: dict[int, Method] = {number: name for name, number in METHODS.items()}
 
