@@ -4,7 +4,7 @@ Takes a loaded plan and a folder, gives an `Outcome`. The only room that talks t
 never knows HDF5 or what extraction makes of a point.
 """
 
-from runner.sweep.carry_out import Outcome, carry_out, new_run_folder
+from runner.sweep.carry_out import Outcome, carry_out
 from runner.sweep.clock import BenchClock, Clock, WallClock
 from runner.sweep.probe import Probed, probe
 from runner.sweep.progress import Progress, Watch
@@ -20,6 +20,5 @@ __all__ = [
     "Watch",
     "carry_out",
     "loaded_from_run",
-    "new_run_folder",
     "probe",
 ]

@@ -8,7 +8,6 @@ a run: nothing left to do, a limit or a request (`SafeStop`), an instrument that
 import uuid
 from contextlib import ExitStack
 from dataclasses import dataclass
-from datetime import UTC, datetime
 from functools import partial
 from pathlib import Path
 from typing import Literal
@@ -61,13 +60,6 @@ class Outcome:
 
 def _nobody(progress: Progress) -> None:
     pass
-
-
-def new_run_folder(into: Path, *, title: str, start: datetime) -> Path:
-    """Folder for a new run: its start in UTC and a slug of its title. It is not made here."""
-    slug = "".join(letter if letter.isascii() and letter.isalnum() else "-" for letter in title.lower())
-    slug = "-".join(filter(None, slug.split("-")))[:60] or "run"
-    return into / f"{start.astimezone(UTC):%Y%m%dT%H%M%SZ}_{slug}"
 
 
 def carry_out(loaded: LoadedPlan, folder: Path, *, resume: bool = False, watch: Watch = _nobody) -> Outcome:

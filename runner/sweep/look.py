@@ -140,7 +140,7 @@ def _without_inductance(current: FloatArray, samples: float, before: int) -> Flo
         return current
     keep = float(np.exp(-1 / samples))
     start = current[..., :before].mean(axis=-1, keepdims=True)
-    return np.asarray(lfilter([1 - keep], [1, -keep], current - start, axis=-1)) + start
+    return np.asarray(lfilter([1 - keep], [1, -keep], current - start, axis=-1) + start, dtype=float)
 
 
 def _earlier(values: FloatArray, samples: float) -> FloatArray:

@@ -17,6 +17,7 @@ from runner.arrays import FloatArray
 
 _GROW = 1.35  # of x while bracketing: five steps from a quarter of the range to its end
 _BIAS_STEPS = 8  # a bias current starts from zero, where no factor helps
+_PAST = 0.03  # of inductance: so far beyond the largest drop a bracket reaches, so that nobody doubts that it was reached
 _COVERAGE = 2.0  # standard uncertainties on each side of an interval
 _NEAR = 0.25  # of the crossing: the points that it is found from lie within this of it
 _NARROW = 0.08  # a gap not wider than this, relative, is not divided further; repeats beside it bring the noise down
@@ -112,7 +113,7 @@ def next_point(history: Sequence[Sought], rule: SeekRule, *, ceiling: float = ma
     if not points:
         return Done("no usable point") if history else Next(rule.low, "first point")
     fallen = 1 - min(one.inductance for one in points) / _reference(points)
-    if fallen < max(rule.drops) and points[-1].x < high * (1 - 1e-9):
+    if fallen < max(rule.drops) + _PAST and points[-1].x < high * (1 - 1e-9):
         return Next(_step_up(points[-1].x, rule, high), f"bracketing: down by {max(fallen, 0.0):.0%} so far")
     crossings = {drop: find_crossing(points, drop) for drop in rule.drops}
     intervals = {
