@@ -21,13 +21,24 @@ from runner.extraction.method import MethodLegs, PartFacts, finish_method
 from runner.extraction.part_result import Settings
 from runner.extraction.pulse_leg import pulse_leg
 from runner.extraction.ramp import Ramp, make_ramp
+from runner.extraction.remanence import Series, Study, study
+from runner.extraction.remanence_shots import conditioned_of, first_of, turned
 from runner.extraction.resistance import Resistance, winding_resistance
 from runner.extraction.surface import Surface
-from runner.plan import parse_bench, parse_captures, parse_plan
-from runner.record import SENTENCES, ExtractionTables, Flag, IsatTable, Run, SurfaceTable, is_acceptable
+from runner.plan import Point, expand, parse_bench, parse_captures, parse_plan
+from runner.record import (
+    SENTENCES,
+    ExtractionTables,
+    Flag,
+    IsatTable,
+    PointCaptures,
+    Run,
+    SurfaceTable,
+    is_acceptable,
+)
 from runner.versions import software
 
-PULSE, BIAS = 1, 2
+PULSE, BIAS, REMANENCE = 1, 2, 3
 METHODS = {"pulse": PULSE, "bias": BIAS}
 GRID = 161  # currents of a surface table
 
@@ -87,6 +98,10 @@ def extract(run: Run) -> Extraction:
         }
         if (index, "pulse") in every and (index, "bias") in every:
             row["cross_check"] = _cross_check(every[index, "pulse"], every[index, "bias"], settings, doubts)
+        remembered = _remanence(run, index, facts, calibration, settings, doubts)
+        if remembered is not None:
+            row |= remembered.records
+            row["sentences"] = [*row.get("sentences", ()), *remembered.sentences]
         rows.append({**row, "flags": [doubt.as_row() for doubt in doubts]})
     program, _, version = software().partition(" ")
     tables = ExtractionTables(
@@ -171,12 +186,9 @@ def _pulse_legs(
     return method
 
 
-def _ramp(run: Run, point: int, calibration: Calibration, doubts: list[Doubt]) -> Ramp | None:
-    captures = run.captures(point)
-    if captures is None:
-        return None
+def _setting(captures: PointCaptures) -> Setting:
     detail = captures.setting
-    setting = Setting(
+    return Setting(
         interval=float(detail["interval"]),
         first=float(captures.time[0]),
         v_scale=float(detail["v_scale"]),
@@ -186,10 +198,91 @@ def _ramp(run: Run, point: int, calibration: Calibration, doubts: list[Doubt]) -
         code_min=float(detail["code_min"]),
         code_max=float(detail["code_max"]),
     )
+
+
+def _ramp(run: Run, point: int, calibration: Calibration, doubts: list[Doubt]) -> Ramp | None:
+    captures = run.captures(point)
+    if captures is None:
+        return None
+    setting = _setting(captures)
     mean = average(captures.voltage_codes, captures.current_codes, setting, guard=_guard(calibration))
     ramp = make_ramp(mean, calibration, point=point)
     doubts += capture_doubts(point, mean, ramp)
     return ramp
+
+
+def _remanence(
+    run: Run, part: int, facts: PartFacts, calibration: Calibration, settings: Settings, doubts: list[Doubt]
+) -> Study | None:
+    """The remanence study of one part; None where the run has none. Its captures are no business of the pulse method."""
+    points = run.points
+    mine = np.flatnonzero((points["part"] == part) & (points["method"] == REMANENCE))
+    if mine.size == 0:
+        return None
+    plan = parse_plan(run.plan_bytes, run.plan_name)
+    planned = expand(plan).points
+    is_prepared = plan.remanence is not None and (
+        plan.remanence.demagnetise != "none" or plan.remanence.polarities == "both"
+    )
+    found = []
+    for at, rows in _by_leg(points, mine, calibration):
+        resistance = _resistance(points, rows, calibration, facts, at)
+        for row in rows.tolist():
+            point = planned[int(points["plan_index"][row])]
+            series = _series(run, int(points["point"][row]), point, resistance, calibration, doubts)
+            if series is not None:
+                found.append(replace(series, is_prepared=is_prepared))
+    turns = None if facts.core is None else int(facts.core.turns)
+    return study(facts.label, found, settings, turns=turns) if found else None
+
+
+def _series(
+    run: Run,
+    number: int,
+    point: Point,
+    resistance: Resistance,
+    calibration: Calibration,
+    doubts: list[Doubt],
+) -> Series | None:
+    captures = run.captures(number)
+    if captures is None:
+        return None
+    shots = turned(captures.voltage_codes, captures.current_codes, _setting(captures), point.direction)
+    later = conditioned_of(shots)
+    guard, at = _guard(calibration), resistance.temperature_degC
+    ramps = []
+    for chosen in (first_of(shots), later):
+        mean = average(*chosen, guard=guard)
+        ramp = make_ramp(mean, calibration, point=number, temperature_degC=at)
+        doubts += capture_doubts(number, mean, ramp)
+        ramps.append(ramp)
+    curves = [
+        pulse_leg(
+            [ramp],
+            calibration,
+            temperature_degC=at,
+            resistance=resistance.ohm,
+            resistance_uncertainty=resistance.uncertainty,
+        )
+        for ramp in ramps
+        if ramp is not None
+    ]
+    if len(curves) < len(ramps):
+        return None
+    voltage, current, setting = later
+    singles = (
+        make_ramp(average(voltage[k : k + 1], current[k : k + 1], setting, guard=guard), calibration)
+        for k in range(len(voltage))
+    )
+    return Series(
+        temperature_degC=at,
+        sign=point.direction,
+        ampere_turns=point.ampere_turns,
+        first=curves[0],
+        conditioned=curves[1],
+        shots=tuple(ramp for ramp in singles if ramp is not None),
+        resistance=resistance.ohm,
+    )
 
 
 def _guard(calibration: Calibration) -> float:
