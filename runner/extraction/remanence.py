@@ -317,7 +317,8 @@ def _told_offset(rows: Sequence[Mapping[str, Any]], settings: Settings) -> list[
         )
         told.append(
             f"An offset field of {_signed(ampere_turns)} A turns moves the conditioned knee"
-            f" ({100 * mine[0]['drop']:g} % drop, {mine[0]['temperature_degC']:.0f} °C, {100 * settings.coverage:g} % intervals) by {moves}."
+            f" ({100 * mine[0]['drop']:g} % drop, {mine[0]['temperature_degC']:.0f} °C,"
+            f" {100 * settings.coverage:g} % intervals) by {moves}."
         )
     return told
 
