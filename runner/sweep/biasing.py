@@ -92,8 +92,9 @@ class _Series:
 
     def go(self, points: Sequence[Point]) -> None:
         """Measure the points, in order, until something ends the series."""
+        self.night.time = self.night.clock.now()
         for index, point in enumerate(points):
-            self.night.check(self.night.clock.now())
+            self.night.check(self.night.time)
             self.night.recovery.fresh_point()
             try:
                 why = self._point(point)
@@ -109,6 +110,7 @@ class _Series:
         if self.rule is not None:
             proposal = next_point(self.history, self.rule)
             if not isinstance(proposal, Next):
+                self.night.write_notes()
                 self.night.log.event(
                     "climb_end", f"{self.night.label(self.part)}: {proposal.why}", point=self.last_number
                 )
@@ -127,7 +129,7 @@ class _Series:
         bench, clock = self.night.bench, self.night.clock
         if bench.state is not State.BIASED:
             self.get_ready()
-        start = clock.now()
+        start = self.night.time
         bench.bias(current)
         clock.sleep(self.plan.settle)
         lcr = bench.lcr.read()
@@ -203,6 +205,6 @@ class _Series:
             test_frequency=self.plan.signal.frequency,
         )
         if seeking:
-            night.log.event("seek", f"{current:.4g} A: {seeking}")
+            night.note("seek", f"{current:.4g} A: {seeking}")
         self.last_number = night.record(row, judgement, ends=None if why is None else ("climb_end", why))
         return why

@@ -5,6 +5,7 @@ a run: nothing left to do, a limit or a request (`SafeStop`), an instrument that
 (`RecordError`), a second Ctrl-C or SIGTERM (`StopAtOnce`), or a fault of ours, which crashes only after the bench is safe.
 """
 
+import contextlib
 import uuid
 from contextlib import ExitStack
 from dataclasses import dataclass
@@ -12,7 +13,6 @@ from functools import partial
 from pathlib import Path
 from typing import Literal
 
-from drivers import InstrumentError
 from runner.errors import BenchError, Fault, InputError, KneemapError, SafeStop
 from runner.plan import Leg, LoadedPlan, Point, Programme, expand, forecast
 from runner.record import Journal, PartRow, RunHeader
@@ -291,20 +291,23 @@ class _Session:
     def _end(
         self, bench: Bench, night: Night, status: Status, reason: str, crash: BaseException | None
     ) -> Outcome:
+        # First the bench, then the log: a disk that refuses, or takes its time to, must not keep an output on.
         with self.requests.shielded():
-            level: Literal["info", "error"] = "info" if status == "finished" else "error"
-            self.log.best_effort("end" if status == "finished" else "stop", reason, level)
-            report = bench.make_safe(
-                safe_rule(self.loaded.plan, self.loaded.bench),
-                lambda text: self.log.best_effort("safe_state", text),
-            )
-            self.log.best_effort("safe_state", str(report), "info" if report.is_confirmed else "error")
-            if not report.is_confirmed:
-                status, reason = "failed", f"{reason} {report}"
+            steps: list[str] = []
+            report = bench.make_safe(safe_rule(self.loaded.plan, self.loaded.bench), steps.append)
             for instrument in bench.roles.values():
                 instrument.close()
             self.beats[-1].stop()
             self.beats.append(NoHeart())
+            with contextlib.suppress(KneemapError, OSError):
+                night.write_notes()
+            is_finished = status == "finished"
+            self.log.best_effort("end" if is_finished else "stop", reason, "info" if is_finished else "error")
+            for step in steps:
+                self.log.best_effort("safe_state", step)
+            self.log.best_effort("safe_state", str(report), "info" if report.is_confirmed else "error")
+            if not report.is_confirmed:
+                status, reason = "failed", f"{reason}; {report}"
             self._close_record(night, status)
             outcome = Outcome(
                 status, self.behind.points + night.points, self.behind.flagged + night.flagged, reason
@@ -314,9 +317,9 @@ class _Session:
                 f"{self.loaded.plan.title}: {outcome.points} points, {outcome.flagged} flagged. {reason}",
             )
             self.notifier.close()
-        if isinstance(crash, KneemapError) and night.points == 0 and isinstance(crash, BenchError):
-            raise crash
-        if crash is not None and not isinstance(crash, (KneemapError, InstrumentError)):
+        if isinstance(crash, BenchError) and night.points == 0:
+            raise crash if report.is_confirmed else BenchError(reason) from crash
+        if crash is not None and not isinstance(crash, KneemapError):
             raise crash
         return outcome
 

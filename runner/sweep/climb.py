@@ -92,8 +92,9 @@ class _Climb:
 
     def go(self, points: Sequence[Point]) -> None:
         """Measure the points, in order, until something ends the climb."""
+        self.night.time = self.night.clock.now()
         for index, point in enumerate(points):
-            self.night.check(self.night.clock.now())
+            self.night.check(self.night.time)
             self.night.recovery.fresh_point()
             self.fixture.fresh_point()
             try:
@@ -147,7 +148,7 @@ class _Climb:
             if self.scouts >= _MOST_SCOUTS:
                 return f"{self.scouts} scouting pulses did not get to {width * 1e6:.4g} us"
             self.scouts += 1
-            self.night.log.event(
+            self.night.note(
                 "climb", f"scouting pulse of {step.width * 1e6:.4g} us on the way to {width * 1e6:.4g} us"
             )
             seen = self.night.recovery.carry_out(
@@ -171,7 +172,9 @@ class _Climb:
 
     def _shoot(self, width: float, expected: float, *, repeats: int, conditioning: int) -> PulsePoint:
         """Measure a width; a part that is open or shorted is a bad reading."""
-        seen = self.fixture.measure(width, expected, repeats=repeats, conditioning=conditioning)
+        seen = self.fixture.measure(
+            width, expected, repeats=repeats, conditioning=conditioning, start=self.night.time
+        )
         judgement = judge_part_pulse(
             seen.look, width=seen.width, rail=self.pulse.rail, nominal_inductance=self.spec.inductance
         )
@@ -188,6 +191,7 @@ class _Climb:
         Raises:
             SafeStop: it passed a limit.
         """
+        self.night.time = seen.end
         look = seen.look
         assert look is not None
         label, limit = self.night.label(self.part), self.limits
@@ -283,13 +287,14 @@ class _Climb:
             for repeat, (t, capture) in enumerate(zip(seen.shots.times, seen.shots.captures, strict=True))
         ]
         if seeking:
-            night.log.event("seek", f"{seen.width * 1e6:.4g} us: {seeking}")
+            night.note("seek", f"{seen.width * 1e6:.4g} us: {seeking}")
         self.last_number = night.record(
             row, judgement, captures, ends=None if ends is None else ("climb_end", ends)
         )
 
     def _end(self, why: str) -> str:
         """The climb ends before a point was measured; the event belongs to the last one that was."""
+        self.night.write_notes()
         self.night.log.event("climb_end", f"{self.night.label(self.part)}: {why}", point=self.last_number)
         return why
 

@@ -5,14 +5,14 @@ plan's duration used up is `SafeStop`, which nothing below `carry_out` catches.
 """
 
 import subprocess
-import time
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
+from time import monotonic
 
 from runner.errors import SafeStop
 from runner.plan import LoadedPlan, Point, Programme
-from runner.record import CaptureRow, Flag, Journal, Method, PointRow, start_consolidation
+from runner.record import CaptureRow, EventRow, Flag, Journal, Method, PointRow, start_consolidation
 from runner.sweep.bench import Bench
 from runner.sweep.clock import Clock
 from runner.sweep.faults import GivenUp
@@ -44,6 +44,8 @@ class Night:
     Attributes:
         started: UTC time of the session's start [s].
         dead_parts: indices of parts whose points have ended.
+        time: the latest that is known [UTC s]; asking a simulated bench's clock is a round trip.
+        notes: events that wait for the next point.
         leg, is_soaked, soak_started: which leg is under way, whether its soak is over, when it began.
         leg_points: done and planned in this leg.
         seen_soak, seen_points: seconds spent in this session on soaks that are over, and on points.
@@ -65,6 +67,8 @@ class Night:
     beat: Callable[[], None]
     run_started: float
     started: float
+    time: float = 0.0
+    notes: list[EventRow] = field(default_factory=list)
     dead_parts: set[int] = field(default_factory=set)
     last_index: int = -1
     points: int = 0
@@ -79,23 +83,24 @@ class Night:
     seen_soak: float = 0.0
     seen_points: float = 0.0
     rebuild: "subprocess.Popen[str] | None" = None
-    rebuilt: float = field(default_factory=time.monotonic)
+    rebuilt: float = field(default_factory=monotonic)
 
     # ---- between points
 
     def check(self, now: float) -> None:
-        """Between two points, and at each poll of a soak.
+        """Between two points, and at each poll of a soak; `now` is the time it is [UTC s].
 
         Raises:
             SafeStop: somebody asked for a stop, or the plan's duration is used up.
         """
+        self.time = now
         self.beat()
         if self.requests.is_asked:
             raise SafeStop(self.requests.why)
         duration = self.loaded.plan.limits.duration
         if now - self.run_started > duration:
             raise SafeStop(f"the plan's duration of {duration / 3600:.3g} h is used up")
-        if time.monotonic() - self.rebuilt > _REBUILD_EVERY:
+        if monotonic() - self.rebuilt > _REBUILD_EVERY:
             self.start_rebuild()
 
     def body_limit(self, part: int) -> float:
@@ -161,10 +166,15 @@ class Night:
         Returns:
             Number of the point in the journal.
         """
-        events = [self.log.row("flag", text, "warning", t=row.end_time) for text in judgement.texts]
+        events = [
+            *self.notes,
+            *(self.log.row("flag", text, "warning", t=row.end_time) for text in judgement.texts),
+        ]
         if ends is not None:
             events.append(self.log.row(ends[0], ends[1], t=row.end_time))
         number = self.journal.add_point(row, captures, events)
+        self.notes.clear()
+        self.time = row.end_time
         self.last_index = row.plan_index
         self.points += 1
         self.flagged += bool(row.quality)
@@ -172,6 +182,16 @@ class Night:
         self.leg_points = (self.leg_points[0] + 1, self.leg_points[1])
         self.report(row.part, row.method, row.end_time)
         return number
+
+    def note(self, kind: str, text: str) -> None:
+        """An event that goes to the disk with the next point, or at the next `write_notes`: most do not need a commit."""
+        self.notes.append(self.log.row(kind, text, t=self.time))
+
+    def write_notes(self) -> None:
+        """Put the notes on the disk that no point has taken along."""
+        for note in self.notes:
+            self.journal.event(note)
+        self.notes.clear()
 
     def absorb(self, given_up: GivenUp, points: Sequence[Point]) -> bool:
         """What a fault at the first of `points` means for the others of its series.
@@ -254,7 +274,7 @@ class Night:
 
     def start_rebuild(self) -> None:
         """Have `record.h5` rebuilt by a process of its own; one at a time, and nobody waits for it."""
-        self.rebuilt = time.monotonic()
+        self.rebuilt = monotonic()
         if self.rebuild is not None:
             if self.rebuild.poll() is None:
                 return

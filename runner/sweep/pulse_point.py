@@ -133,8 +133,13 @@ class PulseFixture:
         )
         self._enlarged += 1
 
-    def measure(self, width: float, current: float, *, repeats: int, conditioning: int) -> PulsePoint:
+    def measure(
+        self, width: float, current: float, *, repeats: int, conditioning: int, start: float | None = None
+    ) -> PulsePoint:
         """Pulses of `width` [s] that are expected to reach about `current` [A].
+
+        Args:
+            start: the time it is, where that is known [UTC s].
 
         Raises:
             InstrumentError: an instrument failed.
@@ -145,7 +150,7 @@ class PulseFixture:
             self.get_ready()
         self._setup = bench.set_pulse(width, self._choose(width, current), self.trip, self.polarity)
         bench.may_fire()
-        start = now = bench.clock.now()
+        start = now = bench.clock.now() if start is None else start
         if conditioning:
             now = self._condition(conditioning)
         rail_before = bench.bank()
