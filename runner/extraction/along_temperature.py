@@ -38,7 +38,11 @@ class Smoother:
             y, b = np.linalg.solve(root, values), np.linalg.solve(root, basis)
             normal = b.T @ b
             rest = y - b @ np.linalg.solve(normal, b.T @ y)
-            value = float(rest @ rest) + 2 * float(np.log(np.diag(root)).sum()) + float(np.linalg.slogdet(normal)[1])
+            value = (
+                float(rest @ rest)
+                + 2 * float(np.log(np.diag(root)).sum())
+                + float(np.linalg.slogdet(normal)[1])
+            )
             if value < best[1]:
                 best = float(size), value
         return best

@@ -11,9 +11,10 @@ import numpy as np
 
 from runner.arrays import FloatArray
 from runner.extraction.calibration import Calibration
+from runner.extraction.common_effects import CommonEffects, no_effects
 from runner.extraction.curve import LegCurve, Scale, leg_curve
 from runner.extraction.curve_data import Noise
-from runner.extraction.curve_fit import COMMON, Fit, fit_curve
+from runner.extraction.curve_fit import Fit, fit_curve
 from runner.extraction.curve_model import CurveModel, Shape
 
 FEWEST_READINGS = 5
@@ -29,18 +30,12 @@ class Readings:
     temperature_degC: FloatArray
 
 
-def correct(
-    current: FloatArray,
-    inductance: FloatArray,
-    resistance: FloatArray,
-    frequency: FloatArray,
-    calibration: Calibration,
-) -> tuple[FloatArray, FloatArray]:
+def correct(columns: Mapping[str, FloatArray], calibration: Calibration) -> tuple[FloatArray, FloatArray]:
     """Open, short and load correction of meter readings, and the gain of the bias source.
 
     Args:
-        current: bias as read [n] A; ``inductance`` and ``resistance``: series values as read [n] H, ohm;
-            ``frequency`` [n] Hz.
+        columns: as read, under the record's names: ``bias_current`` [n] A, ``inductance`` [n] H and ``ac_resistance``
+            [n] ohm (series values), ``test_frequency`` [n] Hz.
         calibration: ``meter_gain`` (load), ``fixture_inductance`` and ``fixture_resistance`` (short),
             ``open_capacitance`` (open).
 
@@ -49,13 +44,14 @@ def correct(
 
     The fixture is a series impedance with a capacitance across the part behind it: Z = 1/(1/(Z_m − Z_short) − jωC).
     """
-    omega = 2 * np.pi * frequency
+    omega = 2 * np.pi * columns["test_frequency"]
+    inductance, resistance = columns["inductance"], columns["ac_resistance"]
     lossy = np.where(np.isfinite(resistance), resistance, 0.0)
     gain = calibration.meter_gain.value
     impedance = lossy + 1j * omega * inductance / gain
     short = calibration.fixture_resistance.value + 1j * omega * calibration.fixture_inductance.value
     part = 1.0 / (1.0 / (impedance - short) - 1j * omega * calibration.open_capacitance.value)
-    return np.abs(current) / calibration.bias_gain.value, np.asarray(part.imag / omega)
+    return np.abs(columns["bias_current"]) / calibration.bias_gain.value, np.asarray(part.imag / omega)
 
 
 @dataclass(frozen=True, slots=True)
@@ -77,9 +73,9 @@ class ReadingData:
         return False
 
     @property
-    def delay_sigmas(self) -> tuple[float, float]:
-        """A meter has no skew; the two parameters are held at nothing."""
-        return 1e-6, 1e-6
+    def common(self) -> CommonEffects:
+        """A meter's readings share no delay; what they do share is told in `_shifts`."""
+        return no_effects(self.rows)
 
     def pilot(self) -> tuple[FloatArray, FloatArray]:
         fine = np.linspace(0.0, 1.0, 200)
@@ -94,8 +90,16 @@ class ReadingData:
         cell = np.clip((self.current / step).astype(np.int64), 0, len(model.current) - 2)
         f = self.current / step - cell
         value = shape.inductance[cell] * (1 - f) + shape.inductance[cell + 1] * f
-        slopes = shape.inductance_slopes[cell] * (1 - f)[:, None] + shape.inductance_slopes[cell + 1] * f[:, None]
-        return self.inductance - value, np.column_stack([slopes, np.zeros((len(f), COMMON))]), value
+        slopes = (
+            shape.inductance_slopes[cell] * (1 - f)[:, None] + shape.inductance_slopes[cell + 1] * f[:, None]
+        )
+        return self.inductance - value, slopes, value
+
+    def approach(
+        self, model: CurveModel, shape: Shape, z: FloatArray, *, held: FloatArray
+    ) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """Readings are linear in the inductance from the start."""
+        return self.linearise(model, shape, z)
 
     def noise(self, inductance: FloatArray) -> Noise:
         """Independent noise in proportion to the reading; its size is for the fit to find (starting at 1e-4)."""
@@ -114,7 +118,10 @@ def bias_leg(readings: Readings, calibration: Calibration, *, temperature_degC: 
     data = ReadingData(current / top, inductance / first, readings.temperature_degC[order], top, first)
     fit = fit_curve(data)
     return leg_curve(
-        fit, Scale(top, first * top), temperature_degC=temperature_degC, shifts=_shifts(fit, data, calibration)
+        fit,
+        Scale(top, first * top),
+        temperature_degC=temperature_degC,
+        shifts=_shifts(fit, data, calibration),
     )
 
 
@@ -128,6 +135,8 @@ def _shifts(fit: Fit, data: ReadingData, calibration: Calibration) -> Mapping[st
         "meter gain": -meter * data.inductance,
         # A source that gives less than it reads by u: each reading belongs to a smaller current.
         "bias current": source * data.current * steep,
-        "fixture inductance": -calibration.fixture_inductance.uncertainty / data.inductance_scale * np.ones(data.rows),
+        "fixture inductance": -calibration.fixture_inductance.uncertainty
+        / data.inductance_scale
+        * np.ones(data.rows),
     }
-    return {name: (fit.gain @ move)[:-COMMON] for name, move in moves.items() if np.any(move)}
+    return {name: (fit.gain @ move)[: fit.model.parameters] for name, move in moves.items() if np.any(move)}

@@ -80,9 +80,7 @@ def copper_ratio(temperature_degC: float, reference_degC: float = 20.0) -> float
 
     Source: IEC 60028 for the coefficient at 20 degC.
     """
-    return (1 + COPPER_ALPHA_20 * (temperature_degC - 20.0)) / (
-        1 + COPPER_ALPHA_20 * (reference_degC - 20.0)
-    )
+    return (1 + COPPER_ALPHA_20 * (temperature_degC - 20.0)) / (1 + COPPER_ALPHA_20 * (reference_degC - 20.0))
 
 
 def winding_temperature_rise(

@@ -47,7 +47,9 @@ def compare(
     """L_0 and the largest drop that both reached, at each temperature both have."""
     found = []
     for j, leg in enumerate(pulse[0]):
-        near = [k for k, other in enumerate(bias[0]) if abs(other.temperature_degC - leg.temperature_degC) <= NEAR]
+        near = [
+            k for k, other in enumerate(bias[0]) if abs(other.temperature_degC - leg.temperature_degC) <= NEAR
+        ]
         if not near:
             continue
         k = near[0]

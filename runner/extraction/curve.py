@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from runner.arrays import FloatArray
-from runner.extraction.curve_fit import COMMON, Fit
+from runner.extraction.curve_fit import Fit
 from runner.extraction.curve_model import running_integral
 from runner.extraction.gum import combine
 
@@ -164,20 +164,27 @@ class LegCurve:
         variance = np.einsum("ij,jk,ik->i", slopes, self.covariance, slopes)
         for shift in self.shifts.values():
             variance = variance + (slopes @ shift) ** 2
-        return np.sqrt(np.maximum(variance, 0.0))
+        return np.asarray(np.sqrt(np.maximum(variance, 0.0)))
 
     def _quantity(self, value: float, slopes: FloatArray) -> Quantity:
         noise = float(slopes @ self.noise @ slopes)
         delay = max(0.0, float(slopes @ self.delay @ slopes))
         model = max(0.0, float(slopes @ self.covariance @ slopes) - noise - delay)
-        own = {"noise": float(np.sqrt(max(noise, 0.0))), "model": float(np.sqrt(model)), "skew": float(np.sqrt(delay))}
+        own = {
+            "noise": float(np.sqrt(max(noise, 0.0))),
+            "model": float(np.sqrt(model)),
+            "skew": float(np.sqrt(delay)),
+        }
         return Quantity(value, own, {name: float(slopes @ shift) for name, shift in self.shifts.items()})
 
 
-def leg_curve(fit: Fit, scale: Scale, *, temperature_degC: float, shifts: Mapping[str, FloatArray]) -> LegCurve:
+def leg_curve(
+    fit: Fit, scale: Scale, *, temperature_degC: float, shifts: Mapping[str, FloatArray]
+) -> LegCurve:
     """Bring a fit into SI; ``shifts`` are the parameters' changes for one standard uncertainty of each cause."""
     inside = fit.model.current <= 1.0 + 1e-12
-    covariance = fit.covariance[:-COMMON, :-COMMON]
+    own = fit.model.parameters
+    covariance = fit.covariance[:own, :own]
     return LegCurve(
         temperature_degC=temperature_degC,
         current=fit.model.current[inside] * scale.current,
@@ -186,8 +193,8 @@ def leg_curve(fit: Fit, scale: Scale, *, temperature_degC: float, shifts: Mappin
         inductance_slopes=fit.shape.inductance_slopes[inside] * scale.inductance,
         flux_slopes=fit.shape.flux_slopes[inside] * scale.flux,
         covariance=covariance,
-        noise=fit.noise_covariance[:-COMMON, :-COMMON],
-        delay=covariance - fit.covariance_without_delay[:-COMMON, :-COMMON],
+        noise=fit.noise_covariance[:own, :own],
+        delay=covariance - fit.covariance_without_delay[:own, :own],
         shifts=shifts,
         fit=fit,
         scale=scale,

@@ -1,29 +1,30 @@
 """What the fit sees of a leg: bins of ramps, or readings of a meter, scaled, with the covariance of their noise.
 
-White noise of the current is independent from bin to bin. Noise of the voltage is not once it is integrated: per
-ramp, λ carries a random walk, a straight line from the uncertain voltage offset and a constant from the uncertain
-start; the current's own offset is one more constant. All are common to the bins of a ramp and independent between
-ramps, and enter as i = g(λ) through dg/dλ = 1/L. `whiten` makes independent unit-variance rows of them.
+White noise of the current is independent from bin to bin, or nearly so where the undoing of the shunt's inductance has
+smoothed it. Noise of the voltage is not once it is integrated: per ramp, λ carries a random walk, a straight line
+from the uncertain voltage offset and a constant from a jittering start; the current's own offset is one more constant.
+All are common to the bins of a ramp and independent between ramps, and reach the current through dg/dλ = 1/L.
 """
 
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
+from itertools import pairwise
 from typing import Protocol
 
 import numpy as np
 from scipy.linalg import cholesky, solve_triangular
 
 from runner.arrays import FloatArray
+from runner.extraction.common_effects import SHUNT, CommonEffects, Scales, ShuntLag, effects_of, shunt_lag
 from runner.extraction.curve_model import CurveModel, Shape
 from runner.extraction.ramp import Ramp
-
-Whitener = Callable[[FloatArray], FloatArray]
 
 
 class FitData(Protocol):
     """What `curve_fit` needs: n rows, their residuals about a curve, and their noise.
 
     ``noise_known``: False lets the fit find the noise's size freely, True only lets it grow a little.
+    ``common``: what the rows share. ``temperatures`` [n] degC of the part at each row.
     """
 
     @property
@@ -31,12 +32,15 @@ class FitData(Protocol):
     @property
     def noise_known(self) -> bool: ...
     @property
-    def delay_sigmas(self) -> tuple[float, float]: ...
+    def common(self) -> CommonEffects: ...
     @property
     def temperatures(self) -> FloatArray: ...
     def pilot(self) -> tuple[FloatArray, FloatArray]: ...
     def linearise(
         self, model: CurveModel, shape: Shape, z: FloatArray
+    ) -> tuple[FloatArray, FloatArray, FloatArray]: ...
+    def approach(
+        self, model: CurveModel, shape: Shape, z: FloatArray, *, held: FloatArray
     ) -> tuple[FloatArray, FloatArray, FloatArray]: ...
     def noise(self, inductance: FloatArray) -> "Noise": ...
 
@@ -71,10 +75,8 @@ class Noise:
 
 @dataclass(frozen=True, slots=True)
 class CurveData:
-    """n bins of all ramps: scaled ``current``, ``flux``, ``spread`` (variance of λ in the bin), ``delay_flux`` (dλ per
-    scaled delay) and ``delay_current`` (di per scaled time constant of the shunt); ``members``: which rows belong to
-    which ramp. ``current_scale`` [A], ``flux_scale`` [Wb], ``delay_scale`` [s]. ``delay_sigmas``: scaled standard
-    uncertainties of skew and shunt time constant, the two common parameters of the fit.
+    """n bins of all ramps: scaled ``current``, ``flux``, ``spread`` (variance of λ in the bin); ``charge`` [A s] and
+    ``volt_seconds`` [V s] as they are; ``members``: which rows belong to which ramp.
     """
 
     ramps: tuple[Ramp, ...]
@@ -84,16 +86,9 @@ class CurveData:
     charge: FloatArray
     volt_seconds: FloatArray
     spread: FloatArray
-    delay_flux: FloatArray
-    delay_current: FloatArray
-    delay_sigmas: tuple[float, float]
-    current_scale: float
-    flux_scale: float
-    delay_scale: float
-
-    @property
-    def inductance_scale(self) -> float:
-        return self.flux_scale / self.current_scale
+    scales: Scales
+    common: CommonEffects
+    shunt: ShuntLag
 
     @property
     def rows(self) -> int:
@@ -105,7 +100,6 @@ class CurveData:
 
     @property
     def temperatures(self) -> FloatArray:
-        """Of the part at each row [n] degC."""
         return np.concatenate([np.full(len(ramp.current), ramp.temperature_degC) for ramp in self.ramps])
 
     def with_rows(self, current: FloatArray, flux: FloatArray) -> "CurveData":
@@ -122,64 +116,89 @@ class CurveData:
         self, model: CurveModel, shape: Shape, z: FloatArray
     ) -> tuple[FloatArray, FloatArray, FloatArray]:
         """Residual currents [n], slopes of the curve's current with respect to z [n, p], and L at the bins [n]."""
-        flux = self.flux + z[-2] * self.delay_flux
-        current, inductance, bend, slopes = model.invert(shape, flux)
+        shared = z[model.parameters :]
+        shunt = float(shared[SHUNT])
+        current, inductance, bend, slopes = model.invert(shape, self.flux + self.common.flux @ shared)
+        lead, missing = self.shunt.effect(inductance)
         # The mean current of a bin is not the current at its mean flux: half of g'' times the variance of λ inside.
-        measured = self.current - z[-1] * self.delay_current
-        residual = measured - current + 0.5 * bend / inductance**3 * self.spread
-        return residual, np.column_stack([slopes, self.delay_flux / inductance, self.delay_current]), inductance
+        curved = -0.5 * bend / inductance**3 * self.spread
+        measured = self.current + self.common.current @ shared - shunt * lead
+        residual = measured - (current + shunt * missing / inductance + curved)
+        effects = self.common.flux / inductance[:, None] - self.common.current
+        effects[:, SHUNT] = lead + missing / inductance
+        if slopes.shape[1]:  # a larger L makes the shunt's effect smaller in proportion
+            slopes = slopes - (shunt * lead)[:, None] * model.log_slopes(shape, current)
+        return residual, np.hstack([slopes, effects]), inductance
+
+    def approach(
+        self, model: CurveModel, shape: Shape, z: FloatArray, *, held: FloatArray
+    ) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """`linearise` for a curve that is still far off: λ compared at the measured current, then divided by the L
+        that is ``held`` [n] (the present one, or a misfit could be made small by making L large).
+
+        To first order the same residuals; but they are nearly linear in the parameters, however far away these are,
+        where i at a given λ runs away as soon as a guessed curve saturates too early. The noise of the current stands
+        on the abscissa here, so the last turns are not made this way.
+        """
+        shared = z[model.parameters :]
+        shunt = float(shared[SHUNT])
+        lead, missing = self.shunt.effect(held)
+        flux = self.flux + self.common.flux @ shared + shunt * missing
+        current = self.current + self.common.current @ shared - shunt * lead
+        found, inductance, slopes = model.at_current(shape, current)
+        effects = self.common.flux / held[:, None] - self.common.current
+        effects[:, SHUNT] = lead + missing / held
+        return (found - flux) / held, np.hstack([-slopes / held[:, None], effects]), inductance
 
     def noise(self, inductance: FloatArray) -> Noise:
-        return Noise(tuple(factors(self, inductance)), self.members)
+        return Noise(tuple(_factors(self, inductance)), self.members)
 
 
-def lay_out(ramps: Sequence[Ramp], resistance: float, *, skew: float = 0.0, shunt_time: float = 0.0) -> CurveData:
+def lay_out(
+    ramps: Sequence[Ramp], resistance: float, *, skew: float = 0.0, shunt_time: float = 0.0
+) -> CurveData:
     """Scale the bins of ``ramps``.
 
     ``resistance`` [ohm] of the winding; ``skew``, ``shunt_time``: standard uncertainties of the channels' skew
     (infinite: to be found) and of the shunt's time constant [s].
     """
     sizes = np.cumsum([0] + [len(ramp.current) for ramp in ramps])
-    members = tuple(slice(int(a), int(b)) for a, b in zip(sizes[:-1], sizes[1:], strict=True))
+    members = tuple(slice(int(a), int(b)) for a, b in pairwise(sizes))
     current = np.concatenate([ramp.current for ramp in ramps])
     flux = np.concatenate([ramp.flux(resistance) for ramp in ramps])
     top = float(current.max())
     low = current < 0.3 * top
     slope = float(flux[low] @ current[low] / (current[low] @ current[low]))
-    flux_scale = slope * top
-    delay_scale = 1e-3 * max(ramp.width for ramp in ramps)
-    voltage = np.concatenate([ramp.voltage for ramp in ramps])
+    scales = Scales(top, slope * top, 1e-3 * max(ramp.width for ramp in ramps), resistance)
     return CurveData(
-        tuple(ramps),
-        members,
-        current / top,
-        flux / flux_scale,
-        np.concatenate([ramp.charge for ramp in ramps]),
-        np.concatenate([ramp.volt_seconds for ramp in ramps]),
-        np.concatenate([ramp.spread for ramp in ramps]) / flux_scale**2,
-        voltage * delay_scale / flux_scale,
-        np.concatenate([ramp.lead for ramp in ramps]) * delay_scale / top,
-        (_bounded(skew / delay_scale), _bounded(shunt_time / delay_scale)),
-        top,
-        flux_scale,
-        delay_scale,
+        ramps=tuple(ramps),
+        members=members,
+        current=current / top,
+        flux=flux / scales.flux,
+        charge=np.concatenate([ramp.charge for ramp in ramps]),
+        volt_seconds=np.concatenate([ramp.volt_seconds for ramp in ramps]),
+        spread=np.concatenate([ramp.spread for ramp in ramps]) / scales.flux**2,
+        scales=scales,
+        common=effects_of(ramps, scales, skew=skew, shunt_time=shunt_time),
+        shunt=shunt_lag(ramps, members, scales),
     )
 
 
-def factors(data: CurveData, inductance: FloatArray) -> list[FloatArray]:
+def _factors(data: CurveData, inductance: FloatArray) -> list[FloatArray]:
     """Cholesky factor of each ramp's covariance (scaled current), ``inductance`` [n] scaled at the bins."""
     found = []
+    scale = data.scales.current
     for ramp, rows in zip(data.ramps, data.members, strict=True):
-        slope = 1.0 / inductance[rows] / data.flux_scale  # scaled current per Wb
+        slope = 1.0 / inductance[rows] / data.scales.flux  # scaled current per Wb
         t = np.maximum(ramp.time, 0.0)
         flux_part = ramp.walk**2 * np.minimum(t[:, None], t[None, :])
-        flux_part += ramp.slope_uncertainty**2 * np.outer(t, t) + ramp.start_uncertainty**2
+        flux_part += ramp.slope_uncertainty**2 * np.outer(t, t) + (ramp.start_voltage * ramp.jitter) ** 2
         covariance = flux_part * np.outer(slope, slope)
-        covariance += (ramp.level_uncertainty / data.current_scale) ** 2
+        covariance += (ramp.level_uncertainty / scale) ** 2
         if ramp.shunt_time > 0:
-            fading = np.exp(-t / ramp.shunt_time) * ramp.transient / data.current_scale
+            fading = np.exp(-t / ramp.shunt_time) * ramp.start_rate * ramp.jitter / scale
             covariance += np.outer(fading, fading)
-        covariance += ramp.noise_density / data.current_scale**2 * smoothed_noise(ramp.edges, ramp.shunt_time)
+        covariance += ramp.noise_density / scale**2 * smoothed_noise(ramp.edges, ramp.shunt_time)
         found.append(cholesky(covariance, lower=True, check_finite=False))
     return found
 
@@ -197,8 +216,3 @@ def smoothed_noise(edges: FloatArray, time_constant: float) -> FloatArray:
     half = np.triu(np.outer(fall, fall) * np.exp(-gap / time_constant) * time_constant / 2, 1)
     covariance = half + half.T + np.diag(lengths - time_constant * fall)
     return np.asarray(covariance / np.outer(lengths, lengths))
-
-
-def _bounded(sigma: float) -> float:
-    """A prior's width between "exact" and "unknown" that the algebra can bear."""
-    return float(np.clip(sigma, 1e-6, 1e3))

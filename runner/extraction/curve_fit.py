@@ -6,7 +6,9 @@ deviation's size and length and the noise's factor by the marginal likelihood of
 evidence is kept. Covariances are those of the last linearisation.
 """
 
+from collections.abc import Callable
 from dataclasses import dataclass, replace
+from functools import partial
 
 import numpy as np
 from scipy.optimize import least_squares
@@ -18,22 +20,31 @@ from runner.extraction.deviation import KNOTS
 from runner.extraction.evidence import Problem
 from runner.extraction.laws import LAWS, PRIOR_MEAN, PRIOR_SIGMA, Law
 
+Way = Callable[[CurveModel, Shape, FloatArray], tuple[FloatArray, FloatArray, FloatArray]]
+
 CANDIDATES = 2
-COMMON = 2  # skew and shunt time constant stand behind law and deviation in z
-TURNS = 16
-# While the residuals are far larger than the noise (log of their ratio) the linearised problem promises too much and
-# its evidence means nothing: until then the curve is led there with a deviation of this log size and log length, and
-# with residuals believed to be half of what they are.
+SMALL = 5e-3  # a deviation (of log L) that hardly matters
+TURNS = 18
+# While the residuals are far larger than the noise (log of their ratio) the linearised problem promises too much. Until
+# then a turn believes in residuals half of the present ones and no less; and the law and the delays go first, without
+# a deviation (log size, log length), so that it does not learn what they explain.
 FAR = 0.7
-APPROACH = (-1.6, -1.2)
+LAW_ALONE = (-7.0, -1.2)  # and as small below the knee
+LAW_TURNS, DAMPED_TURNS = 8, 14
+REFRESH = (
+    0,
+    1,
+    3,
+    6,
+)  # turns at which the noise of λ, which reaches the current through 1/L, is worked out anew
 
 
 @dataclass(frozen=True, slots=True)
 class Fit:
-    """A fitted curve in scaled units; p parameters: law, deviation, skew, shunt time.
+    """A fitted curve in scaled units; p parameters: law, deviation, common effects.
 
-    ``covariance`` [p, p] of z, ``covariance_without_delay`` the same with the last two held, and what of that is noise
-    and not model; ``gain`` [p, n]: how z moves when the rows move; ``size``, ``length``, ``inflation``: what the
+    ``covariance`` [p, p] of z, ``covariance_without_delay`` the same with the common ones held, and what of that is noise
+    and not model; ``gain`` [p, n]: how z moves when the rows move; ``size``, ``flat_size``, ``length``, ``inflation``: what the
     evidence chose; ``misfit``: mean square of the whitened residuals.
     """
 
@@ -49,6 +60,7 @@ class Fit:
     residuals: FloatArray
     whitened: FloatArray
     size: float
+    flat_size: float
     length: float
     inflation: float
     misfit: float
@@ -62,46 +74,67 @@ def fit_curve(data: FitData) -> Fit:
     ``data``: ramps or readings of one part at one temperature.
     """
     pilots = sorted((_pilot(law, data) for law in LAWS), key=lambda found: found[1])
-    fits = [_fit_law(law, data, start) for start, _, law in pilots[:CANDIDATES]]
+    fits: list[Fit] = []
+    for start, _, law in pilots[:CANDIDATES]:
+        fits.append(_fit_law(law, data, start))
+        if max(fits[-1].size, fits[-1].flat_size) < SMALL and fits[-1].misfit < 1.5:
+            break  # a law that fits almost by itself leaves another nothing to do better
     return max(fits, key=lambda fit: fit.evidence)
 
 
 def refit(fit: Fit, data: FitData, turns: int = 3) -> Fit:
     """The same fit to other values of the same rows; what the evidence chose, and the covariances, are kept."""
-    hyper = np.log(np.array([fit.size, fit.length, fit.inflation]))
+    hyper = np.log(np.array([fit.size, fit.length, fit.inflation, fit.flat_size]))
     mean, prior = _priors(fit.model.law, data)
     noise = data.noise(fit.inductance_at_rows)
     z = fit.z
     for _ in range(turns):
-        problem, *_ = _problem_at(fit.model, data, z, noise, mean, prior)
-        z, *_ = _move(fit.model, data, noise, z, problem, hyper)
-    problem, _, shape, residual, inductance = _problem_at(fit.model, data, z, noise, mean, prior)
+        problem, *_ = _problem_at(fit.model, data, z, noise, mean, prior, way=data.linearise)
+        z, *_ = _move(fit.model, data.linearise, noise, z, problem, hyper)
+    problem, shape, residual, inductance = _problem_at(
+        fit.model, data, z, noise, mean, prior, way=data.linearise
+    )
     return replace(
-        fit, data=data, z=z, shape=shape, residuals=residual, inductance_at_rows=inductance, misfit=problem.misfit
+        fit,
+        data=data,
+        z=z,
+        shape=shape,
+        residuals=residual,
+        inductance_at_rows=inductance,
+        misfit=problem.misfit,
     )
 
 
 def _priors(law: Law, data: FitData) -> tuple[FloatArray, FloatArray]:
     """Mean and inverse variance of the parameters' priors; the deviation's knots hold ones, which nobody reads."""
     split = law.parameters
-    mean, prior = np.zeros(split + KNOTS + COMMON), np.ones(split + KNOTS + COMMON)
+    size = split + KNOTS + len(data.common.sigmas)
+    mean, prior = np.zeros(size), np.ones(size)
     mean[:split] = PRIOR_MEAN[:split]
     prior[:split] = PRIOR_SIGMA[:split] ** -2.0
-    prior[-COMMON:] = np.array(data.delay_sigmas) ** -2.0
+    prior[split + KNOTS :] = data.common.sigmas**-2.0
     return mean, prior
 
 
 def _problem_at(
-    model: CurveModel, data: FitData, z: FloatArray, noise: Noise | None, mean: FloatArray, prior: FloatArray
-) -> tuple[Problem, Noise, Shape, FloatArray, FloatArray]:
-    """The problem linearised at z; the noise is worked out anew when None."""
-    shape = model.shape(z[:-COMMON])
-    residual, jacobian, inductance = data.linearise(model, shape, z)
-    noise = noise or data.noise(inductance)
+    model: CurveModel,
+    data: FitData,
+    z: FloatArray,
+    noise: Noise,
+    mean: FloatArray,
+    prior: FloatArray,
+    *,
+    way: Way,
+) -> tuple[Problem, Shape, FloatArray, FloatArray]:
+    """The problem linearised at z, with the curve, residuals and L at the rows."""
+    shape = model.shape(z[: model.parameters])
+    residual, jacobian, inductance = way(model, shape, z)
     r, j = noise.whiten(residual), noise.whiten(jacobian)
     split = model.law.parameters
-    made = Problem(r, j, z, prior=prior, mean=mean, split=split, noise_known=data.noise_known)
-    return made, noise, shape, residual, inductance
+    made = Problem(
+        r, j, z, prior=prior, mean=mean, split=split, fallen=model.fallen, noise_known=data.noise_known
+    )
+    return made, shape, residual, inductance
 
 
 def _pilot(law: Law, data: FitData) -> tuple[FloatArray, float, Law]:
@@ -131,31 +164,44 @@ def _pilot(law: Law, data: FitData) -> tuple[FloatArray, float, Law]:
 
 def _fit_law(law: Law, data: FitData, start: FloatArray) -> Fit:
     model = CurveModel.around(law, start)
-    z = np.concatenate([start, np.zeros(KNOTS + COMMON)])
+    z = np.concatenate([start, np.zeros(KNOTS + len(data.common.sigmas))])
     mean, prior = _priors(law, data)
-    hyper, value = np.array([-4.0, -1.2, 0.3]), np.inf
+    hyper, value = np.array([-4.0, -1.2, 0.3, -6.0]), np.inf
     noise: Noise | None = None
+    by_law, near, last, begun = True, False, np.inf, 0
     for turn in range(TURNS):
-        # The noise of λ reaches the current through 1/L: twice is enough to have it right.
-        problem, noise, *_ = _problem_at(model, data, z, None if turn in (0, 1, 3) else noise, mean, prior)
+        inductance = data.linearise(model, model.plain_shape(z[: model.parameters]), z)[2]
+        if turn in REFRESH:
+            noise = data.noise(inductance)
+        assert noise is not None
+        way: Way = data.linearise if near else partial(data.approach, held=inductance)
+        problem, *_ = _problem_at(model, data, z, noise, mean, prior, way=way)
         away = 0.5 * float(np.log(problem.misfit))
-        if far := away > FAR and turn < TURNS // 2:
-            hyper = np.array([*APPROACH, away - 0.7])
+        if by_law and (away < FAR or turn >= LAW_TURNS or (turn > 1 and away > last - 0.1)):
+            by_law, begun = False, turn
+        last = away
+        damped = away > FAR and turn < DAMPED_TURNS
+        if by_law:
+            hyper = np.array([*LAW_ALONE, max(0.0, away - FAR), LAW_ALONE[0]])
         else:
-            hyper = problem.best_hyper(hyper, 1.0 if turn < 2 else 0.3)
-        z, before, after, whole = _move(model, data, noise, z, problem, hyper)
+            least = max(0.0, away - FAR) if damped else -np.inf
+            fresh = turn - begun < 2
+            hyper = problem.best_hyper(hyper, 1.0 if fresh else 0.3, least=least, most=120 if fresh else 50)
+        z, before, after = _move(model, way, noise, z, problem, hyper)
         previous, value = value, problem.evidence(hyper) + noise.log_determinant
-        if turn > 2 and whole and not far and abs(before - after) < 0.05 and abs(previous - value) < 0.1:
+        if near and abs(before - after) < 0.1 and abs(previous - value) < 0.3:
             break
-    problem, noise, shape, residual, inductance = _problem_at(model, data, z, noise, mean, prior)
+        if not near and not by_law and not damped:
+            near, begun = True, turn + 1
+    assert noise is not None
+    problem, shape, residual, inductance = _problem_at(model, data, z, noise, mean, prior, way=data.linearise)
     return _finish(problem, model, data, noise, shape, hyper, inductance, residual)
 
 
 def _move(
-    model: CurveModel, data: FitData, noise: Noise, z: FloatArray, problem: Problem, hyper: FloatArray
-) -> tuple[FloatArray, float, float, bool]:
-    """The way to the linearised best, as far as the true misfit falls: z, misfit before and after, and whether it
-    went all the way."""
+    model: CurveModel, way: Way, noise: Noise, z: FloatArray, problem: Problem, hyper: FloatArray
+) -> tuple[FloatArray, float, float]:
+    """The way to the linearised best, as far as the true misfit falls: z, misfit before and after."""
     target, precision = problem.solution(hyper), problem.precision(hyper)
     weight = float(np.exp(-2 * hyper[2]))
 
@@ -167,12 +213,12 @@ def _move(
     step = 1.0
     while True:
         trial = z + step * (target - z)
-        shape = model.plain_shape(trial[:-COMMON])
+        shape = model.plain_shape(trial[: model.parameters])
         after = np.inf
         if np.all(np.isfinite(shape.flux)) and np.all(np.diff(shape.flux) > 0):
-            after = misfit(trial, noise.whiten(data.linearise(model, shape, trial)[0]))
+            after = misfit(trial, noise.whiten(way(model, shape, trial)[0]))
         if after <= before + 1e-6 * abs(before) or step < 1e-3:
-            return trial, before, after, step == 1.0
+            return trial, before, after
         step /= 2
 
 
@@ -189,7 +235,7 @@ def _finish(
     weight = float(np.exp(-2 * hyper[2]))
     covariance = problem.covariance(hyper)
     # The same with the delays held: what they add is told apart from noise and model.
-    held = problem.covariance(hyper, held=COMMON)
+    held = problem.covariance(hyper, held=len(data.common.sigmas))
     return Fit(
         data=data,
         model=model,
@@ -203,6 +249,7 @@ def _finish(
         residuals=residual,
         whitened=problem.r,
         size=float(np.exp(hyper[0])),
+        flat_size=float(np.exp(hyper[3])),
         length=float(np.exp(hyper[1])),
         inflation=float(np.exp(hyper[2])),
         misfit=problem.misfit,

@@ -11,7 +11,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from runner.arrays import FloatArray
-from runner.extraction.deviation import KNOTS, arc_length, knot_matrix
+from runner.extraction.deviation import KNOTS, arc_length, fallen, knot_matrix
 from runner.extraction.laws import Law
 
 GRID = 801
@@ -30,17 +30,21 @@ class Shape:
 
 @dataclass(frozen=True, slots=True)
 class CurveModel:
-    """A law with room for a deviation; ``current`` [GRID] is the scaled grid."""
+    """A law with room for a deviation; ``current`` [GRID] is the scaled grid, ``fallen`` [KNOTS]
+    how far the law is saturated at the deviation's knots."""
 
     law: Law
     current: FloatArray
     basis: FloatArray
+    fallen: FloatArray
 
     @staticmethod
     def around(law: Law, parameters: FloatArray) -> "CurveModel":
         """The model whose deviation is laid out along the law at ``parameters``."""
         current = np.linspace(0.0, BEYOND, GRID)
-        return CurveModel(law, current, knot_matrix(arc_length(current, law.inductance(current, parameters))))
+        inductance = law.inductance(current, parameters)
+        basis = knot_matrix(arc_length(current, inductance))
+        return CurveModel(law, current, basis, fallen(current, inductance))
 
     @property
     def parameters(self) -> int:
@@ -65,6 +69,25 @@ class CurveModel:
         inductance = self.law.inductance(self.current, z[:split]) * factor
         none = np.empty((len(inductance), 0))
         return Shape(inductance, running_integral(inductance, float(self.current[1])), none, none)
+
+    def at_current(self, shape: Shape, current: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """λ and L_d at ``current`` [n], and dλ/dz [n, p]; currents beyond the grid count as its ends."""
+        step = float(self.current[1])
+        place = np.clip(current, 0.0, self.current[-1]) / step
+        cell = np.minimum(place.astype(np.int64), GRID - 2)
+        f = place - cell
+        low, high = shape.inductance[cell], shape.inductance[cell + 1]
+        flux = shape.flux[cell] + step * f * (low + 0.5 * f * (high - low))
+        slopes = shape.flux_slopes[cell] * (1 - f)[:, None] + shape.flux_slopes[cell + 1] * f[:, None]
+        return flux, low + f * (high - low), slopes
+
+    def log_slopes(self, shape: Shape, current: FloatArray) -> FloatArray:
+        """d(log L_d)/dz [n, p] at ``current`` [n]."""
+        place = np.clip(current, 0.0, self.current[-1]) / float(self.current[1])
+        cell = np.minimum(place.astype(np.int64), GRID - 2)
+        f = (place - cell)[:, None]
+        slopes = shape.inductance_slopes / shape.inductance[:, None]
+        return np.asarray(slopes[cell] * (1 - f) + slopes[cell + 1] * f)
 
     def invert(self, shape: Shape, flux: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
         """Current g, differential inductance, dL/di at ``flux`` [n], and dg/dz [n, p]; straight on beyond the grid."""

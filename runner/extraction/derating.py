@@ -9,7 +9,9 @@ from runner.extraction.curve import LegCurve, Quantity
 from runner.extraction.part_result import Knees, Settings, interval
 
 
-def margins(legs: Sequence[LegCurve], knees: Knees, settings: Settings, *, rated: float) -> list[dict[str, Any]]:
+def margins(
+    legs: Sequence[LegCurve], knees: Knees, settings: Settings, *, rated: float
+) -> list[dict[str, Any]]:
     """Isat over the rated current, less one, with its interval; ``rated`` [A]."""
     rows = []
     for drop in settings.drops:
@@ -55,7 +57,9 @@ def temperature_coefficients(
     """
     rows = []
     for drop in settings.drops:
-        found = [(leg.temperature_degC, knee) for leg, knee in zip(legs, knees.found[drop], strict=True) if knee]
+        found = [
+            (leg.temperature_degC, knee) for leg, knee in zip(legs, knees.found[drop], strict=True) if knee
+        ]
         if len(found) < 2:
             continue
         at = np.array([t for t, _ in found])

@@ -1,8 +1,8 @@
 """The smooth deviation from a law: a Gaussian process on the logarithm of the inductance.
 
-log L = log(law) + d(u), with d of standard deviation ``size`` and Matérn 5/2 correlation over ``length``; u is the
+log L = log(law) + d(u), with d of some standard deviation and Matérn 5/2 correlation over ``length``; u is the
 arc length along the law's own L(i) drawn in a unit square, so that a knee, where things change quickly, gets more
-room than the flat before it. Size and length are found by marginal likelihood (`curve.py`): a law that fits gets a
+room than the flat before it. Sizes and length are found by marginal likelihood (`evidence.py`): a law that fits gets a
 deviation of nothing. Source of the covariance: M. L. Stein, Interpolation of Spatial Data (1999).
 """
 
@@ -25,6 +25,13 @@ def arc_length(current: FloatArray, inductance: FloatArray) -> FloatArray:
 def knot_matrix(u: FloatArray) -> FloatArray:
     """Values at u [n] from values at the knots: cubic spline interpolation, [n, KNOTS]."""
     return np.asarray(make_interp_spline(knots(), np.eye(KNOTS), k=3)(u))
+
+
+def fallen(current: FloatArray, inductance: FloatArray) -> FloatArray:
+    """How far L(i) has fallen at the knots, as a fraction of its first value [KNOTS], 0 to 1."""
+    u = arc_length(current, inductance)
+    share = np.interp(knots(), u, 1.0 - inductance / inductance[0])
+    return np.asarray(np.clip(share, 0.0, 1.0))
 
 
 def knots() -> FloatArray:

@@ -14,7 +14,6 @@ from runner.arrays import FloatArray
 from runner.extraction.bias import ReadingData
 from runner.extraction.curve import LegCurve
 from runner.extraction.curve_data import CurveData
-from runner.extraction.curve_fit import COMMON
 from runner.extraction.surface import Surface
 
 WORTH = 0.01  # K: smaller departures are left alone
@@ -36,7 +35,7 @@ def _corrected(leg: LegCurve, surface: Surface) -> LegCurve:
     move = _row_slopes(leg, surface) * away
     fit = leg.fit
     z = fit.z - fit.gain @ move
-    return leg.with_fit(replace(fit, z=z, shape=fit.model.shape(z[:-COMMON])))
+    return leg.with_fit(replace(fit, z=z, shape=fit.model.shape(z[: fit.model.parameters])))
 
 
 def _row_slopes(leg: LegCurve, surface: Surface) -> FloatArray:

@@ -2,27 +2,33 @@
 
 At a curve z the rows obey r = J·(z' − z) + noise. Law and common parameters have fixed normal priors, the deviation a
 Gaussian process of a size and length that are to be found, the noise a factor by which it may be larger than said.
-For a given length everything but a 40 × 40 matrix is done once, so that trying sizes and factors costs next to
-nothing. With flat priors of the law this is restricted maximum likelihood (REML; Patterson & Thompson, Biometrika 58
+Everything but a 40 × 40 matrix is done once, so that trying sizes, lengths and factors costs next to nothing. With flat priors of the law this is restricted maximum likelihood (REML; Patterson & Thompson, Biometrika 58
 (1971) 545).
 """
 
+from collections.abc import Callable
 from functools import lru_cache
+from typing import Any
 
 import numpy as np
+from scipy.linalg.lapack import dpotrf, dpotrs, dtrtrs
 from scipy.optimize import minimize
 
 from runner.arrays import FloatArray
 from runner.extraction.deviation import KNOTS, correlation
 
 SMALLEST_SIZE = 1e-5
-LENGTH_STEP = 0.05  # lengths are tried on a grid of their logarithm, so that what belongs to one is computed once
+LENGTH_STEP = (
+    0.05  # lengths are tried on a grid of their logarithm, so that what belongs to one is computed once
+)
 # What is thought of the deviation before the data speak: mean and standard deviation of log size, log length (in
-# units of the arc), log noise factor. Where the noise is not known beforehand its factor is nearly free.
-HYPER_MEAN = np.array([-6.0, -1.2, 0.0])
-HYPER_SIGMA = np.array([3.0, 0.7, 0.3])
-HYPER_SIGMA_FREE = np.array([3.0, 0.7, 3.0])
-HYPER_HIGH = np.array([1.0, 1.0, 12.0])
+# units of the arc), log noise factor, log size where the core is not yet saturated. Where the noise is not known
+# beforehand its factor is nearly free.
+HYPER_MEAN = np.array([-6.0, -1.2, 0.0, -7.0])
+HYPER_SIGMA = np.array([3.0, 0.7, 0.3, 1.5])
+HYPER_SIGMA_FREE = np.array([3.0, 0.7, 3.0, 1.5])
+HYPER_HIGH = np.array([0.7, 1.0, 12.0, 0.0])
+SPREAD = np.array([2.0, 0.5, 0.3, 1.0])
 
 
 @lru_cache(maxsize=256)
@@ -34,15 +40,16 @@ def correlation_root(step: int) -> FloatArray:
 class Problem:
     """Whitened residuals ``r`` [n] and slopes ``j`` [n, p] at ``z`` [p]; ``split`` parameters of the law come first.
 
-    ``prior`` [p]: inverse variances (those of the deviation's knots are not looked at); ``mean`` [p].
+    ``prior`` [p]: inverse variances (those of the deviation's knots are not looked at); ``mean`` [p]; ``fallen``
+    [KNOTS]: how far the core is saturated at the knots, 0 to 1.
     """
 
     def __init__(
         self, r: FloatArray, j: FloatArray, z: FloatArray, *, prior: FloatArray, mean: FloatArray, split: int,
-        noise_known: bool,
+        fallen: FloatArray, noise_known: bool,
     ) -> None:  # fmt: skip
         self.r, self.j, self.z, self.split = r, j, z, split
-        self.prior, self.mean, self.noise_known = prior, mean, noise_known
+        self.prior, self.mean, self.fallen, self.noise_known = prior, mean, fallen, noise_known
         self.inside = slice(split, split + KNOTS)
         # y: the residuals as seen from no deviation and no delay, about which the priors of those are centred.
         y = r + j[:, split:] @ z[split:]
@@ -52,7 +59,6 @@ class Problem:
         self.away = np.zeros(len(z))
         self.away[:split] = (z - mean)[:split]
         self.prior_determinant = float(np.log(self.unit_prior).sum())
-        self._by_length: dict[int, tuple[FloatArray, FloatArray]] = {}
 
     @property
     def misfit(self) -> float:
@@ -62,34 +68,38 @@ class Problem:
     def evidence(self, hyper: FloatArray) -> float:
         """−2 log of marginal likelihood times the hyperparameters' prior, up to a constant."""
         root, gradient, weight = self._normal_equations(hyper)
-        half = np.linalg.solve(root, gradient)
+        half, _ = dtrtrs(root, gradient, lower=1)
         rest = self.square * weight + float(self.away @ (self.unit_prior * self.away))
         determinant = 2 * float(np.log(np.diag(root)).sum()) - self.prior_determinant
         off = (hyper - HYPER_MEAN) / (HYPER_SIGMA if self.noise_known else HYPER_SIGMA_FREE)
         return rest - float(half @ half) + determinant + 2 * len(self.r) * float(hyper[2]) + float(off @ off)
 
-    def best_hyper(self, start: FloatArray, spread: float) -> FloatArray:
-        """The hyperparameters of largest evidence, looked for within about ``spread`` times (2, 0.5, 0.3)."""
+    def best_hyper(
+        self, start: FloatArray, spread: float, *, least: float = -np.inf, most: int = 120
+    ) -> FloatArray:
+        """The hyperparameters of largest evidence, looked for within about ``spread`` times `SPREAD`; the log of
+        the noise factor not below ``least``, with ``most`` steps."""
 
         def value(hyper: FloatArray) -> float:
-            inside = self._bounded(hyper)
+            inside = self._bounded(hyper, least)
             return self.evidence(inside) + 10 * float(np.abs(hyper - inside).sum())
 
-        simplex = np.vstack([start, start + spread * np.diag([2.0, 0.5, 0.3])])
-        options = {"initial_simplex": simplex, "xatol": 0.04, "fatol": 0.02, "maxiter": 120}
-        return self._bounded(np.asarray(minimize(value, start, method="Nelder-Mead", options=options).x))
+        simplex = np.vstack([start, start + spread * np.diag(SPREAD)])
+        options = {"initial_simplex": simplex, "xatol": 0.04, "fatol": 0.02, "maxiter": most}
+        return self._bounded(np.asarray(_minimize(value, start, options)), least)
 
     def solution(self, hyper: FloatArray) -> FloatArray:
         """The best z [p] of the linearised problem."""
         root, gradient, _ = self._normal_equations(hyper)
-        move = self.way(hyper) @ np.linalg.solve(root.T, np.linalg.solve(root, gradient))
+        unit, _ = dpotrs(root, gradient, lower=1)
+        move = self.way(hyper) @ unit
         move[: self.split] += self.z[: self.split]
         return np.asarray(move)
 
     def precision(self, hyper: FloatArray) -> FloatArray:
         """Inverse covariance of the prior of z [p, p]."""
         out = np.diag(self.prior)
-        inverse = np.linalg.inv(np.exp(hyper[0]) * correlation_root(_step(hyper)))
+        inverse = np.linalg.inv(self._root(hyper))
         out[self.inside, self.inside] = inverse.T @ inverse
         return out
 
@@ -104,33 +114,49 @@ class Problem:
     def way(self, hyper: FloatArray) -> FloatArray:
         """From independent unit normals to the deviation's knots, embedded among the other parameters [p, p]."""
         out = np.eye(len(self.z))
-        out[self.inside, self.inside] = np.exp(hyper[0]) * correlation_root(_step(hyper))
+        out[self.inside, self.inside] = self._root(hyper)
         return out
+
+    def _root(self, hyper: FloatArray) -> FloatArray:
+        """Square root of the deviation's prior covariance [KNOTS, KNOTS]."""
+        step = int(np.rint(hyper[1] / LENGTH_STEP))
+        return knot_sizes(hyper, self.fallen)[:, None] * correlation_root(step)
 
     def _normal_equations(self, hyper: FloatArray) -> tuple[FloatArray, FloatArray, float]:
         """Cholesky factor of the precision of the unit parameters, the gradient, and the weight of a row."""
-        matrix, right = self._at_length(_step(hyper))
-        size = np.ones(len(self.z))
-        size[self.inside] = np.exp(hyper[0])
+        shape, inside = self._root(hyper), self.inside
         weight = float(np.exp(-2 * hyper[2]))
-        h = matrix * np.outer(size, size * weight)
-        h[np.diag_indices(len(size))] += self.unit_prior
-        return np.linalg.cholesky(h), size * right * weight - self.unit_prior * self.away, weight
+        h, right = self.normal * weight, self.right * weight
+        h[:, inside] = h[:, inside] @ shape
+        h[inside] = shape.T @ h[inside]
+        right[inside] = shape.T @ right[inside]
+        h[np.diag_indices(len(right))] += self.unit_prior
+        # LAPACK by name: a thousand of these are done a fit, and the general routines' checks cost more than the work.
+        root, info = dpotrf(h, lower=1, clean=1, overwrite_a=1)
+        if info != 0:
+            raise np.linalg.LinAlgError("the linearised fit is singular")
+        return np.asarray(root), right - self.unit_prior * self.away, weight
 
-    def _at_length(self, step: int) -> tuple[FloatArray, FloatArray]:
-        if step not in self._by_length:
-            root = correlation_root(step)
-            matrix, right = self.normal.copy(), self.right.copy()
-            matrix[:, self.inside] = matrix[:, self.inside] @ root
-            matrix[self.inside] = root.T @ matrix[self.inside]
-            right[self.inside] = root.T @ right[self.inside]
-            self._by_length[step] = matrix, right
-        return self._by_length[step]
-
-    def _bounded(self, hyper: FloatArray) -> FloatArray:
-        low = [np.log(SMALLEST_SIZE), -3.0, 0.0 if self.noise_known else -12.0]
+    def _bounded(self, hyper: FloatArray, least: float) -> FloatArray:
+        low = [
+            np.log(SMALLEST_SIZE),
+            -3.0,
+            max(least, 0.0 if self.noise_known else -12.0),
+            np.log(SMALLEST_SIZE),
+        ]
         return np.asarray(np.clip(hyper, low, HYPER_HIGH))
 
 
-def _step(hyper: FloatArray) -> int:
-    return int(np.rint(hyper[1] / LENGTH_STEP))
+def _minimize(value: Callable[[FloatArray], float], start: FloatArray, options: dict[str, Any]) -> FloatArray:
+    # The stubs know the option's names one by one and not as a mapping.
+    return np.asarray(minimize(value, start, method="Nelder-Mead", options=options).x)  # type: ignore[call-overload]
+
+
+def knot_sizes(hyper: FloatArray, fallen: FloatArray) -> FloatArray:
+    """Standard deviation of the deviation at the knots [KNOTS].
+
+    Far below the knee the inductance of a core hardly changes, and every law says so; what laws disagree about is how
+    it falls. So the size grows with saturation from a small one of its own: a deviation as free at the bottom as at
+    the knee would explain there what the channels' delays explain, since every pulse begins in the same way.
+    """
+    return np.asarray(np.sqrt(np.exp(2 * hyper[3]) + (np.exp(hyper[0]) * fallen) ** 2))

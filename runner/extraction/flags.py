@@ -27,19 +27,37 @@ def capture_doubts(point: int, mean: MeanCapture, ramp: Ramp | None) -> list[Dou
     if mean.voltage_clipped:
         top = max(abs(setting.code_max * setting.v_scale), abs(setting.code_min * setting.v_scale))
         doubts.append(
-            Doubt(point, "clipped", f"voltage channel cut off near {top:.3g} V; raise its range. What follows was left out.")
+            Doubt(
+                point,
+                "clipped",
+                f"voltage channel cut off near {top:.3g} V; raise its range. What follows was left out.",
+            )
         )
     if mean.current_clipped:
         top = abs(setting.code_max * setting.i_scale + setting.i_offset)
         doubts.append(
             Doubt(
-                point, "clipped", f"current channel cut off near {top:.3g} A; raise the shunt's range. What follows was left out."
+                point,
+                "clipped",
+                f"current channel cut off near {top:.3g} A; raise the shunt's range. What follows was left out.",
             )
         )
     if not mean.has_pulse:
-        doubts.append(Doubt(point, "no_pulse", "no pulse stands out of the noise in these captures; check trigger and wiring."))
+        doubts.append(
+            Doubt(
+                point,
+                "no_pulse",
+                "no pulse stands out of the noise in these captures; check trigger and wiring.",
+            )
+        )
     elif ramp is None:
-        doubts.append(Doubt(point, "too_short", "too few clean samples of the rising current; sample faster or widen the pulse."))
+        doubts.append(
+            Doubt(
+                point,
+                "too_short",
+                "too few clean samples of the rising current; sample faster or widen the pulse.",
+            )
+        )
     if mean.odd:
         which = ", ".join(str(k) for k in mean.odd)
         doubts.append(Doubt(point, "odd_repeat", f"repeat {which} differs from the others and was left out."))
@@ -53,5 +71,11 @@ def capture_doubts(point: int, mean: MeanCapture, ramp: Ramp | None) -> list[Dou
             )
         )
     if mean.pretrigger < 8:
-        doubts.append(Doubt(point, "no_pretrigger", "nothing was captured before the pulse, so the channels' zeros are taken on trust."))
+        doubts.append(
+            Doubt(
+                point,
+                "no_pretrigger",
+                "nothing was captured before the pulse, so the channels' zeros are taken on trust.",
+            )
+        )
     return doubts

@@ -108,7 +108,11 @@ def extract(run: Run) -> Extraction:
         program=program,
         version=version,
         date=datetime.now(UTC).isoformat(timespec="seconds").replace("+00:00", "Z"),
-        settings={"coverage": settings.coverage, "reference": settings.reference, "drops": list(settings.drops)},
+        settings={
+            "coverage": settings.coverage,
+            "reference": settings.reference,
+            "drops": list(settings.drops),
+        },
         surfaces=tuple(surfaces),
         isats=tuple(isats),
     )
@@ -118,10 +122,11 @@ def extract(run: Run) -> Extraction:
 def _read_plan(run: Run) -> tuple[list[PartFacts], Calibration, Settings]:
     if run.kind == "captures":
         captures = parse_captures(run.plan_bytes, run.plan_name)
-        parts, asked, calibration = (captures.part,), captures.extract, from_captures_file(captures)
+        parts, asked = [captures.part], captures.extract
+        calibration = from_captures_file(captures)
     else:
         plan = parse_plan(run.plan_bytes, run.plan_name)
-        parts, asked = plan.parts, plan.extract
+        parts, asked = list(plan.parts), plan.extract
         calibration = from_bench(parse_bench(run.bench_bytes, run.bench_name))
     facts = [PartFacts(p.label, p.inductance, p.rated_current, p.resistance, p.core) for p in parts]
     return facts, calibration, Settings(asked.drops, asked.reference, asked.coverage, asked.guard_band)
@@ -140,9 +145,7 @@ def _record_doubts(run: Run, part: int) -> Iterator[Doubt]:
                 yield Doubt(int(points["point"][row]), str(flag.name).lower(), SENTENCES[flag])
 
 
-def _by_leg(
-    points: dict[str, Any], mine: IntArray, calibration: Calibration
-) -> list[tuple[float, IntArray]]:
+def _by_leg(points: dict[str, Any], mine: IntArray, calibration: Calibration) -> list[tuple[float, IntArray]]:
     """Rows of each leg with the part's mean temperature there, from cold to hot."""
     groups = []
     for leg in np.unique(points["leg"][mine]):
@@ -154,7 +157,7 @@ def _by_leg(
 def _body(points: dict[str, Any], rows: IntArray, calibration: Calibration) -> FloatArray:
     """The part's temperature at each row [degC]: its sensor's, or the set-point where that gave nothing."""
     body = points["body_temperature"][rows] - calibration.body_offset.value
-    return np.where(np.isfinite(body), body, points["temperature_setpoint"][rows])
+    return np.asarray(np.where(np.isfinite(body), body, points["temperature_setpoint"][rows]))
 
 
 def _pulse_legs(
@@ -305,12 +308,9 @@ def _bias_legs(
     points = run.points
     method = MethodLegs("bias")
     for at, rows in _by_leg(points, mine, calibration):
+        columns = ("bias_current", "inductance", "ac_resistance", "test_frequency")
         current, inductance = correct(
-            points["bias_current"][rows],
-            points["inductance"][rows],
-            points["ac_resistance"][rows],
-            points["test_frequency"][rows],
-            calibration,
+            {name: np.asarray(points[name][rows], dtype=np.float64) for name in columns}, calibration
         )
         good = np.isfinite(current) & np.isfinite(inductance)
         top = int(np.argmax(np.where(good, current, -1.0)))
@@ -321,7 +321,9 @@ def _bias_legs(
             temperature_degC=at,
         )
         if leg is None:
-            doubts.append(Doubt(-1, "too_few_readings", f"bias at {at:.1f} °C: too few readings for a curve."))
+            doubts.append(
+                Doubt(-1, "too_few_readings", f"bias at {at:.1f} °C: too few readings for a curve.")
+            )
             continue
         method.legs.append(leg)
         cold = rows[np.abs(points["bias_current_setpoint"][rows]) <= 0.05 * np.nanmax(current)]
@@ -366,7 +368,8 @@ def _isat_table(part: int, name: str, method: MethodLegs, settings: Settings) ->
 def _cross_check(
     pulse: MethodLegs, bias: MethodLegs, settings: Settings, doubts: list[Doubt]
 ) -> list[dict[str, Any]]:
-    assert pulse.knees is not None and bias.knees is not None
+    assert pulse.knees is not None
+    assert bias.knees is not None
     comparisons = compare((pulse.legs, pulse.knees), (bias.legs, bias.knees), settings)
     if (said := verdict(comparisons)) is not None:
         doubts.append(Doubt(-1, "methods_disagree", said))

@@ -38,7 +38,9 @@ def sensitivities(
     return np.stack(columns, axis=1)
 
 
-def second_order(hessian: FloatArray, third: FloatArray, slopes: FloatArray, uncertainties: FloatArray) -> float:
+def second_order(
+    hessian: FloatArray, third: FloatArray, slopes: FloatArray, uncertainties: FloatArray
+) -> float:
     """What the next terms add to the variance of one output (GUM 5.1.2, note): Σ [½ f_ij² + f_i f_ijj] u_i² u_j².
 
     ``hessian`` [n, n]: f_ij; ``third`` [n, n]: f_ijj; ``slopes`` [n]: f_i; ``uncertainties`` [n].
@@ -59,13 +61,16 @@ def correlation(covariance: FloatArray) -> FloatArray:
     return np.asarray(covariance / np.outer(sigma, sigma))
 
 
-def straight_line(x: FloatArray, y: FloatArray, *, origin: float = 0.0) -> tuple[FloatArray, FloatArray, float]:
-    """Least-squares line y = a + b (x − origin): (a, b), their covariance [2, 2], and the standard deviation of y about it."""
+def straight_line(
+    x: FloatArray, y: FloatArray, *, origin: float = 0.0
+) -> tuple[FloatArray, FloatArray, float]:
+    """Least-squares line y = a + b (x − origin): (a, b), their covariance [2, 2], and the
+    standard deviation of y about it."""
     design = np.column_stack([np.ones_like(x), x - origin])
     normal = design.T @ design
     solution = np.linalg.solve(normal, design.T @ y)
     scatter = float(np.sum((y - design @ solution) ** 2) / (len(x) - 2))
-    return solution, scatter * np.linalg.inv(normal), float(np.sqrt(scatter))
+    return np.asarray(solution), np.asarray(scatter * np.linalg.inv(normal)), float(np.sqrt(scatter))
 
 
 def effective_degrees_of_freedom(contributions: Sequence[float], degrees: Sequence[float]) -> float:

@@ -10,6 +10,7 @@ import numpy as np
 
 from runner.arrays import FloatArray
 from runner.extraction.calibration import Calibration
+from runner.extraction.common_effects import SHUNT, UNKNOWN
 from runner.extraction.curve import LegCurve
 from runner.extraction.curve_data import CurveData
 from runner.extraction.curve_fit import refit
@@ -40,12 +41,15 @@ def draw_knees(
         scale = 1.0 + sum(u * generator.standard_normal() for u in relative.values())
         volts = 1.0 + gain * generator.standard_normal()
         ohms = resistance_uncertainty * generator.standard_normal()
-        delays = np.array(data.delay_sigmas) * generator.standard_normal(2) * (np.array(data.delay_sigmas) < 1e2)
+        known = data.common.sigmas < UNKNOWN
+        shared = data.common.sigmas * generator.standard_normal(len(known)) * known
         # What a bench with these errors would have read, evaluated with the constants as stated.
-        drop = (data.volt_seconds / data.flux_scale - data.flux) * scale
-        current = truth.current * scale + delays[1] * data.delay_current
-        flux = data.volt_seconds / data.flux_scale * volts - drop
-        flux = flux + ohms * data.charge / data.flux_scale - delays[0] * data.delay_flux
+        drop = (data.volt_seconds / data.scales.flux - data.flux) * scale
+        lead, missing = data.shunt.effect(curve.fit.inductance_at_rows)
+        current = truth.current * scale - data.common.current @ shared + shared[SHUNT] * lead
+        flux = data.volt_seconds / data.scales.flux * volts - drop
+        flux = flux + ohms * data.charge / data.scales.flux - data.common.flux @ shared
+        flux = flux - shared[SHUNT] * missing
         current = current + noise.color(generator.standard_normal(data.rows)) * curve.fit.inflation
         fit = refit(curve.fit, truth.with_rows(current, flux))
         knees = [curve.with_fit(fit).knee(drop_) for drop_ in drops]

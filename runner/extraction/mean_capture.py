@@ -6,12 +6,15 @@ depend on the number of repeats. What only a single capture can tell (a repeat u
 found here, before it is averaged away.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from runner.arrays import BoolArray, FloatArray
 
+Codes = NDArray[Any]  # integers as delivered, or floats
 ODD_REPEAT = 8.0  # robust standard deviations from the other repeats
 FEWEST_PRETRIGGER = 8
 
@@ -58,7 +61,7 @@ class MeanCapture:
     has_pulse: bool
 
 
-def average(voltage: np.ndarray, current: np.ndarray, setting: Setting, *, guard: float = 0.0) -> MeanCapture:  # type: ignore[type-arg]
+def average(voltage: Codes, current: Codes, setting: Setting, *, guard: float = 0.0) -> MeanCapture:
     """Average the repeats of one point.
 
     Args:
@@ -70,6 +73,7 @@ def average(voltage: np.ndarray, current: np.ndarray, setting: Setting, *, guard
         The mean waveform; ``has_pulse`` is False when nothing stands out of the noise.
     """
     repeats, samples = voltage.shape
+    setting = _with_steps(setting, voltage, current)
     v_low, v_high = _ends(voltage, setting)
     i_low, i_high = _ends(current, setting)
     before = _pretrigger(voltage, setting, guard)
@@ -102,19 +106,35 @@ def average(voltage: np.ndarray, current: np.ndarray, setting: Setting, *, guard
     )  # fmt: skip
 
 
-def _ends(codes: np.ndarray, setting: Setting) -> tuple[bool, bool]:  # type: ignore[type-arg]
+def _with_steps(setting: Setting, voltage: Codes, current: Codes) -> Setting:
+    """The setting with the step of each channel's codes, found in the codes themselves where it was not said: what all
+    their differences are multiples of (a 12-bit converter may deliver multiples of 16)."""
+    v_step, i_step = setting.v_step, setting.i_step
+    if v_step == 0.0 and voltage.dtype.kind in "iu":
+        v_step = _code_step(voltage) * abs(setting.v_scale)
+    if i_step == 0.0 and current.dtype.kind in "iu":
+        i_step = _code_step(current) * abs(setting.i_scale)
+    return replace(setting, v_step=v_step, i_step=i_step)
+
+
+def _code_step(codes: Codes) -> int:
+    some = codes[0, : 1 << 14].astype(np.int64)
+    return int(np.gcd.reduce(np.abs(np.diff(some))))
+
+
+def _ends(codes: Codes, setting: Setting) -> tuple[bool, bool]:
     if not np.isfinite(setting.code_max) and not np.isfinite(setting.code_min):
         return False, False
     return bool(codes.min() <= setting.code_min), bool(codes.max() >= setting.code_max)
 
 
-def _cut(codes: np.ndarray, setting: Setting) -> BoolArray:  # type: ignore[type-arg]
+def _cut(codes: Codes, setting: Setting) -> BoolArray:
     if not np.isfinite(setting.code_max) and not np.isfinite(setting.code_min):
         return np.zeros(codes.shape[1], dtype=bool)
     return np.asarray((codes.max(axis=0) >= setting.code_max) | (codes.min(axis=0) <= setting.code_min))
 
 
-def _pretrigger(voltage: np.ndarray, setting: Setting, guard: float) -> int:  # type: ignore[type-arg]
+def _pretrigger(voltage: Codes, setting: Setting, guard: float) -> int:
     """Samples that surely lie before the pulse: before the trigger, and before the voltage leaves its start.
 
     Captures taken by hand may start their clock anywhere, so the trigger instant alone is not believed: when the
@@ -130,7 +150,7 @@ def _pretrigger(voltage: np.ndarray, setting: Setting, guard: float) -> int:  # 
     return max(0, min(from_trigger, from_rise) if FEWEST_PRETRIGGER <= from_trigger <= rise else from_rise)
 
 
-def _odd_ones(voltage: np.ndarray, current: np.ndarray) -> tuple[int, ...]:  # type: ignore[type-arg]
+def _odd_ones(voltage: Codes, current: Codes) -> tuple[int, ...]:
     """Repeats whose mean voltage or current lies far from the others' (a missed pulse, a spike in the mains)."""
     odd: set[int] = set()
     for codes in (voltage, current):
@@ -142,7 +162,7 @@ def _odd_ones(voltage: np.ndarray, current: np.ndarray) -> tuple[int, ...]:  # t
     return tuple(sorted(odd)) if len(odd) <= len(voltage) // 2 else ()
 
 
-def _mean_and_noise(codes: np.ndarray, before: int) -> tuple[FloatArray, float]:  # type: ignore[type-arg]
+def _mean_and_noise(codes: Codes, before: int) -> tuple[FloatArray, float]:
     """Mean over the repeats [n], and the standard deviation of a single sample, in codes.
 
     With repeats: their pooled scatter about the mean, slow differences between repeats (offset, sag, drift) taken

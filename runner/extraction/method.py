@@ -71,7 +71,11 @@ def finish_method(
         entry["left_out_error"] = [{"fraction": left_out["rms"], "largest": left_out["largest"]}]
     if facts.core is not None and method.name == "pulse":
         entry["core_view"] = at_knees(
-            method.legs, method.knees.found, turns=facts.core.turns, area=facts.core.area, path=facts.core.path
+            method.legs,
+            method.knees.found,
+            turns=facts.core.turns,
+            area=facts.core.area,
+            path=facts.core.path,
         )
     return entry
 
@@ -102,7 +106,9 @@ def _doubts(
                       f"{shape.rise_at:.3g} A before it falls; a core with memory does that. Drops count from zero current.")
             )  # fmt: skip
         if name == "pulse" and not resistance.is_measured:
-            found.append(Doubt(-1, "resistance_assumed", f"{at}: winding resistance from the plan and the copper law."))
+            found.append(
+                Doubt(-1, "resistance_assumed", f"{at}: winding resistance from the plan and the copper law.")
+            )
         if name == "pulse" and leg.fit.inflation > MUCH_NOISE:
             found.append(
                 Doubt(-1, "misfit", f"{at}: widths disagree {leg.fit.inflation:.1f} times more than their noise; the "

@@ -34,7 +34,10 @@ def rectangular(low: float, high: float) -> Sampler:
 
 
 def simulate(
-    function: Callable[..., FloatArray], inputs: Mapping[str, Sampler], generator: np.random.Generator, trials: int
+    function: Callable[..., FloatArray],
+    inputs: Mapping[str, Sampler],
+    generator: np.random.Generator,
+    trials: int,
 ) -> FloatArray:
     """Values [trials] of ``function`` called once with arrays of independent draws by name."""
     return np.asarray(function(**{name: draw(generator, trials) for name, draw in inputs.items()}))
@@ -44,7 +47,7 @@ def summarise(values: FloatArray, coverage: float = 0.95) -> Summary:
     """Summary of draws [trials] (JCGM 101, 7.6 and 7.7)."""
     ordered = np.sort(values)
     count = len(ordered)
-    inside = int(round(coverage * count))
+    inside = round(coverage * count)
     tail = (count - inside) // 2
     widths = ordered[inside:] - ordered[: count - inside]
     best = int(np.argmin(widths))

@@ -85,10 +85,15 @@ def _reference(
         float(sum(w * q.value for w, q in zip(weights, initial, strict=True))),
         {
             "reference inductance": float(
-                np.sqrt(sum((w * u) ** 2 for w, q in zip(weights, initial, strict=True) for u in q.own.values()))
+                np.sqrt(
+                    sum((w * u) ** 2 for w, q in zip(weights, initial, strict=True) for u in q.own.values())
+                )
             )
         },
-        {n: float(sum(w * q.shared.get(n, 0.0) for w, q in zip(weights, initial, strict=True))) for n in names},
+        {
+            n: float(sum(w * q.shared.get(n, 0.0) for w, q in zip(weights, initial, strict=True)))
+            for n in names
+        },
     )
 
 
@@ -112,7 +117,9 @@ def _with_temperature(
     values = np.array([q.value for q in quantities if q is not None])
     slopes = dict(zip(known, np.gradient(values, at), strict=True))
     return tuple(
-        None if q is None else Quantity(q.value, q.own, {**q.shared, "temperature": float(slopes[k]) * uncertainty})
+        None
+        if q is None
+        else Quantity(q.value, q.own, {**q.shared, "temperature": float(slopes[k]) * uncertainty})
         for k, q in enumerate(quantities)
     )
 

@@ -8,7 +8,7 @@ from runner.arrays import FloatArray
 from runner.extraction.calibration import Calibration
 from runner.extraction.curve import LegCurve, Scale, leg_curve
 from runner.extraction.curve_data import CurveData, lay_out
-from runner.extraction.curve_fit import COMMON, Fit, fit_curve
+from runner.extraction.curve_fit import Fit, fit_curve
 from runner.extraction.ramp import Ramp
 
 
@@ -37,7 +37,7 @@ def pulse_leg(
     fit = fit_curve(data)
     shifts = constant_shifts(fit, data, calibration, resistance_uncertainty)
     return leg_curve(
-        fit, Scale(data.current_scale, data.flux_scale), temperature_degC=temperature_degC, shifts=shifts
+        fit, Scale(data.scales.current, data.scales.flux), temperature_degC=temperature_degC, shifts=shifts
     )
 
 
@@ -45,16 +45,16 @@ def constant_shifts(
     fit: Fit, data: CurveData, calibration: Calibration, resistance_uncertainty: float
 ) -> dict[str, FloatArray]:
     """Change of the fit's parameters for plus one standard uncertainty of each constant."""
-    per_flux = 1.0 / (fit.inductance_at_rows * data.flux_scale)
+    per_flux = 1.0 / (fit.inductance_at_rows * data.scales.flux)
     # A current scale that reads high by u: the true current and charge are smaller by u.
-    drop = data.volt_seconds - data.flux * data.flux_scale
+    drop = data.volt_seconds - data.flux * data.scales.flux
     scale = -data.current - per_flux * drop
     moves = {name: u * scale for name, u in calibration.relative_current_uncertainty.items()}
     gain = calibration.voltage_gain.uncertainty / calibration.voltage_gain.value
     moves["voltage gain"] = gain * per_flux * data.volt_seconds
     moves["winding resistance"] = resistance_uncertainty * per_flux * data.charge
     moves |= _rounding(data)
-    return {name: (fit.gain @ move)[:-COMMON] for name, move in moves.items() if np.any(move)}
+    return {name: (fit.gain @ move)[: fit.model.parameters] for name, move in moves.items() if np.any(move)}
 
 
 def _rounding(data: CurveData) -> dict[str, FloatArray]:
@@ -65,7 +65,7 @@ def _rounding(data: CurveData) -> dict[str, FloatArray]:
     for ramp, rows in zip(data.ramps, data.members, strict=True):
         if ramp.quantum > 0 and np.isfinite(ramp.dither):
             quiet = float(np.exp(-2 * np.pi**2 * max(0.0, ramp.dither**2 - 1 / 12)))
-            amplitude[rows] = ramp.quantum / np.pi * quiet / data.current_scale
+            amplitude[rows] = ramp.quantum / np.pi * quiet / data.scales.current
             angle[rows] = 2 * np.pi * ramp.current / ramp.quantum
     half = amplitude / np.sqrt(2.0)
     return {"rounding (sine)": half * np.sin(angle), "rounding (cosine)": half * np.cos(angle)}

@@ -4,7 +4,7 @@ Order of the corrections: channel gains; shunt volts to amperes at the shunt's t
 inductance undone by the causal first-order inverse (no differentiation); voltage integrated on its own clock; the
 channel skew taken out of the integral, which is smooth, and not out of the voltage, which jumps. A pulse's start
 needs no detection better than a sample: the integral runs from before it, and what a jump between two samples leaves
-uncertain is a constant in λ that the fit knows about (`Ramp.start_uncertainty`).
+uncertain is a constant in λ that the fit knows about (`common_effects.py`).
 """
 
 from dataclasses import dataclass
@@ -18,19 +18,26 @@ from runner.extraction.mean_capture import FEWEST_PRETRIGGER, MeanCapture
 
 BINS = 96
 FEWEST_SAMPLES = 12
+JITTER = (
+    0.1  # of the sampling interval, between captures; where the pulse begins on average is the fit's to find
+)
 
 
 @dataclass(frozen=True, slots=True)
 class Ramp:
-    """The rising part of one pulse in m bins (means over equal numbers of samples).
+    """The rising part of one pulse in m bins (means over neighbouring samples).
 
-    ``time`` s from the start of the pulse; ``volt_seconds`` ∫v dt [V s]; ``charge`` ∫i dt [A s]; ``current`` [A];
-    ``voltage`` [V]; ``spread``: variance of λ inside a bin [Wb²]; ``lead``: what one second more of the shunt's L/R
-    would take off the current [A/s]. ``edges`` [m + 1] s of the bins. ``noise_density``: white noise of the current
-    [A² s], smoothed over ``shunt_time`` [s] by the undoing of the shunt's inductance. ``walk``: standard deviation of ∫v dt grows as walk·√t [V s/√s]; ``slope_uncertainty`` [V] of the voltage offset,
-    ``level_uncertainty`` [A] of the current offset, ``start_uncertainty`` [V s]. The shunt's inductive step falls between
-    two samples: that leaves ``transient`` [A] decaying with ``shunt_time``. ``quantum``: step of the current's
-    codes [A], ``dither``: rms noise in steps. ``width`` [s], ``peak`` [A].
+    ``time`` s from the start of the pulse and ``edges`` [m + 1] of the bins; ``volt_seconds`` ∫v dt [V s]; ``charge``
+    ∫i dt [A s]; ``current`` [A]; ``voltage`` [V]; ``spread``: variance of λ inside a bin [Wb²].
+
+    Of its noise: ``noise_density`` of the current, white [A² s], smoothed over ``shunt_time`` [s] by the undoing of the
+    shunt's inductance; ∫v dt walks at random by ``walk``·√t [V s/√s]; ``slope_uncertainty`` [V] of the voltage offset,
+    ``level_uncertainty`` [A] of the current offset. Where the pulse begins jitters by ``jitter`` [s] between captures; a
+    second there is worth ``start_voltage`` [V] of λ and, decaying with ``shunt_time``, ``start_rate`` [A/s] of current.
+    ``interval`` [s] between samples. ``quantum``: step of the current's
+    codes [A]; ``dither``: rms noise in steps.
+
+    ``width`` [s] and ``peak`` [A] of the pulse; ``is_cut``: clipped samples ended it early.
     """
 
     point: int
@@ -41,15 +48,16 @@ class Ramp:
     current: FloatArray
     voltage: FloatArray
     spread: FloatArray
-    lead: FloatArray
     edges: FloatArray
     noise_density: float
     shunt_time: float
     walk: float
     slope_uncertainty: float
     level_uncertainty: float
-    start_uncertainty: float
-    transient: float
+    start_voltage: float
+    start_rate: float
+    jitter: float
+    interval: float
     quantum: float
     dither: float
     width: float
@@ -72,7 +80,6 @@ def make_ramp(
     reading = mean.current * to_ampere
     time_constant = calibration.shunt_time_constant
     current = undo_shunt_inductance(reading, step, time_constant)
-    lead = shunt_lead(reading, current, step, time_constant)
     voltage = mean.voltage / calibration.voltage_gain.value
     start, stop = pulse_edges(voltage)
     late = calibration.skew.value if np.isfinite(calibration.skew.uncertainty) else 0.0
@@ -100,14 +107,13 @@ def make_ramp(
     repeats, before = mean.repeats, mean.pretrigger
     v_noise = mean.voltage_noise / calibration.voltage_gain.value
     i_noise = mean.current_noise * to_ampere
-    high = float(np.median(voltage[begin:end]))
     v_step, i_step = _step(mean.setting.v_step), _step(mean.setting.i_step) * to_ampere
     behind_offset = max(before, 1) * repeats if before >= FEWEST_PRETRIGGER else 1
     slope_u = np.hypot(v_noise / np.sqrt(behind_offset), undithered(v_step, v_noise))
     level_u = np.hypot(i_noise / np.sqrt(behind_offset), undithered(i_step, i_noise))
     quarter = max(4, count // 4)
     first_rate = abs(float(np.polyfit(np.arange(quarter) * step, current[begin : begin + quarter], 1)[0]))
-    time = (np.arange(len(current)) - start + 0.5) * step
+    time = np.asarray((np.arange(len(current)) - start + 0.5) * step, dtype=np.float64)
     return Ramp(
         point=point,
         temperature_degC=temperature_degC,
@@ -117,33 +123,22 @@ def make_ramp(
         current=binned(current),
         voltage=binned(voltage),
         spread=np.asarray(spread),
-        lead=binned(lead),
-        edges=time[edges - 1] + step / 2,
+        edges=np.asarray(time[edges - 1] + step / 2),
         noise_density=i_noise**2 * step / repeats,
         shunt_time=time_constant,
         walk=v_noise * np.sqrt(step / repeats),
         slope_uncertainty=float(slope_u),
         level_uncertainty=float(level_u),
-        start_uncertainty=high * step / np.sqrt(12.0),
-        transient=first_rate * step / np.sqrt(12.0),
+        start_voltage=float(np.median(voltage[begin : begin + max(4, count // 8)])),
+        start_rate=first_rate,
+        jitter=JITTER * step / np.sqrt(repeats),
+        interval=step,
         quantum=i_step,
         dither=i_noise / i_step if i_step > 0 else np.inf,
         width=(stop - start) * step,
         peak=float(current[begin:end].max()),
         is_cut=is_cut,
     )
-
-
-def shunt_lead(reading: FloatArray, current: FloatArray, step: float, time_constant: float) -> FloatArray:
-    """By how much the current changes for one second less of the shunt's time constant [A/s], shape of ``current``.
-
-    From i + τ i' = reading: the change e obeys e + τ e' = i', and i' = (reading − i)/τ.
-    """
-    if time_constant <= 0.0:
-        wide = max(1, len(current) // 200)
-        smooth = np.convolve(current, np.ones(wide) / wide, mode="same")
-        return np.asarray(np.gradient(smooth, step))
-    return undo_shunt_inductance((reading - current) / time_constant, step, time_constant)
 
 
 def bin_edges(current: FloatArray) -> IntArray:
@@ -183,7 +178,10 @@ def shift(integral: FloatArray, slope: FloatArray, step: float, late: float) -> 
     at = np.clip(np.arange(len(integral)) + whole, 0, len(integral) - 2)
     p0, p1, m0, m1 = integral[at], integral[at + 1], slope[at] * step, slope[at + 1] * step
     return np.asarray(
-        (1 + 2 * f) * (1 - f) ** 2 * p0 + f * (1 - f) ** 2 * m0 + f * f * (3 - 2 * f) * p1 + f * f * (f - 1) * m1
+        (1 + 2 * f) * (1 - f) ** 2 * p0
+        + f * (1 - f) ** 2 * m0
+        + f * f * (3 - 2 * f) * p1
+        + f * f * (f - 1) * m1
     )
 
 
@@ -206,7 +204,8 @@ def undo_shunt_inductance(reading: FloatArray, step: float, time_constant: float
 
 def pulse_edges(voltage: FloatArray) -> tuple[int, int]:
     """First sample of the driven part and the first after it: where the voltage passes half of its plateau."""
-    top = float(np.percentile(voltage, 99.0))
+    few = max(4, len(voltage) // 400)
+    top = float(np.partition(voltage, -few)[-few])  # the highest but a few: a spike is no plateau
     above = voltage > 0.5 * top
     if not above.any():
         return 0, 0
@@ -227,7 +226,8 @@ def undithered(step: float, noise: float) -> float:
     if step <= 0.0:
         return 0.0
     before_rounding = max(0.0, (noise / step) ** 2 - 1.0 / 12.0)
-    return min(step / np.sqrt(12.0), step / (np.pi * np.sqrt(2.0)) * float(np.exp(-2 * np.pi**2 * before_rounding)))
+    quiet = step / (np.pi * np.sqrt(2.0)) * np.exp(-2 * np.pi**2 * before_rounding)
+    return float(min(step / np.sqrt(12.0), quiet))
 
 
 def _step(step: float) -> float:

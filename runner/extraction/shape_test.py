@@ -49,7 +49,7 @@ def _rise(leg: LegCurve) -> tuple[float, float]:
         low = int(np.argmin(value[:k]))
         difference = value[k] - value[low]
         direction = slopes[k] - slopes[low]
-        u = float(np.sqrt(max(0.0, direction @ leg.covariance @ direction)))
+        u = _u(leg, direction)
         if difference > SURE * u and difference > RISE * value[0] and difference > best:
             best, at = float(difference), float(leg.current[some[k]])
     return best / float(value[0]), at
@@ -87,4 +87,4 @@ def _peaks(values: FloatArray) -> list[int]:
 
 
 def _u(leg: LegCurve, direction: FloatArray) -> float:
-    return float(np.sqrt(max(0.0, direction @ leg.covariance @ direction)))
+    return float(np.sqrt(max(0.0, float(direction @ leg.covariance @ direction))))

@@ -143,7 +143,11 @@ class Surface:
     def to_dataset(self, current: ArrayLike, temperature_degC: ArrayLike | None = None) -> xr.Dataset:
         """L_d, its uncertainty, L_s, λ and energy on a grid of currents and temperatures (the legs' when None)."""
         i = np.asarray(current, dtype=np.float64)
-        t = self.temperature_degC if temperature_degC is None else np.asarray(temperature_degC, dtype=np.float64)
+        t = (
+            self.temperature_degC
+            if temperature_degC is None
+            else np.asarray(temperature_degC, dtype=np.float64)
+        )
         grid = (i[None, :], t[:, None])
         dims = ("temperature_degC", "current")
         return xr.Dataset(
@@ -161,7 +165,12 @@ class Surface:
         )
 
     def _slice(
-        self, x: FloatArray, current: FloatArray, inductance: FloatArray, weights: FloatArray, between: FloatArray
+        self,
+        x: FloatArray,
+        current: FloatArray,
+        inductance: FloatArray,
+        weights: FloatArray,
+        between: FloatArray,
     ) -> Slice:
         """Adds flux, energy and uncertainties: those of each leg at the same scaled current, weighted (own ones
         independent, shared ones with their signs), and what temperature between the legs leaves open."""
@@ -175,7 +184,9 @@ class Surface:
             for k, (value, slopes) in enumerate(_answers(leg)):
                 there = np.maximum(np.abs(np.interp(at, leg.current, value)), 1e-30)
                 variance = np.einsum("ij,jk,ik->i", slopes, leg.covariance, slopes)
-                own[k] += (weight * np.interp(at, leg.current, np.sqrt(np.maximum(variance, 0.0))) / there) ** 2
+                own[k] += (
+                    weight * np.interp(at, leg.current, np.sqrt(np.maximum(variance, 0.0))) / there
+                ) ** 2
                 for name, shift in leg.shifts.items():
                     shared[name][k] += weight * np.interp(at, leg.current, slopes @ shift) / there
         relative = [
@@ -188,7 +199,13 @@ class Surface:
         for k in (1, 2):  # at zero current flux and energy are zero and known
             relative[k][0] = 0.0
         return Slice(
-            current, inductance, relative[0] * inductance, flux, relative[1] * flux, energy, relative[2] * energy
+            current,
+            inductance,
+            relative[0] * inductance,
+            flux,
+            relative[1] * flux,
+            energy,
+            relative[2] * energy,
         )
 
     def _ask(self, current: ArrayLike, temperature_degC: ArrayLike, what: str) -> FloatArray:
