@@ -23,6 +23,7 @@ from runner.extraction.laws import LAWS, PRIOR_MEAN, PRIOR_SIGMA, Law
 Way = Callable[[CurveModel, Shape, FloatArray], tuple[FloatArray, FloatArray, FloatArray]]
 
 CANDIDATES = 2
+BAD = 1.5  # misfit at which further laws are tried
 SMALL = 5e-3  # a deviation (of log L) that hardly matters
 TURNS = 18
 # While the residuals are far larger than the noise (log of their ratio) the linearised problem promises too much. Until
@@ -75,7 +76,9 @@ def fit_curve(data: FitData) -> Fit:
     """
     pilots = sorted((_pilot(law, data) for law in LAWS), key=lambda found: found[1])
     fits: list[Fit] = []
-    for start, _, law in pilots[:CANDIDATES]:
+    for number, (start, _, law) in enumerate(pilots):
+        if number >= CANDIDATES and min(fit.misfit for fit in fits) < BAD:
+            break
         fits.append(_fit_law(law, data, start))
         if max(fits[-1].size, fits[-1].flat_size) < SMALL and fits[-1].misfit < 1.5:
             break  # a law that fits almost by itself leaves another nothing to do better
@@ -233,9 +236,11 @@ def _finish(
     residual: FloatArray,
 ) -> Fit:
     weight = float(np.exp(-2 * hyper[2]))
-    covariance = problem.covariance(hyper)
+    # What the rows still disagree by beyond their noise, for whatever reason, widens everything (R. T. Birge, 1932).
+    excess = max(1.0, problem.misfit * weight)
+    covariance = problem.covariance(hyper) * excess
     # The same with the delays held: what they add is told apart from noise and model.
-    held = problem.covariance(hyper, held=len(data.common.sigmas))
+    held = problem.covariance(hyper, held=len(data.common.sigmas)) * excess
     return Fit(
         data=data,
         model=model,
@@ -243,8 +248,8 @@ def _finish(
         shape=shape,
         covariance=covariance,
         covariance_without_delay=held,
-        noise_covariance=held @ problem.normal @ held * weight,
-        gain=covariance @ noise.whiten(problem.j, transposed=True).T * weight,
+        noise_covariance=held @ problem.normal @ held * (weight / excess),
+        gain=covariance @ noise.whiten(problem.j, transposed=True).T * (weight / excess),
         inductance_at_rows=inductance,
         residuals=residual,
         whitened=problem.r,
@@ -253,6 +258,6 @@ def _finish(
         length=float(np.exp(hyper[1])),
         inflation=float(np.exp(hyper[2])),
         misfit=problem.misfit,
-        effective_parameters=float(np.trace(covariance @ problem.normal) * weight),
+        effective_parameters=float(np.trace(covariance @ problem.normal) * weight / excess),
         evidence=-0.5 * (problem.evidence(hyper) + noise.log_determinant),
     )

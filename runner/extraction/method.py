@@ -19,7 +19,7 @@ from runner.extraction.shape_test import judge_shape
 from runner.extraction.surface import Surface, left_out_error
 
 KINDS = {"pulse": "differential", "bias": "incremental"}
-MUCH_NOISE = 2.0  # residuals this many times the noise that the captures themselves show
+MUCH_NOISE = 1.5  # residuals this many times the noise that the captures themselves show
 
 
 @dataclass(frozen=True, slots=True)
@@ -109,9 +109,10 @@ def _doubts(
             found.append(
                 Doubt(-1, "resistance_assumed", f"{at}: winding resistance from the plan and the copper law.")
             )
-        if name == "pulse" and leg.fit.inflation > MUCH_NOISE:
+        disagreement = float(np.sqrt(leg.fit.misfit))
+        if name == "pulse" and disagreement > MUCH_NOISE:
             found.append(
-                Doubt(-1, "misfit", f"{at}: widths disagree {leg.fit.inflation:.1f} times more than their noise; the "
+                Doubt(-1, "misfit", f"{at}: widths disagree {disagreement:.1f} times more than their noise; the "
                       "intervals were widened. Ringing, pickup or a part that warms between pulses would do that.")
             )  # fmt: skip
         away = leg.fit.data.temperatures - leg.temperature_degC

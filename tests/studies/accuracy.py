@@ -132,8 +132,8 @@ class Drawn:
 def draw_bench(seed: int, *, bits: int | None = None) -> Drawn:
     """Everything about bench number ``seed``."""
     rng = np.random.default_rng([20261, seed])
-    inductance = float(np.exp(rng.uniform(np.log(5e-6), np.log(100e-6))))
-    knee = float(np.exp(rng.uniform(np.log(3.0), np.log(18.0))))
+    inductance = float(np.exp(rng.uniform(np.log(10e-6), np.log(100e-6))))
+    knee = float(np.exp(rng.uniform(np.log(4.0), np.log(16.0))))
     name = str(rng.choice(["gapped", "gapped", "powder", "powder", "tanh", "stepped", "foreign", "foreign"]))
     if name == "foreign":
         name = str(rng.choice(["erf", "hyperbola", "two_parts", "stretched"]))
@@ -157,7 +157,7 @@ def draw_bench(seed: int, *, bits: int | None = None) -> Drawn:
         shunt=Constant(nominal, 1e-3 * nominal),
         ambient_degC=Constant(23.0, 2.0),
         tempco=Constant(2e-5, 1e-5),
-        shunt_inductance=Constant(float(rng.uniform(0.5e-9, 4e-9)), 3e-10),
+        shunt_inductance=Constant(inductive := nominal * float(rng.uniform(50e-9, 400e-9)), 0.1 * inductive),
         voltage_gain=Constant(1.0, 5e-4),
         shunt_gain=Constant(1.0, 5e-4),
         skew=Constant(float(rng.uniform(-20e-9, 20e-9)), 1.5e-9),
@@ -174,11 +174,11 @@ def draw_bench(seed: int, *, bits: int | None = None) -> Drawn:
         resistance=float(rng.uniform(5e-3, 30e-3)),
         bits=bits,
         repeats=8,
-        rail=float(rng.uniform(8.0, 24.0)),
+        rail=float(rng.uniform(8.0, 16.0)),
         bank=Bank(float(rng.uniform(2e-3, 10e-3)), 5e-3, 2000.0),
         switch=float(rng.uniform(3e-3, 15e-3)),
         shunt=float(true_shunt),
-        shunt_inductance=max(0.0, stated.shunt_inductance.value + 3e-10 * float(n())),
+        shunt_inductance=stated.shunt_inductance.value * (1 + 0.1 * float(n())),
         digitizer=DigitizerSpec(
             bits=bits,
             noise=float(rng.uniform(0.35, 1.2)),
