@@ -68,11 +68,7 @@ def test_the_wheel_carries_the_plans_and_templates(wheel):
     names = set(zipfile.ZipFile(wheel).namelist())
     assert "runner/shipped_plans/demo_night.yaml" in names
     assert any(name.startswith("runner/shipped_plans/dialects/") for name in names)
-    assert any(
-        name.endswith((".html.j2", ".html"))
-        for name in names
-        if name.startswith("runner/report/")
-    )
+    assert any(name.endswith((".html.j2", ".html")) for name in names if name.startswith("runner/report/"))
     assert not any(name.startswith("tests/") for name in names)
 
 

@@ -46,7 +46,10 @@ limits: {{current: 20 A, body: 140 degC, rail: 16 V, pulse_energy: 5 mJ, chamber
 extract: {{drops: [30 %]}}
 """
 # Lags of a part in moving air (time constants as the bench file spells them): common practice, no source.
-LAGS = {"small part (lags of 1 and 5 min)": ("1 min", "5 min"), "slow part (lags of 4 and 15 min)": ("4 min", "15 min")}
+LAGS = {
+    "small part (lags of 1 and 5 min)": ("1 min", "5 min"),
+    "slow part (lags of 4 and 15 min)": ("4 min", "15 min"),
+}
 SOUGHT = "{seek: knee, from: 2 us, to: 24 us, budget: 18, until: {isat: 1 %}}"
 FIXED = "{from: 2 us, to: 24 us, count: 18}"
 
@@ -58,7 +61,9 @@ def bench_with(lags, into):
     guess = "part_time_constants: [4 min, 15 min]"
     assert text.count(part) == 1 and text.count(guess) == 1
     written = f"[{lags[0]}, {lags[1]}]"
-    text = text.replace(part, f"{part}time_constants: {written}, ").replace(guess, f"part_time_constants: {written}")
+    text = text.replace(part, f"{part}time_constants: {written}, ").replace(
+        guess, f"part_time_constants: {written}"
+    )
     path = into / "bench.yaml"
     path.write_text(text, encoding="utf-8")
     return path
@@ -69,9 +74,7 @@ def carried_out(into, bench, title, width):
     path = into / "plan.yaml"
     temperatures = ", ".join(f"{value:g} degC" for value in TEMPERATURES)
     path.write_text(
-        PLAN.format(
-            title=title, bench=bench, temperatures=temperatures, within=WITHIN, width=width
-        )
+        PLAN.format(title=title, bench=bench, temperatures=temperatures, within=WITHIN, width=width)
     )
     loaded = load_plan(path)
     folder = new_run_folder(into, title=title, start=datetime.now(UTC))
@@ -110,9 +113,13 @@ def measure(name, lags):
     print(name)
     for kind, result in (("sought", sought_result), ("fixed", fixed_result)):
         widths = half_widths(result)
-        print(f"  {kind:<7} Isat at 30 %: {len(widths)} of 7 temperatures, widest interval ±{max(widths):.2%}")
+        print(
+            f"  {kind:<7} Isat at 30 %: {len(widths)} of 7 temperatures, widest interval ±{max(widths):.2%}"
+        )
     print(f"  sought {sought / 3600:.2f} h, fixed {fixed / 3600:.2f} h, floor {floor / 3600:.2f} h")
-    print(f"  sought/fixed {sought / fixed:.2f} (at most 0.6), sought/floor {sought / floor:.2f} (at most 1.25)")
+    print(
+        f"  sought/fixed {sought / fixed:.2f} (at most 0.6), sought/floor {sought / floor:.2f} (at most 1.25)"
+    )
     print(f"  floor/fixed {floor / fixed:.2f}", flush=True)
 
 
