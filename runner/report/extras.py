@@ -31,7 +31,9 @@ TITLES = {
     "core_view": "Seen from the core",
     "temperature_coefficient": "Temperature coefficient of the saturation current",
     "left_out_error": "Check: each temperature foretold from the others",
-    "remanence": "Remanence study",
+    "remanence": "Remanence study: first shot against conditioned shots",
+    "remanence_offset": "Remanence study: what an offset field does to the conditioned knee",
+    "remanence_polarity": "Remanence study: one polarity against the other",
 }
 
 # Keys of a record that carry a quantity: heading and SI unit; "%" for fractions, which are written in per cent.
@@ -152,7 +154,7 @@ def _columns(
     is_number = all(
         value is None or (isinstance(value, int | float) and not isinstance(value, bool)) for value in values
     )
-    if not is_number or (key not in _QUANTITIES and key != owner):
+    if not is_number or (_quantity(key) is None and key != owner):
         return [_Column(_heading(key), tuple(_cell(value) for value in values))]
     scale = _scale(key, [number(value) for value in values])
     in_unit = f" ({scale.unit})" if scale.unit else ""
@@ -174,7 +176,7 @@ def _columns(
 
 
 def _scale(key: str, values: Sequence[float]) -> Scale:
-    _, unit = _QUANTITIES.get(key, ("", ""))
+    _, unit = _quantity(key) or ("", "")
     if unit.startswith("%"):
         return Scale(0.01, unit)
     return scale_for(values, unit) if unit else Scale(1.0, "")
@@ -206,11 +208,20 @@ def _is_nested(records: Sequence[Mapping[str, Any]], key: str) -> bool:
 def _heading(key: str) -> str:
     if key == "temperature_degC":
         return "Temperature"
-    return _QUANTITIES[key][0] if key in _QUANTITIES else _words(key.removesuffix("_degC"))
+    known = _quantity(key)
+    return known[0] if known is not None else _words(key.removesuffix("_degC"))
+
+
+def _quantity(key: str) -> tuple[str, str] | None:
+    """Heading and unit of a key: a known one, or words before one (``first_shot_ampere``: First shot, in amperes)."""
+    if key in _QUANTITIES:
+        return _QUANTITIES[key]
+    words, _, last = key.rpartition("_")
+    return (_words(words), _QUANTITIES[last][1]) if words and last in _QUANTITIES else None
 
 
 def _unit_after(key: str) -> str:
-    unit = _QUANTITIES.get(key, ("", ""))[1]
+    unit = (_quantity(key) or ("", ""))[1]
     return unit if unit.startswith("%") else ""
 
 

@@ -161,8 +161,25 @@ def test_a_budget_without_contributions_is_no_table(drop):
             ("H (kA/m)", "µr"),
             ("2.386", "61.91"),
         ),
+        (
+            {
+                "remanence": [
+                    {
+                        "polarity": "forward",
+                        "first_shot_ampere": 5.5732,
+                        "shift_ampere": 0.6,
+                        "low": 0.57,
+                        "high": 0.63,
+                        "verdict": "remembers",
+                    }
+                ]
+            },
+            "Remanence study: first shot against conditioned shots",
+            ("Polarity", "First shot (A)", "Shift (mA)", "95 % interval (mA)", "Verdict"),
+            ("forward", "5.573", "600", "570 to 630", "remembers"),
+        ),
     ],
-    ids=["coefficient", "unknown", "fraction", "left out", "unknown unit", "field"],
+    ids=["coefficient", "unknown", "fraction", "left out", "unknown unit", "field", "words before a unit"],
 )
 def test_an_extra_becomes_a_table_by_its_keys(extras, title, head, row):
     (table,) = extra_tables(extras, 0.95)
