@@ -65,6 +65,7 @@ def _finish(folder: Path, outcome: "Outcome") -> int:
         print("Extracting …", flush=True)
         print_result(extract_and_keep(folder))
         print(f"Result: {folder / 'result.json'}\nReport: {write_report(folder)}")
+        _tell_result(folder)
     except KneemapError as error:
         print(
             f"kneemap: the record is complete, but: {error}\nMend that and run 'kneemap report {folder}'.",
@@ -72,3 +73,14 @@ def _finish(folder: Path, outcome: "Outcome") -> int:
         )
         return 1
     return 0 if outcome.status == "finished" else 1
+
+
+def _tell_result(folder: Path) -> None:
+    """Send the answer and its picture to whoever asked to be told; what fails is said here and harms nothing."""
+    from runner.report import headlines
+    from runner.sweep import Notifier
+
+    notifier = Notifier(lambda text: print(f"kneemap: {text}", file=sys.stderr))
+    pictures = sorted((folder / "report").glob("*_saturation.png"))
+    notifier.tell("kneemap: result", "\n".join(headlines(folder)), pictures[0] if pictures else None)
+    notifier.close()

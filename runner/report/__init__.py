@@ -5,6 +5,6 @@ It knows how results are shown, never how they were measured or computed: whatev
 record and in its result.
 """
 
-from runner.report.page import write_report
+from runner.report.page import headlines, write_report
 
-__all__ = ["write_report"]
+__all__ = ["headlines", "write_report"]

@@ -98,6 +98,19 @@ def _clear(folder: Path) -> None:
             path.unlink()
 
 
+def headlines(folder: Path) -> tuple[str, ...]:
+    """The sentence that answers for each part, as the page has it on top; none before an extraction.
+
+    Raises:
+        InputError: the folder is no run.
+    """
+    with open_run(folder) as run:
+        if run.result is None:
+            return ()
+        facts = gather(run, _rated_currents(run))
+        return tuple(headline(facts, part) for part in facts.parts)
+
+
 def _context(run: Run, into: Path) -> dict[str, Any]:
     plan = read_plan(run.plan_bytes)
     facts = gather(run, _rated_currents(run))

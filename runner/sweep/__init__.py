@@ -6,6 +6,7 @@ never knows HDF5 or what extraction makes of a point.
 
 from runner.sweep.carry_out import Outcome, carry_out
 from runner.sweep.clock import BenchClock, Clock, WallClock
+from runner.sweep.notify import Notifier
 from runner.sweep.probe import Probed, probe
 from runner.sweep.progress import Progress, Watch
 from runner.sweep.resume import loaded_from_run
@@ -13,6 +14,7 @@ from runner.sweep.resume import loaded_from_run
 __all__ = [
     "BenchClock",
     "Clock",
+    "Notifier",
     "Outcome",
     "Probed",
     "Progress",
