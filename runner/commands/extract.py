@@ -56,6 +56,8 @@ def print_result(result: Mapping[str, Any]) -> None:
         for method, numbers in part["methods"].items():
             console.print(isat_table(part["label"], method, numbers, coverage=result["coverage"]))
             console.print()
+        for sentence in part.get("sentences", []):
+            console.print(f"  {sentence}", markup=False)
         for line in flag_lines(part.get("flags", [])):
             console.print(f"  {line}", markup=False)
 
