@@ -29,6 +29,7 @@ from runner.sweep.faults import BadReading
 from runner.sweep.moves import Move, State, after
 from runner.sweep.retry import Kind
 from runner.sweep.safe_state import DISCHARGED, SafeReport, SafeRule, discharge_time, reach_safe_state
+from runner.sweep.stuck import Manners
 
 _CHARGED = 0.99  # of the rail's set-point
 _CHARGE_LOOKS = 12
@@ -92,6 +93,7 @@ class Bench:
         self._asked: DigitizerSetup | None = None
         self._signal: tuple[float, float] | None = None
         self._setpoint: float | None = None
+        self._manners: dict[int, Manners] = {}
 
     # Typed views of the roles; a missing role is a fault of ours, as the plan was checked against the bench.
     @property
@@ -230,7 +232,12 @@ class Bench:
 
     def body(self, channel: int) -> float:
         """Body of the part on a channel [degC]."""
-        return _finite("thermometer", self.thermometer.read(channel))
+        reading = _finite("thermometer", self.thermometer.read(channel))
+        manners = self._manners.get(channel, Manners()).after(reading)
+        self._manners[channel] = manners
+        if manners.is_stuck:
+            raise BadReading(Kind.STUCK, "thermometer", f"stands at {reading:g} degC to the last digit")
+        return reading
 
     def bank(self) -> float:
         """Voltage of the bank [V]: the supply's own voltmeter sits on it."""

@@ -5,6 +5,7 @@ resource names and a clock, as for any bench. The watchdog opens the same instru
 (`Reach`), which travels to it as JSON.
 """
 
+import contextlib
 import json
 import time
 from collections.abc import Callable, Iterable, Iterator, Mapping
@@ -14,7 +15,7 @@ from pathlib import Path
 from typing import Any, Protocol, Self
 
 from drivers import Dialect, InstrumentError, connect, open_session
-from mock_instruments import launch
+from mock_instruments import Launched, launch
 from runner.errors import BenchError
 from runner.plan import Bench as BenchFile
 from runner.plan import LoadedBench, LoadedPlan, Plan, load_model, simulation_spec
@@ -25,6 +26,8 @@ from runner.sweep.safe_state import SafeRule
 
 _COMPLIANCE = 3.0  # V of the bias source beyond the drop in the winding, for leads and relays
 _PROTECTION = 1.02  # protections stand above the limit itself, so that the limit can be used
+_GOODBYE_LOOK = 0.02  # s between two looks whether a simulated bench has ended, and ...
+_GOODBYE_LOOKS = 50  # ... how many
 _SUPPLY_SHARE = 0.95  # of the supply's largest current is used to charge the bank
 
 
@@ -88,6 +91,7 @@ class VisaSite:
         self._reaches = reaches
         self._control = control
         self._start = 0.0
+        self._bench_clock: BenchClock | None = None
 
     def resources(self) -> Mapping[str, str]:
         return {reach.role: reach.resource for reach in self._reaches}
@@ -114,7 +118,22 @@ class VisaSite:
         self._start = max(time.time(), not_before)
         if self._control is None:
             return WallClock(between=between, not_before=not_before)
-        return BenchClock(self._control, start=self._start, between=between)
+        self._bench_clock = BenchClock(self._control, start=self._start, between=between)
+        return self._bench_clock
+
+    def say_goodbye(self) -> None:
+        """Tell a simulated bench that nobody needs it any more.
+
+        Raises:
+            OSError: it has gone already.
+        """
+        if self._control is None:
+            return
+        clock = self._bench_clock or BenchClock(self._control, start=0.0)
+        try:
+            clock.ask({"do": "quit"})
+        finally:
+            clock.close()
 
     def heart(self, rule: SafeRule, folder: Path, complain: Callable[[str], None]) -> Heart:
         orders = {
@@ -147,16 +166,22 @@ def on_site(loaded: LoadedPlan | LoadedBench, roles: Iterable[str]) -> Iterator[
         launched = launch(simulation_spec(bench))
     except (RuntimeError, OSError) as error:
         raise BenchError(f"{loaded.bench_path}: {error}") from error
+    where = {role: f"TCPIP::127.0.0.1::{launched.ports[role]}::SOCKET" for role in roles}
+    site = VisaSite(tuple(_reach(loaded, role, where[role]) for role in roles), launched.control)
     try:
-        yield VisaSite(
-            tuple(
-                _reach(loaded, role, f"TCPIP::127.0.0.1::{launched.ports[role]}::SOCKET") for role in roles
-            ),
-            launched.control,
-        )
+        yield site
     finally:
-        # Only asked to end, never killed: a watchdog may still be making it safe.
-        launched.process.poll()
+        end_simulation(site, launched)
+
+
+def end_simulation(site: VisaSite, launched: Launched) -> None:
+    """Ask the simulated bench to end, and wait a moment for it; it ends by itself when nobody talks to it any more."""
+    with contextlib.suppress(OSError, ValueError):
+        site.say_goodbye()
+    for _ in range(_GOODBYE_LOOKS):
+        if launched.process.poll() is not None:
+            return
+        time.sleep(_GOODBYE_LOOK)
 
 
 def _reach(loaded: LoadedPlan | LoadedBench, role: str, resource: str) -> Reach:

@@ -70,7 +70,7 @@ def _probe(site: VisaSite, role: str, bench: Bench) -> Probed:
             answers=True,
             identity=identity.text,
             capabilities=", ".join(instrument.capabilities()),
-            disagreements=(*complaints, *_disagreements(instrument, bench)),
+            disagreements=(*complaints, *disagreements(instrument, bench)),
         )
     except InstrumentError as error:
         return Probed(role, resource, answers=False, disagreements=(str(error),))
@@ -78,7 +78,8 @@ def _probe(site: VisaSite, role: str, bench: Bench) -> Probed:
         instrument.close()
 
 
-def _disagreements(instrument: Any, bench: Bench) -> list[str]:
+def disagreements(instrument: Any, bench: Bench) -> list[str]:
+    """Where an instrument does not do what the bench file says, one sentence each; its output stays off."""
     check = _CHECKS.get(instrument.role)
     return check(instrument, bench) if check is not None else []
 
