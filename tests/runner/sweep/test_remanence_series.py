@@ -185,3 +185,28 @@ def test_a_limit_cuts_the_test_pulse_and_never_breaks(make_trial: MakeTrial) -> 
         widths = run.points["pulse_width_setpoint"][run.points["method"] == 3]
     assert np.all(widths < 19e-6)
     assert np.all(widths > 10e-6)
+
+
+@pytest.mark.parametrize("kind", ["silent", "restart", "close"])
+def test_a_source_that_fails_under_the_offset_field_leaves_nothing_on(
+    make_trial: MakeTrial, kind: str
+) -> None:
+    trial = make_trial(parts=(3,), methods=(PULSE, WITH_OFFSET))
+    site = trial.site()
+    struck: list[object] = []
+
+    def watch(progress: Any) -> None:
+        if (
+            progress.done == 4 and not struck
+        ):  # the series against the field is recorded; the field is still on
+            struck.append(
+                site.bench.control({"do": "fault", "role": "bias_source", "kind": kind, "after": 3})
+            )
+
+    assert trial.run(site, watch=watch).status == "finished"
+    with open_run(trial.folder) as run:
+        assert any(event.kind == "fault" and "bias_source" in event.text for event in run.events)
+    _, _, against, along = series(trial)
+    assert abs(along[0]) > abs(against[0])
+    assert site.bench.ledger()["largest"]["current"] <= 18.0
+    assert_safe(site)
