@@ -211,6 +211,10 @@ class _Session:
                     raise BenchError(str(given_up)) from given_up
                 bench.do_without(role)
         for row in instrument_rows(self.loaded.bench, bench.identities, self.site.resources()):
+            was = self.behind.identities.get(row.role, row.idn)
+            if was != row.idn:
+                text = f"{row.name}: {row.idn!r} answers, {was!r} did before; is the bench file's calibration still its own?"
+                self.log.event("start", text, "warning")
             self.journal.instrument(row)
         self.journal.state("acquiring")
         self.log.event("start", f"{len(bench.roles)} instruments answer; limits are set in them")

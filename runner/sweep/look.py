@@ -64,11 +64,6 @@ class Look:
         """Differential inductance at the end of the pulse [H]."""
         return 1 / self.end_slope if self.end_slope > 0 else float("nan")
 
-    @property
-    def fallen(self) -> float:
-        """By which fraction the differential inductance fell during this pulse."""
-        return 1 - self.start_slope / self.end_slope if self.end_slope > 0 else float("nan")
-
 
 def look_at(
     voltage: FloatArray,

@@ -37,6 +37,7 @@ class Behind:
         ended_legs: all done at this temperature.
         history: acceptable points by (leg, part, method), in the order of recording.
         points, flagged: how many points there are, and how many of them carry a flag.
+        identities: what each instrument called itself, by its name in the record.
         run_started, last_time: first and latest time in the journal [UTC s], 0 for a new run.
     """
 
@@ -47,6 +48,7 @@ class Behind:
     history: Mapping[tuple[int, int, Method], tuple[Recorded, ...]] = field(default_factory=dict)
     points: int = 0
     flagged: int = 0
+    identities: Mapping[str, str] = field(default_factory=dict)
     run_started: float = 0.0
     last_time: float = 0.0
 
@@ -65,6 +67,7 @@ def look_behind(folder: Path) -> Behind:
         columns = {name: values.tolist() for name, values in run.all_points.items()}
         events = run.events
         run_started, last_time = run.start, run.end
+        identities = {row.role: row.idn for row in run.instruments if row.idn}
         ended = frozenset(leg.index for leg in run.legs if leg.end == leg.end)
     rows = range(len(columns["point"]))
     places: dict[int, tuple[int, int, Method]] = {
@@ -104,6 +107,7 @@ def look_behind(folder: Path) -> Behind:
         history={place: tuple(points) for place, points in history.items()},
         points=len(done),
         flagged=len({columns["plan_index"][row] for row in rows if columns["quality"][row]}),
+        identities=identities,
         run_started=run_started,
         last_time=last_time,
     )

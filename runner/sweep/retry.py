@@ -2,7 +2,8 @@
 
 The loop asks `decide` with the kind of fault, the instrument's role, the phase of the run and how often this point has
 been tried; it gets one action. Every ladder is finite, and a role that keeps failing over a leg uses up `BUDGET`, so no
-fault, however regular, keeps a run from its end. Nothing here talks to an instrument.
+fault, however regular, keeps a run from its end. Nothing here talks to an instrument. The way to the safe state is not
+governed by these tables: it goes on past whatever fails (`safe_state.py`).
 """
 
 import enum
@@ -33,7 +34,6 @@ class Phase(enum.Enum):
     SOAK = "soak"
     CLIMB = "pulse climb"
     BIAS = "bias ramp"
-    SHUTDOWN = "shutdown"
 
 
 class Action(enum.Enum):
@@ -125,7 +125,7 @@ def decide(kind: Kind, role: str, phase: Phase, *, tried: int, spent: int) -> De
 
     Returns:
         One action. In the start phase what would be given up stops the run: nothing has been measured yet and somebody
-        is still near. In the shutdown phase it is a flag: the safe state goes on past any instrument.
+        is still near.
     """
     ladder = TRY[kind]
     if tried < len(ladder) and spent < BUDGET:
@@ -133,9 +133,7 @@ def decide(kind: Kind, role: str, phase: Phase, *, tried: int, spent: int) -> De
     action = (
         GIVE_UP_READING.get((kind, role)) or GIVE_UP_KIND.get(kind) or GIVE_UP_ROLE.get(role, Action.STOP)
     )
-    if phase is Phase.SHUTDOWN:
-        action = Action.FLAG
-    elif phase is Phase.START and action is not Action.FLAG and kind not in (Kind.OPEN, Kind.SHORT):
+    if phase is Phase.START and action is not Action.FLAG and kind not in (Kind.OPEN, Kind.SHORT):
         action = Action.STOP
     tries = f"after {tried} tries" if spent < BUDGET else f"after {spent} faults in this leg"
     return Decision(action, f"{role}: {kind.value} ({phase.value}) {tries}; {action.value}")

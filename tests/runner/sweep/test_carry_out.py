@@ -108,6 +108,16 @@ def test_resuming_a_finished_run_does_nothing_and_is_finished(make_trial: MakeTr
     assert site.bench.ledger()["pulses"] == 0
 
 
+def test_a_resume_says_when_another_instrument_answers(make_trial: MakeTrial) -> None:
+    trial = make_trial()
+    requests, watch = stop_after(4)
+    trial.run(watch=watch, requests=requests)
+    site = trial.site()
+    site.bench.control({"do": "fault", "role": "lcr", "kind": "identity", "count": 0})
+    trial.run(site, resume=True)
+    assert any("lcr" in text and "did before" in text for text in events(trial, "start"))
+
+
 def test_stop_at_is_not_forgotten_by_a_resume(make_trial: MakeTrial) -> None:
     def with_stop(text: str) -> str:
         return text.replace("conditioning: 1", "conditioning: 1, stop_at: {current: 4 A}")

@@ -42,7 +42,6 @@ def test_whatever_can_put_energy_out_and_is_lost_stops_the_run(role: str, kind: 
         (Kind.NO_REPLY, "ohmmeter", Phase.CLIMB, Action.FLAG),
         (Kind.NO_REPLY, "ohmmeter", Phase.START, Action.FLAG),
         (Kind.NO_REPLY, "lcr", Phase.START, Action.STOP),
-        (Kind.NO_REPLY, "supply", Phase.SHUTDOWN, Action.FLAG),
         (Kind.OVERLOAD, "thermometer", Phase.CLIMB, Action.END_LEG),
         (Kind.OVERLOAD, "lcr", Phase.BIAS, Action.FLAG),
         (Kind.NO_TRIGGER, "digitizer", Phase.CLIMB, Action.SKIP),
