@@ -146,7 +146,11 @@ class _Session:
         self.beats.append(
             self.site.heart(rule, self.folder, lambda text: self.log.best_effort("watchdog", text, "error"))
         )
-        opened, lost = self.site.open_all()
+        try:
+            opened, lost = self.site.open_all()
+        except BaseException:
+            self.beats[-1].stop()  # nothing was said to any instrument yet
+            raise
         bench = Bench(opened, ratings(self.loaded.plan, self.loaded.bench), self.clock)
         night = self._night(bench)
         status: Status = "finished"

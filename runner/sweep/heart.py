@@ -7,6 +7,7 @@ in sleeps, between tries), never from a thread of their own, which would go on b
 
 import contextlib
 import os
+import select
 import subprocess
 import sys
 import time
@@ -17,6 +18,7 @@ from typing import Protocol
 _EVERY = 0.25  # s between two signs of life
 _SHORTEST_PATIENCE = 10.0  # s without a sign, after which the runner counts as hung
 _TIMEOUTS = 3.0  # times the longest timeout of an instrument: the loop may be waiting for a lost one
+_LONGEST_START = 60.0  # s for it to be ready, on a machine that has other things to do
 _GOODBYE = 10.0  # s to wait for a watchdog that was sent home
 BEAT, HOME = b".", b"q"
 PATIENCE_VARIABLE = (
@@ -70,8 +72,10 @@ class WatchedHeart:
         try:
             self._write(BEAT)
         except OSError:
-            self._complain("the watchdog has died; a new one was started")
+            # Dead, or hanging with its pipe full. One that woke up later would take this for the runner's death.
+            self._process.kill()
             self._end()
+            self._complain("the watchdog had died or hung; a new one was started")
             self._process = self._start()
 
     def stop(self) -> None:
@@ -94,8 +98,10 @@ class WatchedHeart:
         assert process.stdout is not None
         process.stdin.write(self._orders.encode() + b"\n")
         process.stdin.flush()
+        os.set_blocking(process.stdin.fileno(), False)
         # It answers once everything it may need is imported: what is loaded then is not looked for in an emergency.
-        if process.stdout.readline().strip() != b"ready":
+        answers, _, _ = select.select([process.stdout], [], [], _LONGEST_START)
+        if not answers or process.stdout.readline().strip() != b"ready":
             self._complain("the watchdog did not start; nobody watches this run")
         return process
 
@@ -108,5 +114,8 @@ class WatchedHeart:
             if pipe is not None:
                 with contextlib.suppress(OSError):
                     pipe.close()
-        with contextlib.suppress(subprocess.TimeoutExpired):
+        try:
             self._process.wait(timeout=_GOODBYE)
+        except subprocess.TimeoutExpired:
+            self._process.kill()
+            self._process.wait()
