@@ -9,6 +9,7 @@ import numpy as np
 
 #: Object formats of HDF5 1.8 to 1.10: what every reader of the last ten years opens.
 LIBVER = ("v108", "v110")
+_CHUNK_CACHE = 1 << 16  # byte
 
 #: What h5py raises on a file that is damaged, or not ours.
 DAMAGE = (OSError, KeyError, RuntimeError, ValueError)
@@ -24,9 +25,6 @@ def create(path: Path) -> h5py.File:
 def open_to_change(path: Path) -> h5py.File:
     """Only ever a ``.part`` file."""
     return h5py.File(path, "r+", libver=LIBVER)
-
-
-_CHUNK_CACHE = 1 << 16  # byte
 
 
 def open_to_read(path: Path) -> h5py.File:

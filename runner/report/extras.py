@@ -30,7 +30,7 @@ TITLES = {
     "derating": "Derating: largest current advised",
     "core_view": "Seen from the core",
     "temperature_coefficient": "Temperature coefficient of the saturation current",
-    "left_out_error": "Check: each temperature foretold from the others",
+    "left_out_error": "Check: inductance at each temperature, predicted from the other temperatures (rms and largest error)",
     "remanence": "Remanence study: first shot against conditioned shots",
     "remanence_offset": "Remanence study: what an offset field does to the conditioned knee",
     "remanence_polarity": "Remanence study: one polarity against the other",

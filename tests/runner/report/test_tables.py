@@ -145,7 +145,7 @@ def test_a_budget_without_contributions_is_no_table(drop):
         ),
         (
             {"left_out_error": {"fraction": 0.000901, "largest": 0.00216}},
-            "Check: each temperature foretold from the others",
+            "Check: inductance at each temperature, predicted from the other temperatures (rms and largest error)",
             ("Fraction (%)", "Largest (%)"),
             ("0.090", "0.22"),
         ),
