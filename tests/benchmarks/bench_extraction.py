@@ -6,16 +6,16 @@ temperatures. Bars:
 * time of ``extract(open_run(...))`` at most 3 times a bare pass over the same file: h5py reads each capture, scales both
   channels and integrates v - R i;
 * peak memory of that process at most 500 MiB, and no more for twice the captures;
-* twice the captures take twice the time, within 15 %.
+* twice the captures take twice the time, within 15 %: of the processors, which says how the work grows; the clock on the
+  wall, printed beside it, also says what else the computer was doing.
 
 Each measurement is a process of its own, in turns, so that none warms or fills the next one's memory, and the files are
-in the system's cache for all of them. The captures of one leg are made and compressed once and put under every leg as
-they lie on the disk: to a reader that is the same work, and the run is there in seconds.
+in the system's cache for all of them; the quickest of the turns counts. The captures of one leg are made and compressed
+once and put under every leg as they lie on the disk: to a reader that is the same work, and the run is there in seconds.
 """
 
 import argparse
 import json
-import math
 import os
 import resource
 import subprocess
@@ -134,7 +134,7 @@ def bare_pass(record: Path) -> dict[str, float]:
     import h5py
     from scipy.integrate import cumulative_trapezoid
 
-    began, size, last = time.perf_counter(), 0, 0.0
+    began, worked, size, last = time.perf_counter(), time.process_time(), 0, 0.0
     with h5py.File(record) as file:
         for name, made in file["entry"].items():
             if not name.startswith("captures_"):
@@ -146,7 +146,12 @@ def bare_pass(record: Path) -> dict[str, float]:
                 i = current[row] * facts["i_scale"] + facts["i_offset"]
                 last += cumulative_trapezoid(v - COPPER * i, dx=facts["interval"])[-1]
                 size += 4 * len(v)
-    return {"seconds": time.perf_counter() - began, "bytes": size, "flux": last}
+    return {
+        "wall": time.perf_counter() - began,
+        "cpu": time.process_time() - worked,
+        "bytes": size,
+        "flux": last,
+    }
 
 
 def extraction(record: Path) -> dict[str, float]:
@@ -154,20 +159,21 @@ def extraction(record: Path) -> dict[str, float]:
     from runner.extraction import extract, open_run
 
     # Importing may start a process too, which inherits our peak on paper.
-    before = resource.getrusage(resource.RUSAGE_CHILDREN).ru_maxrss
-    began = time.perf_counter()
+    before = resource.getrusage(resource.RUSAGE_CHILDREN)
+    began, worked = time.perf_counter(), time.process_time()
     with open_run(record) as run:
         found = extract(run)
-    seconds = time.perf_counter() - began
+    wall, cpu = time.perf_counter() - began, time.process_time() - worked
     own = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
-    worker = resource.getrusage(resource.RUSAGE_CHILDREN).ru_maxrss
-    workers = (os.cpu_count() or 1) * worker if worker > before else 0
+    after = resource.getrusage(resource.RUSAGE_CHILDREN)
+    workers = (os.cpu_count() or 1) * after.ru_maxrss if after.ru_maxrss > before.ru_maxrss else 0
+    cpu += after.ru_utime + after.ru_stime - before.ru_utime - before.ru_stime
     isat = next(table for table in found.tables.isats if table.method == "pulse")
     truth = KNEE * (3 / 7) ** (1 / 6)
     worst = max(abs(float(value) / truth - 1) for value in isat.ampere[list(isat.drops).index(0.3)])
     if not worst < 0.005:
         raise SystemExit(f"Isat(30 %) is {worst:.2%} wrong: what was timed is no extraction")
-    return {"seconds": seconds, "mib": (own + workers) / 1024, "worst": worst}
+    return {"wall": wall, "cpu": cpu, "mib": (own + workers) / 1024}
 
 
 def apart(what: str, place: Path, *more: str) -> dict[str, float]:
@@ -198,35 +204,41 @@ def main() -> int:
     if wishes.job:
         job(wishes)
         return 0
-    best = dict.fromkeys(("bare", "once", "twice"), math.inf)
-    peak = {"once": 0.0, "twice": 0.0}
+    jobs = (("bare", "bare", "one"), ("once", "extract", "one"), ("twice", "extract", "two"))
+    wall, cpu, peak = ({name: [] for name, *_ in jobs} for _ in range(3))
     with tempfile.TemporaryDirectory(dir=ROOT) as place:  # on a real disk: /tmp may be memory
-        one, two = Path(place, "one"), Path(place, "two")
-        apart("make", one, "--legs", str(wishes.legs))
-        apart("make", two, "--legs", str(2 * wishes.legs))
+        apart("make", Path(place, "one"), "--legs", str(wishes.legs))
+        apart("make", Path(place, "two"), "--legs", str(2 * wishes.legs))
         size = 0.0
         for _ in range(wishes.tries):
-            bare = apart("bare", one)
-            size, best["bare"] = bare["bytes"], min(best["bare"], bare["seconds"])
-            for name, run in (("once", one), ("twice", two)):
-                found = apart("extract", run)
-                best[name] = min(best[name], found["seconds"])
-                peak[name] = max(peak[name], found["mib"])
-    ratio, growth = best["once"] / best["bare"], best["twice"] / best["once"]
+            for name, what, run in jobs:
+                found = apart(what, Path(place, run))
+                size = found.get("bytes", size)
+                wall[name].append(found["wall"])
+                cpu[name].append(found["cpu"])
+                peak[name].append(found.get("mib", 0.0))
+    best, work = ({name: min(all_) for name, all_ in times.items()} for times in (wall, cpu))
+    highest = max(max(peak["once"]), max(peak["twice"]))
+    ratio, growth = best["once"] / best["bare"], work["twice"] / work["once"]
     print(f"{size / 2**30:.2f} GiB of captures")
-    print(f"bare read and integrate {best['bare']:.1f} s, {size / best['bare'] / MIB:.0f} MiB/s")
-    print(f"extraction {best['once']:.1f} s, ratio {ratio:.2f} (at most 3)")
+    print(f"bare read and integrate {best['bare']:.1f} s ({work['bare']:.1f} s of processors)")
     print(
-        f"peak memory {peak['once']:.0f} MiB, {peak['twice']:.0f} MiB with twice the captures (at most 500)"
+        f"extraction {best['once']:.1f} s ({work['once']:.1f} s of processors), ratio {ratio:.2f} (at most 3)"
     )
-    print(f"twice the captures take {best['twice']:.1f} s, {growth:.2f} times (1.70 to 2.30)")
+    print(
+        f"peak memory {max(peak['once']):.0f} MiB, {max(peak['twice']):.0f} MiB with twice the captures (at most 500)"
+    )
+    print(
+        f"twice the captures take {best['twice']:.1f} s ({work['twice']:.1f} s of processors), "
+        f"{growth:.2f} times the processors' time (1.70 to 2.30)"
+    )
     figures = {
         "extraction_over_bare": ratio,
-        "extraction_mib": max(peak.values()),
+        "extraction_mib": highest,
         "extraction_growth": growth,
     }
     print(json.dumps(figures))
-    kept = ratio <= 3 and max(peak.values()) <= 500 and 1.7 <= growth <= 2.3 and size >= 2**30
+    kept = ratio <= 3 and highest <= 500 and 1.7 <= growth <= 2.3 and size >= 2**30
     return 0 if kept or wishes.legs < LEGS else 1
 
 
