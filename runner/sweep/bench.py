@@ -68,6 +68,9 @@ class Ratings:
 class Bench:
     """Opened instruments and their state.
 
+    Attributes:
+        has_comparator: the fixture took a current at which it ends a pulse by itself.
+
     Args:
         roles: role objects by role name.
         ratings: limits and figures.
@@ -79,6 +82,7 @@ class Bench:
         self.ratings = ratings
         self.clock = clock
         self.state = State.REST
+        self.has_comparator = False
         self.identities: dict[str, Identity] = {}
         self._channel = 0
         self._path = ""
@@ -389,7 +393,7 @@ class Bench:
             self._asked = setup
         if self._trip != trip:
             self._trip = None
-            self.pulser.protect(trip)
+            self.has_comparator = self.pulser.protect(trip)
             self._trip = trip
         if (self._width, self._polarity) != (width, polarity):
             self._width = None

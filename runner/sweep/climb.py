@@ -148,6 +148,7 @@ class _Climb:
             if self.scouts >= _MOST_SCOUTS:
                 return f"{self.scouts} scouting pulses did not get to {width * 1e6:.4g} us"
             self.scouts += 1
+            self.night.check(self.night.time)
             self.night.note(
                 "climb", f"scouting pulse of {step.width * 1e6:.4g} us on the way to {width * 1e6:.4g} us"
             )
@@ -209,8 +210,8 @@ class _Climb:
             self.initial_slope = look.start_slope
         hot = self.night.watch_body(self.part, seen.body_degC, self.body_degC)
         self.body_degC = seen.body_degC
-        if look.peak >= self.fixture.trip:
-            return f"{look.peak:.3g} A: the fixture's comparator stands at {self.fixture.trip:.3g} A"
+        if look.is_cut_short or look.peak >= self.fixture.trip:
+            return f"{look.peak:.3g} A: the fixture ends pulses at about {self.fixture.trip:.3g} A by itself"
         if seen.clipped[1]:
             return "current beyond the digitizer's largest range; wider pulses cannot be predicted"
         return hot

@@ -18,6 +18,7 @@ _EDGE = 2  # samples of the falling edge
 _FEWEST = 12  # samples of a pulse, below which slopes are not looked at
 _LAST, _BEFORE = 0.85, 0.65  # of the end current: where the last window of it begins, and the one before
 _START = 0.3  # of the end current: up to here is the start of the pulse
+_SHORTER, _LATE = 0.03, 60e-9  # of the width, and s: a pulse shorter than asked for by both was cut
 _STEEPEST_SEEN = 40.0  # exponents beyond this are noise
 
 
@@ -26,7 +27,7 @@ class Look:
     """What one point's pulses looked like; SI.
 
     Attributes:
-        width: of the pulse that was asked for.
+        width: of the pulse that was asked for; on_time: how long the switch was seen on.
         peak: largest current of any repeat.
         end_current: current at the end of the pulse, from the mean of the repeats.
         start_current: current before the pulse (mean before the trigger), still in `peak` and `end_current`.
@@ -41,6 +42,7 @@ class Look:
     """
 
     width: float
+    on_time: float
     peak: float
     end_current: float
     start_current: float
@@ -53,6 +55,11 @@ class Look:
     end_slope: float
     slope_error: float
     growth: float
+
+    @property
+    def is_cut_short(self) -> bool:
+        """The switch was off before its time: the fixture ended the pulse by itself."""
+        return self.on_time < min((1 - _SHORTER) * self.width, self.width - _LATE)
 
     @property
     def secant_slope(self) -> float:
@@ -114,6 +121,7 @@ def look_at(
     charge = float(through.sum() * interval)
     return Look(
         width=width,
+        on_time=float(on[-1] - on[0] + 1) * interval,
         peak=float(current.max()) - start_current,
         end_current=float(through[-max(count // 50, 1) :].mean()),
         start_current=start_current,

@@ -1,5 +1,6 @@
 """One pulse point: settings, conditioning, captures, readings around them. What comes out is judged elsewhere."""
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -85,7 +86,7 @@ class PulseFixture:
         self._digitizer = loaded.bench.digitizer
         self._channel = loaded.plan.parts[part].channel
         self._resistance = resistance
-        self.trip = trip_level(limit, rail=self._pulse.rail, inductance=loaded.plan.parts[part].inductance)
+        self._trip = trip_level(limit, rail=self._pulse.rail, inductance=loaded.plan.parts[part].inductance)
         shunt, skew = loaded.bench.fixture.shunt, self._digitizer.calibration.get("skew")
         series = (
             shunt.series_inductance.value
@@ -112,6 +113,11 @@ class PulseFixture:
     def longest(self) -> float:
         """Longest pulse whose end is still in the capture [s]."""
         return 0.95 * (self._samples - self._pretrigger) * self._digitizer.intervals[-1]
+
+    @property
+    def trip(self) -> float:
+        """Current at which the fixture itself ends a pulse [A]; infinite for one that cannot."""
+        return self._trip if self._bench.has_comparator else math.inf
 
     def get_ready(self) -> None:
         """Wired for pulses and charged, from any state."""
@@ -148,7 +154,7 @@ class PulseFixture:
         bench, rest = self._bench, self._pulse.rest
         if bench.state is not State.CHARGED:
             self.get_ready()
-        self._setup = bench.set_pulse(width, self._choose(width, current), self.trip, self.polarity)
+        self._setup = bench.set_pulse(width, self._choose(width, current), self._trip, self.polarity)
         bench.may_fire()
         start = now = bench.clock.now() if start is None else start
         if conditioning:
@@ -192,7 +198,7 @@ class PulseFixture:
     def fire_unseen(self, width: float, polarity: int) -> None:
         """One pulse of `width` [s] that nobody records, and a rest; only after a `measure` of one at least as wide."""
         assert self._setup is not None
-        self._bench.set_pulse(width, self._setup, self.trip, polarity)
+        self._bench.set_pulse(width, self._setup, self._trip, polarity)
         self._bench.may_fire()
         self._bench.pulser.fire()
         self._bench.clock.sleep(self._pulse.rest)

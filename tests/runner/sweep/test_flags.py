@@ -19,6 +19,7 @@ from runner.sweep.look import Look
 # A lossless 22 uH part after 10 us at 12 V: 12 V * 10 us / 22 uH = 5.45 A.
 GOOD = Look(
     width=10e-6,
+    on_time=10e-6,
     peak=5.45,
     end_current=5.45,
     start_current=0.0,

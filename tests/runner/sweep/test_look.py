@@ -65,3 +65,12 @@ def test_a_voltage_channel_that_is_late_is_brought_back() -> None:
     assert look is not None
     assert straight is not None
     assert look.end_slope == straight.end_slope
+
+
+def test_a_pulse_that_the_fixture_ended_is_cut_short() -> None:
+    time = (np.arange(2000) - 200) * 1e-8
+    for width, is_cut in ((1e-5, False), (0.98e-5, False), (0.9e-5, True)):
+        on = (time >= 0) & (time < width)
+        look = look_at(np.where(on, 12.0, 0.0)[None], np.where(on, 5e5 * time, 0.0)[None], **ABOUT)
+        assert look is not None
+        assert look.is_cut_short is is_cut

@@ -9,6 +9,7 @@ from runner.sweep.stopping import StopAt, judge_stop
 
 LOOK = Look(
     width=1e-5,
+    on_time=1e-5,
     peak=10.0,
     end_current=10.0,
     start_current=0.0,
