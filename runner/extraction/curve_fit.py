@@ -82,7 +82,8 @@ def fit_curve(data: FitData) -> Fit:
         fits.append(_fit_law(law, data, start))
         if max(fits[-1].size, fits[-1].flat_size) < SMALL and fits[-1].misfit < 1.5:
             break  # a law that fits almost by itself leaves another nothing to do better
-    return max(fits, key=lambda fit: fit.evidence)
+    # The evidence of a fit that did not arrive is what its last linearisation promises, not what its curve does.
+    return max(fits, key=lambda fit: (fit.misfit < BAD, fit.evidence))
 
 
 def refit(fit: Fit, data: FitData, turns: int = 3) -> Fit:
