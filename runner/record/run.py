@@ -43,12 +43,22 @@ class PointCaptures:
     """
 
     time: FloatArray
-    voltage: FloatArray
-    current: FloatArray
     voltage_codes: Codes
     current_codes: Codes
     repeat: Codes
     setting: dict[str, Any]
+
+    # Made when asked for: whoever works on codes, as extraction does, need not pay for arrays four times as large.
+
+    @property
+    def voltage(self) -> FloatArray:
+        """Across the part [r, n] V."""
+        return _scaled(self.voltage_codes, self.setting["v_scale"], self.setting["v_offset"])
+
+    @property
+    def current(self) -> FloatArray:
+        """Through the part [r, n] A."""
+        return _scaled(self.current_codes, self.setting["i_scale"], self.setting["i_offset"])
 
 
 @dataclass(frozen=True, slots=True)
@@ -309,8 +319,6 @@ class Run:
         setting = group.setting
         return PointCaptures(
             time=group.time,
-            voltage=voltage.astype(np.float64) * setting["v_scale"] + setting["v_offset"],
-            current=current.astype(np.float64) * setting["i_scale"] + setting["i_offset"],
             voltage_codes=voltage,
             current_codes=current,
             repeat=group.repeat[first:last],
@@ -379,6 +387,10 @@ class Run:
                 made["voltage"], made["current"], time, made["repeat"][:], setting
             )
         return self._groups[name]
+
+
+def _scaled(codes: Codes, factor: float, offset: float) -> FloatArray:
+    return np.asarray(codes.astype(np.float64) * factor + offset)
 
 
 def _log(made: h5py.Group) -> tuple[FloatArray, FloatArray]:
