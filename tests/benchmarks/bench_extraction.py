@@ -199,7 +199,7 @@ def main() -> int:
     parser.add_argument("--job", choices=("make", "bare", "extract"), help=argparse.SUPPRESS)
     parser.add_argument("--place", type=Path, help=argparse.SUPPRESS)
     parser.add_argument("--legs", type=int, default=LEGS)
-    parser.add_argument("--tries", type=int, default=2, help="the quickest of so many passes counts")
+    parser.add_argument("--tries", type=int, default=3, help="the quickest of so many passes counts")
     wishes = parser.parse_args()
     if wishes.job:
         job(wishes)
