@@ -134,7 +134,7 @@ class _Study:
     # ---- getting there
 
     def _climb(self, sign: int, current: float) -> str | None:
-        """Scouting pulses up to the plan's width, or as far as the limits and `stop_at` let them; gives why there is no way."""
+        """Scouting pulses up to the plan's width, or as far as limits and `stop_at` let them; gives why there is no way."""
         last = self.seen.get((sign, current))
         if last is not None:
             return None
