@@ -22,7 +22,8 @@ def cautions(loaded: "LoadedPlan") -> list[str]:
             worst = bank.capacitance * plan.limits.rail**2 / 2
             said.append(
                 f"The bank will hold {energy:.2g} J at {plan.pulse.rail:g} V, {worst:.2g} J at the rail limit; "
-                "a short throws sparks and burns. Discharge it, measure that it is discharged, and short it before you touch the fixture."
+                "a short throws sparks and burns. Discharge it, measure that it is discharged, and short it before you "
+                "touch the fixture."
             )
         if plan.limits.rail > HAZARDOUS_VOLTAGE:
             said.append(f"A rail of {plan.limits.rail:g} V is dangerous to touch.")

@@ -45,8 +45,8 @@ class Fit:
     """A fitted curve in scaled units; p parameters: law, deviation, common effects.
 
     ``covariance`` [p, p] of z, ``covariance_without_delay`` the same with the common ones held, and what of that is noise
-    and not model; ``gain`` [p, n]: how z moves when the rows move; ``size``, ``flat_size``, ``length``, ``inflation``: what the
-    evidence chose; ``misfit``: mean square of the whitened residuals.
+    and not model; ``gain`` [p, n]: how z moves when the rows move; ``size``, ``flat_size``, ``length``, ``inflation``: what
+    the evidence chose; ``misfit``: mean square of the whitened residuals.
     """
 
     data: FitData

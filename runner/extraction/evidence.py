@@ -2,8 +2,8 @@
 
 At a curve z the rows obey r = J·(z' − z) + noise. Law and common parameters have fixed normal priors, the deviation a
 Gaussian process of a size and length that are to be found, the noise a factor by which it may be larger than said.
-Everything but a 40 × 40 matrix is done once, so that trying sizes, lengths and factors costs next to nothing. With flat priors of the law this is restricted maximum likelihood (REML; Patterson & Thompson, Biometrika 58
-(1971) 545).
+Everything but a 40 × 40 matrix is done once, so that trying sizes, lengths and factors costs next to nothing.
+With flat priors of the law this is restricted maximum likelihood (REML; Patterson & Thompson, Biometrika 58 (1971) 545).
 """
 
 from collections.abc import Callable

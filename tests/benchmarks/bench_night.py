@@ -59,7 +59,8 @@ def bench_with(lags, into):
     text = (PLANS / "benches" / "mock.yaml").read_text(encoding="utf-8")
     part = "1: {law: gapped, "
     guess = "part_time_constants: [4 min, 15 min]"
-    assert text.count(part) == 1 and text.count(guess) == 1
+    assert text.count(part) == 1
+    assert text.count(guess) == 1
     written = f"[{lags[0]}, {lags[1]}]"
     text = text.replace(part, f"{part}time_constants: {written}, ").replace(
         guess, f"part_time_constants: {written}"

@@ -10,7 +10,7 @@ extraction's pure core, without sockets and files, which other tests cover: what
 
 Efficiency is the root-mean-square error of Isat over the Cramér-Rao bound of the true law with its parameters unknown,
 white current noise only: bound = sqrt(q'·F⁻¹·q), F = Σ (∂i/∂θ)(∂i/∂θ)'/σ², q = ∂Isat/∂θ, with ∂i/∂θ = −(∂λ/∂θ)/L at
-constant λ and σ the noise of one sample over the root of the repeats. The captures of that part have that noise and no other.
+constant λ and σ the noise of one sample over the root of the repeats. Its captures have that noise and no other.
 """
 
 import argparse
@@ -33,7 +33,7 @@ ROOT = Path(__file__).resolve().parents[2]
 sys.path.insert(0, str(ROOT))
 
 from mock_instruments.circuit import Bank, Loop, Switch, fire
-from mock_instruments.flux import FluxCurve, FluxLaw, Term, copper_resistance
+from mock_instruments.flux import FluxCurve, FluxLaw, copper_resistance
 from mock_instruments.sampling import Settings as Sampling
 from mock_instruments.sampling import capture
 from mock_instruments.spec import DigitizerSpec
