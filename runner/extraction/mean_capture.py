@@ -17,6 +17,9 @@ from runner.arrays import BoolArray, FloatArray
 Codes = NDArray[Any]  # integers as delivered, or floats
 ODD_REPEAT = 8.0  # robust standard deviations from the other repeats
 FEWEST_PRETRIGGER = 8
+# No digitizer is better than about 20 bits; what is quieter comes from a simulator, and weights of a noise near zero would
+# drown every other uncertainty of the fit.
+QUIETEST = 1e-6  # of the largest value
 
 
 @dataclass(frozen=True, slots=True)
@@ -98,7 +101,8 @@ def average(voltage: Codes, current: Codes, setting: Setting, *, guard: float = 
         v_zero = -setting.v_offset / setting.v_scale
         i_zero = -setting.i_offset / setting.i_scale
     mean_v, mean_i = (v_mean - v_zero) * setting.v_scale, (i_mean - i_zero) * setting.i_scale
-    noise_v, noise_i = v_noise * abs(setting.v_scale), i_noise * abs(setting.i_scale)
+    noise_v = max(v_noise * abs(setting.v_scale), QUIETEST * float(np.abs(mean_v).max()))
+    noise_i = max(i_noise * abs(setting.i_scale), QUIETEST * float(np.abs(mean_i).max()))
     has = bool(mean_v.max() > 8 * noise_v and mean_i.max() > 5 * noise_i) if samples > before else False
     return MeanCapture(
         setting, mean_v, mean_i, clean, r, noise_v, noise_i, before, scatter, odd,
