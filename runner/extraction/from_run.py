@@ -3,12 +3,15 @@
 Captures are read point by point and averaged at once, so memory holds one point and the ramps of a leg.
 """
 
-from collections.abc import Iterator
+from collections import deque
+from collections.abc import Iterator, Sequence
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, replace
 from datetime import UTC, datetime
 from typing import Any
 
 import numpy as np
+from threadpoolctl import threadpool_limits  # type: ignore[import-untyped]  # it ships no types
 
 from runner.arrays import FloatArray, IntArray
 from runner.extraction.bench_constants import from_bench, from_captures_file
@@ -40,6 +43,7 @@ from runner.versions import software
 
 PULSE, BIAS, REMANENCE = 1, 2, 3
 METHODS = {"pulse": PULSE, "bias": BIAS}
+AHEAD = 2  # points that are read before they are needed
 GRID = 161  # currents of a surface table
 
 
@@ -68,6 +72,12 @@ def extract(run: Run) -> Extraction:
     Raises:
         InputError: the run's own plan or bench cannot be read.
     """
+    # The fits are many small matrices, for which a second thread of the algebra library costs more than it gives.
+    with threadpool_limits(1, "blas"):
+        return _extract(run)
+
+
+def _extract(run: Run) -> Extraction:
     parts, calibration, settings = _read_plan(run)
     points = run.points
     surfaces: list[SurfaceTable] = []
@@ -165,12 +175,14 @@ def _pulse_legs(
 ) -> MethodLegs:
     points = run.points
     method = MethodLegs("pulse")
-    for at, rows in _by_leg(points, mine, calibration):
+    legs = _by_leg(points, mine, calibration)
+    stream = _ahead(run, [int(points["point"][row]) for _, rows in legs for row in rows.tolist()])
+    for at, rows in legs:
         resistance = _resistance(points, rows, calibration, facts, at)
         body = dict(zip(rows.tolist(), _body(points, rows, calibration), strict=True))
         ramps = []
         for row in rows.tolist():
-            ramp = _ramp(run, int(points["point"][row]), calibration, doubts)
+            ramp = _ramp(next(stream), int(points["point"][row]), calibration, doubts)
             if ramp is not None:
                 ramps.append(replace(ramp, temperature_degC=float(body[row])))
         if not ramps:
@@ -182,7 +194,6 @@ def _pulse_legs(
                 temperature_degC=at,
                 resistance=resistance.ohm,
                 resistance_uncertainty=resistance.uncertainty,
-                like=method.legs[-1] if method.legs else None,
             )
         )
         method.resistances.append(resistance)
@@ -204,8 +215,22 @@ def _setting(captures: PointCaptures) -> Setting:
     )
 
 
-def _ramp(run: Run, point: int, calibration: Calibration, doubts: list[Doubt]) -> Ramp | None:
-    captures = run.captures(point)
+def _ahead(run: Run, points: Sequence[int]) -> Iterator[PointCaptures | None]:
+    """Captures of the points in order, read a few points ahead by a thread of its own: HDF5 reads and unpacks without
+    holding up the fits."""
+    with ThreadPoolExecutor(1) as reader:
+        waiting = deque(reader.submit(run.captures, point) for point in points[:AHEAD])
+        for later in points[AHEAD:]:
+            ready = waiting.popleft().result()
+            waiting.append(reader.submit(run.captures, later))
+            yield ready
+        while waiting:
+            yield waiting.popleft().result()
+
+
+def _ramp(
+    captures: PointCaptures | None, point: int, calibration: Calibration, doubts: list[Doubt]
+) -> Ramp | None:
     if captures is None:
         return None
     setting = _setting(captures)
@@ -320,7 +345,6 @@ def _bias_legs(
             Readings(current[climbing], inductance[climbing], _body(points, rows, calibration)[climbing]),
             calibration,
             temperature_degC=at,
-            like=method.legs[-1] if method.legs else None,
         )
         if leg is None:
             doubts.append(

@@ -175,14 +175,13 @@ def shift(integral: FloatArray, slope: FloatArray, step: float, late: float) -> 
         return integral
     whole = int(np.floor(late / step))
     f = late / step - whole
-    at = np.clip(np.arange(len(integral)) + whole, 0, len(integral) - 2)
-    p0, p1, m0, m1 = integral[at], integral[at + 1], slope[at] * step, slope[at + 1] * step
-    return np.asarray(
-        (1 + 2 * f) * (1 - f) ** 2 * p0
-        + f * (1 - f) ** 2 * m0
-        + f * f * (3 - 2 * f) * p1
-        + f * f * (f - 1) * m1
-    )
+    cells = (1 + 2 * f) * (1 - f) ** 2 * integral[:-1] + f * f * (3 - 2 * f) * integral[1:]
+    cells += step * f * (1 - f) ** 2 * slope[:-1] + step * f * f * (f - 1) * slope[1:]
+    # What a delay reaches beyond either end is what stands there.
+    before, behind = max(0, -whole), max(0, whole)
+    return np.concatenate([np.full(before, cells[0]), cells[behind:], np.full(behind + 1, cells[-1])])[
+        : len(integral)
+    ]
 
 
 def undo_shunt_inductance(reading: FloatArray, step: float, time_constant: float) -> FloatArray:

@@ -130,7 +130,15 @@ def ramps_of() -> Callable[..., list[Ramp]]:
 def leg_of() -> Callable[..., LegCurve]:
     """leg_of(part, bench, top=..., temperature_degC=..., calibration=...): captures, and the curve through them."""
 
-    def make(part, bench: Bench | None = None, *, top=14.0, temperature_degC=25.0, calibration=None, uncertainty=0.0):
+    def make(
+        part,
+        bench: Bench | None = None,
+        *,
+        top=14.0,
+        temperature_degC=25.0,
+        calibration=None,
+        uncertainty=0.0,
+    ):
         bench = bench or Bench()
         calibration = calibration or Calibration()
         return pulse_leg(

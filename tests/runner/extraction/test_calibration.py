@@ -38,7 +38,9 @@ def test_winding_temperature_undoes_the_copper_law():
 
 def test_shunt_time_constant_and_temperature():
     """10 nH on 0.1 Ω is 100 ns, 1 nH on 1 mΩ is 1 µs (check values, section 11)."""
-    assert Calibration(shunt=Constant(0.1), shunt_inductance=Constant(10e-9)).shunt_time_constant == pytest.approx(100e-9)
+    assert Calibration(
+        shunt=Constant(0.1), shunt_inductance=Constant(10e-9)
+    ).shunt_time_constant == pytest.approx(100e-9)
     slow = Calibration(shunt=Constant(1e-3), shunt_inductance=Constant(1e-9))
     assert slow.shunt_time_constant == pytest.approx(1e-6)
     warm = Calibration(shunt=Constant(0.1), tempco=Constant(100e-6), ambient_degC=Constant(35.0))

@@ -29,7 +29,9 @@ def test_end_gauge_combined_uncertainty_and_effective_degrees_of_freedom():
     d = combine(u for u, _ in D)
     assert d == pytest.approx(9.7, abs=0.05)
     # Published as 25.6 from the rounded 9.7 nm; unrounded it is 25.45.
-    assert effective_degrees_of_freedom([u for u, _ in D], [nu for _, nu in D]) == pytest.approx(25.6, abs=0.2)
+    assert effective_degrees_of_freedom([u for u, _ in D], [nu for _, nu in D]) == pytest.approx(
+        25.6, abs=0.2
+    )
     parts = [STANDARD, (d, 25.6), DIFFERENCE_ALPHA, DIFFERENCE_THETA]
     u = combine(u for u, _ in parts)
     nu = effective_degrees_of_freedom([u for u, _ in parts], [nu for _, nu in parts])
@@ -102,7 +104,14 @@ def test_coverage_factors_of_table_g2(coverage, degrees, expected):
 
 @pytest.mark.parametrize(
     ("count", "content", "expected"),
-    [(5, 0.95, 4.203), (10, 0.95, 2.911), (20, 0.95, 2.396), (30, 0.95, 2.220), (5, 0.90, 3.4066), (100, 0.99, 2.6840)],
+    [
+        (5, 0.95, 4.203),
+        (10, 0.95, 2.911),
+        (20, 0.95, 2.396),
+        (30, 0.95, 2.220),
+        (5, 0.90, 3.4066),
+        (100, 0.99, 2.6840),
+    ],
 )
 def test_one_sided_tolerance_factors(count, content, expected):
     """95 % confidence; first four as printed in ISO 16269-6, the others recomputed from the non-central t."""

@@ -68,9 +68,7 @@ def test_drawn_saturation_currents_agree_with_the_budget(ramps_of, bench, tanh_p
     )
     setup = bench(samples=200, widths=8, current_noise=0.02)
     ramps = ramps_of(tanh_part, setup, 14.0, calibration)
-    leg = pulse_leg(
-        ramps, calibration, temperature_degC=25.0, resistance=0.02, resistance_uncertainty=1e-4
-    )
+    leg = pulse_leg(ramps, calibration, temperature_degC=25.0, resistance=0.02, resistance_uncertainty=1e-4)
     drawn = draw_knees(
         leg, calibration, drops=(0.3,), resistance_uncertainty=1e-4, trials=300,
         generator=np.random.default_rng(8),
