@@ -2,8 +2,8 @@
 
 In this order, because each step makes the next one harmless. No instrument that fails holds up the ones behind it: a
 step is tried, then once more after a reconnect, then the walk goes on and says in the end what could not be confirmed.
-The relays are the exception to "goes on": they are moved only once the bank is known to be discharged, or once so many
-time constants of the bleeder have passed that it must be. Nothing here raises.
+The relays are the exception to "goes on": they are moved only once the bias is off and the bank is known to be discharged,
+or once the rail is off for so many time constants of the bleeder that it must be. Nothing here raises.
 
 The watchdog walks the same way with sessions of its own, so nothing here may count on what a run remembers.
 """
@@ -89,13 +89,14 @@ def reach_safe_state(
     """
     walk = _Walk(roles, say)
     walk.step("pulser", "pulser off", lambda pulser: pulser.off())
-    walk.step("bias_source", "bias at zero and off", lambda source: _end_bias(source, rule, clock))
-    walk.step("supply", "rail off", lambda supply: supply.off())
-    is_discharged = _discharge(walk, rule, clock, rule.highest_rail if bank is None else bank)
-    if is_discharged:
+    is_still = walk.step("bias_source", "bias at zero and off", lambda source: _end_bias(source, rule, clock))
+    is_off = walk.step("supply", "rail off", lambda supply: supply.off())
+    is_discharged = _discharge(walk, rule, clock, rule.highest_rail if bank is None else bank, is_off=is_off)
+    if is_discharged and is_still:
         walk.step("multiplexer", "relays open", lambda multiplexer: multiplexer.open_all())
     elif "multiplexer" in roles:
-        walk.unconfirmed.append("multiplexer: relays not opened, the bank may still be charged")
+        danger = "bias current may still flow" if is_discharged else "the bank may still be charged"
+        walk.unconfirmed.append(f"multiplexer: relays not opened, {danger}")
     walk.step(
         "chamber", f"chamber to {rule.chamber_degC:g} degC", lambda chamber: chamber.set(rule.chamber_degC)
     )
@@ -155,8 +156,11 @@ def _end_bias(source: Any, rule: SafeRule, clock: Clock) -> None:
     source.off()
 
 
-def _discharge(walk: _Walk, rule: SafeRule, clock: Clock, bank: float) -> bool:
-    """Wait for the bleeder, from `bank` [V] or from what the supply's voltmeter shows, whichever is more."""
+def _discharge(walk: _Walk, rule: SafeRule, clock: Clock, bank: float, *, is_off: bool) -> bool:
+    """Wait for the bleeder, from `bank` [V] or from what the supply's voltmeter shows, whichever is more.
+
+    A bank whose voltage nobody can read is empty by then only if the rail behind it `is_off`.
+    """
     if "supply" not in walk.roles or rule.bleed <= 0:
         return True
     voltage = _bank_voltage(walk)
@@ -171,14 +175,15 @@ def _discharge(walk: _Walk, rule: SafeRule, clock: Clock, bank: float) -> bool:
                 f"bank left to its bleeder for {seconds:.0f} s, from at most {rule.highest_rail:g} V"
             )
             walk.unconfirmed.append("supply: the bank's voltage could not be read")
-            return True
+            return is_off
         voltage = _bank_voltage(walk)
         if voltage <= DISCHARGED * 1.1:
             walk.done.append("bank discharged")
             return True
         clock.sleep(max(seconds, rule.bleed) / 5)
     if math.isnan(voltage):
-        return True
+        walk.unconfirmed.append("supply: the bank's voltage could not be read")
+        return is_off
     walk.unconfirmed.append(f"bank still at {voltage:.1f} V; its bleeder may be open")
     return False
 

@@ -133,6 +133,10 @@ def test_an_instrument_that_fails_holds_up_nobody_else(role: str, failures: floa
         "multiplexer": "multiplexer.open_all",
         "chamber": "chamber.set",
     }
+    stays_on = failures != 1 and role in ("supply", "bias_source")
+    if stays_on:  # nobody knows that it is off: a relay would be moved on a charged bank or under current
+        assert others.pop("multiplexer") not in done
+        assert "relays not opened" in str(report)
     assert {step for name, step in others.items() if name != role} <= done
     assert report.is_confirmed is (failures == 1)
 
@@ -148,7 +152,7 @@ def test_the_dialects_own_safe_state_is_the_last_resort() -> None:
 def test_a_bank_whose_voltmeter_is_lost_gets_the_longest_time_it_could_need() -> None:
     bench = FakeBench()
     bench.roles["supply"].failing = math.inf  # type: ignore[assignment]
-    report = bench.walk()
+    report = bench.walk()  # it still takes its safe-state messages, so that the rail is off
     assert bench.clock.time >= discharge_time(RULE.highest_rail, RULE.bleed)
     assert "multiplexer.open_all" in bench.order()
     assert not report.is_confirmed
