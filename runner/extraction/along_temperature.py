@@ -10,9 +10,10 @@ from dataclasses import dataclass
 import numpy as np
 
 from runner.arrays import FloatArray
+from runner.extraction.gum import variances
 
-LENGTHS = np.geomspace(30.0, 600.0, 16)  # K that are tried
-SIZES = np.geomspace(1e-5, 3.0, 23)
+LENGTHS = np.geomspace(30.0, 600.0, 10)  # K that are tried
+SIZES = np.geomspace(1e-5, 3.0, 19)
 
 
 @dataclass(frozen=True, slots=True)
@@ -27,25 +28,21 @@ class Smoother:
 
     def size_and_likelihood(self, values: FloatArray, uncertainties: FloatArray) -> tuple[float, float]:
         """Best size of the process about the line for ``values`` [m], and its −2 log restricted likelihood."""
-        best = (0.0, np.inf)
-        if len(self.at) < 3:
-            return best[0], 0.0
+        m = len(self.at)
+        if m < 3:
+            return 0.0, 0.0
         basis = self._basis(self.at)
-        shape = self._correlation(self.at, self.at)
-        for size in SIZES:
-            k = size**2 * shape + np.diag(uncertainties**2 + 1e-14)
-            root = np.linalg.cholesky(k)
-            y, b = np.linalg.solve(root, values), np.linalg.solve(root, basis)
-            normal = b.T @ b
-            rest = y - b @ np.linalg.solve(normal, b.T @ y)
-            value = (
-                float(rest @ rest)
-                + 2 * float(np.log(np.diag(root)).sum())
-                + float(np.linalg.slogdet(normal)[1])
-            )
-            if value < best[1]:
-                best = float(size), value
-        return best
+        k = SIZES[:, None, None] ** 2 * self._correlation(self.at, self.at) + np.diag(
+            uncertainties**2 + 1e-14
+        )
+        inverse = np.linalg.inv(k)  # all sizes at once
+        normal = basis.T @ inverse @ basis
+        line = np.linalg.solve(normal, basis.T @ inverse @ values[:, None])
+        rest = values[:, None] - basis @ line
+        scores = (np.swapaxes(rest, 1, 2) @ inverse @ rest)[:, 0, 0]
+        scores = scores + np.linalg.slogdet(k)[1] + np.linalg.slogdet(normal)[1]
+        best = int(np.argmin(scores))
+        return float(SIZES[best]), float(scores[best])
 
     def weights(self, x: FloatArray, size: float, uncertainties: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Weights [k, m] of the legs at temperatures ``x`` [k], and the standard deviation [k] of what they leave open."""
@@ -59,15 +56,13 @@ class Smoother:
         noise = np.maximum(uncertainties, 1e-3 * size) ** 2
         k = size**2 * self._correlation(self.at, self.at) + np.diag(noise)
         cross = size**2 * self._correlation(x, self.at)
-        inverse = np.linalg.inv(k)
-        normal = np.linalg.inv(basis.T @ inverse @ basis)
+        inverse: FloatArray = np.asarray(np.linalg.inv(k))
+        normal: FloatArray = np.asarray(np.linalg.inv(basis.T @ inverse @ basis))
         line = normal @ basis.T @ inverse
         weights = there @ line + cross @ inverse @ (np.eye(m) - basis @ line)
         gap = there - cross @ inverse @ basis
-        variance = size**2 - np.einsum("ij,jk,ik->i", cross, inverse, cross)
-        variance = variance + np.einsum("ij,jk,ik->i", gap, normal, gap)
         # What the legs' own noise contributes is counted with the legs, not here.
-        variance = variance - np.einsum("ij,j->i", weights**2, noise)
+        variance = size**2 - variances(cross, inverse) + variances(gap, normal) - weights**2 @ noise
         return np.asarray(weights), np.sqrt(np.maximum(variance, 0.0))
 
     def _basis(self, x: FloatArray) -> FloatArray:

@@ -4,7 +4,7 @@ What it gives is the incremental (reversible) inductance, which is not the pulse
 core with hysteresis: the two are never merged. Readings on the way up and on the way down are separate branches.
 """
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 
 import numpy as np
@@ -82,6 +82,9 @@ class ReadingData:
         curve = np.interp(fine, self.current, self.inductance)
         return fine, np.concatenate([[0.0], np.cumsum(0.5 * (curve[1:] + curve[:-1]) * fine[1])])
 
+    def pilot_slack(self, inductance: Callable[[FloatArray], FloatArray]) -> FloatArray:
+        return np.zeros(200)
+
     def linearise(
         self, model: CurveModel, shape: Shape, z: FloatArray
     ) -> tuple[FloatArray, FloatArray, FloatArray]:
@@ -101,12 +104,17 @@ class ReadingData:
         """Readings are linear in the inductance from the start."""
         return self.linearise(model, shape, z)
 
+    def inductance_at_rows(self, model: CurveModel, shape: Shape, z: FloatArray) -> FloatArray:
+        return self.linearise(model, shape, z)[2]
+
     def noise(self, inductance: FloatArray) -> Noise:
         """Independent noise in proportion to the reading; its size is for the fit to find (starting at 1e-4)."""
         return Noise((np.diag(1e-4 * np.maximum(inductance, 0.01)),), (ROWS,))
 
 
-def bias_leg(readings: Readings, calibration: Calibration, *, temperature_degC: float) -> LegCurve | None:
+def bias_leg(
+    readings: Readings, calibration: Calibration, *, temperature_degC: float, like: LegCurve | None = None
+) -> LegCurve | None:
     """The curve through one branch; None with fewer than five different currents or without a span of current."""
     order = np.argsort(readings.current, kind="stable")
     current, inductance = readings.current[order], readings.inductance[order]
@@ -116,7 +124,7 @@ def bias_leg(readings: Readings, calibration: Calibration, *, temperature_degC: 
     if not first > 0:
         return None
     data = ReadingData(current / top, inductance / first, readings.temperature_degC[order], top, first)
-    fit = fit_curve(data)
+    fit = fit_curve(data, like=None if like is None else like.fit)
     return leg_curve(
         fit,
         Scale(top, first * top),

@@ -14,7 +14,9 @@ import numpy as np
 from runner.arrays import FloatArray
 from runner.extraction.curve_fit import Fit
 from runner.extraction.curve_model import running_integral
-from runner.extraction.gum import combine
+from runner.extraction.gum import combine, variances
+
+NEGLIGIBLE = 1e-3  # of the combined uncertainty
 
 
 @dataclass(frozen=True, slots=True)
@@ -35,9 +37,11 @@ class Quantity:
         return combine((*self.own.values(), *self.shared.values()))
 
     def contributions(self) -> list[tuple[str, float]]:
-        """Name and standard uncertainty of each contribution, the largest first."""
-        every = [(name, abs(u)) for name, u in (*self.own.items(), *self.shared.items()) if u != 0.0]
-        return sorted(every, key=lambda item: -item[1])
+        """Name and standard uncertainty of each contribution, the largest first; what is lost in the
+        rounding of the whole is left out."""
+        every = [(name, abs(u)) for name, u in (*self.own.items(), *self.shared.items())]
+        worth = NEGLIGIBLE * self.uncertainty
+        return sorted([item for item in every if item[1] > worth], key=lambda item: -item[1])
 
     def scaled(self, factor: float) -> "Quantity":
         """The quantity times an exact factor."""
@@ -161,7 +165,7 @@ class LegCurve:
         return self._quantity(float(np.interp(current, self.current, self.inductance)), slopes)
 
     def _uncertainty(self, slopes: FloatArray) -> FloatArray:
-        variance = np.einsum("ij,jk,ik->i", slopes, self.covariance, slopes)
+        variance = variances(slopes, self.covariance)
         for shift in self.shifts.values():
             variance = variance + (slopes @ shift) ** 2
         return np.asarray(np.sqrt(np.maximum(variance, 0.0)))

@@ -6,7 +6,7 @@ from the uncertain voltage offset and a constant from a jittering start; the cur
 All are common to the bins of a ramp and independent between ramps, and reach the current through dg/dλ = 1/L.
 """
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field, replace
 from itertools import pairwise
 from typing import Protocol
@@ -15,7 +15,7 @@ import numpy as np
 from scipy.linalg import cholesky
 from scipy.linalg.lapack import dtrtri
 
-from runner.arrays import FloatArray
+from runner.arrays import FloatArray, IntArray
 from runner.extraction.common_effects import SHUNT, CommonEffects, Scales, ShuntLag, effects_of, shunt_lag
 from runner.extraction.curve_model import CurveModel, Shape
 from runner.extraction.ramp import Ramp
@@ -37,12 +37,14 @@ class FitData(Protocol):
     @property
     def temperatures(self) -> FloatArray: ...
     def pilot(self) -> tuple[FloatArray, FloatArray]: ...
+    def pilot_slack(self, inductance: Callable[[FloatArray], FloatArray]) -> FloatArray: ...
     def linearise(
         self, model: CurveModel, shape: Shape, z: FloatArray
     ) -> tuple[FloatArray, FloatArray, FloatArray]: ...
     def approach(
         self, model: CurveModel, shape: Shape, z: FloatArray, *, held: FloatArray
     ) -> tuple[FloatArray, FloatArray, FloatArray]: ...
+    def inductance_at_rows(self, model: CurveModel, shape: Shape, z: FloatArray) -> FloatArray: ...
     def noise(self, inductance: FloatArray) -> "Noise": ...
 
 
@@ -113,10 +115,19 @@ class CurveData:
         return replace(self, current=current, flux=flux)
 
     def pilot(self) -> tuple[FloatArray, FloatArray]:
-        """A few of the rows, evenly along the flux, for the first look at the laws."""
-        order = np.argsort(self.flux)
-        some = order[np.unique(np.linspace(0, len(order) - 1, 160).astype(np.int64))]
+        """A few of the rows, evenly along the flux, for the first look at the laws: current and flux [k]."""
+        some = self._some
         return self.current[some], self.flux[some]
+
+    def pilot_slack(self, inductance: Callable[[FloatArray], FloatArray]) -> FloatArray:
+        """By how much the pilot's currents are too large [k] for one standard uncertainty of the shunt's time."""
+        lead, _ = self.shunt.effect(np.maximum(inductance(self.current), 0.02))
+        return lead[self._some] * float(self.common.sigmas[SHUNT])
+
+    @property
+    def _some(self) -> IntArray:
+        order = np.argsort(self.flux)
+        return order[np.unique(np.linspace(0, len(order) - 1, 160).astype(np.int64))]
 
     def linearise(
         self, model: CurveModel, shape: Shape, z: FloatArray
@@ -152,9 +163,14 @@ class CurveData:
         flux = self.flux + self.common.flux @ shared + shunt * missing
         current = self.current + self.common.current @ shared - shunt * lead
         found, inductance, slopes = model.at_current(shape, current)
-        effects = self.common.flux / held[:, None] - self.common.current
-        effects[:, SHUNT] = lead + missing / held
+        here = inductance / held
+        effects = self.common.flux / held[:, None] - self.common.current * here[:, None]
+        effects[:, SHUNT] = lead * here + missing / held
         return (found - flux) / held, np.hstack([-slopes / held[:, None], effects]), inductance
+
+    def inductance_at_rows(self, model: CurveModel, shape: Shape, z: FloatArray) -> FloatArray:
+        """L_d of a curve at the measured currents [n], wherever their flux would put them."""
+        return model.at_current(shape, self.current + self.common.current @ z[model.parameters :])[1]
 
     def noise(self, inductance: FloatArray) -> Noise:
         return Noise(tuple(_factors(self, inductance)), self.members)

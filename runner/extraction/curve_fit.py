@@ -24,14 +24,17 @@ Way = Callable[[CurveModel, Shape, FloatArray], tuple[FloatArray, FloatArray, Fl
 
 CANDIDATES = 2
 BAD = 1.5  # misfit at which further laws are tried
+START = np.array([-6.0, -1.2, 0.3, -8.0])  # hyperparameters, see evidence.py
 SMALL = 5e-3  # a deviation (of log L) that hardly matters
 TURNS = 18
+
 # While the residuals are far larger than the noise (log of their ratio) the linearised problem promises too much. Until
 # then a turn believes in residuals half of the present ones and no less; and the law and the delays go first, without
 # a deviation (log size, log length), so that it does not learn what they explain.
 FAR = 0.7
 LAW_ALONE = (-7.0, -1.2)  # and as small below the knee
 LAW_TURNS, DAMPED_TURNS = 8, 14
+HELD = 0.2  # standard deviation about the best parameters of the law alone, once the deviation has joined
 REFRESH = (
     0,
     1,
@@ -69,26 +72,36 @@ class Fit:
     evidence: float
 
 
-def fit_curve(data: FitData) -> Fit:
+def fit_curve(data: FitData, *, like: Fit | None = None) -> Fit:
     """Fit one curve through all rows of a leg.
 
-    ``data``: ramps or readings of one part at one temperature.
+    Args:
+        data: ramps or readings of one part at one temperature.
+        like: fit of the same part at another temperature; its law is tried first, and alone if it does.
     """
-    pilots = sorted((_pilot(law, data) for law in LAWS), key=lambda found: found[1])
+    if like is not None:
+        near = _fit_law(like.model.law, data, like.z[: like.model.law.parameters], _hyper(like))
+        if near.misfit < max(BAD, 1.5 * like.misfit) and near.inflation < 1.5 * like.inflation:
+            return near
+    pilots = sorted((_pilot(law, data) for law in LAWS), key=lambda found: found[1] + found[2].parameters)
     fits: list[Fit] = []
     for number, (start, _, law) in enumerate(pilots):
         if number >= CANDIDATES and min(fit.misfit for fit in fits) < BAD:
             break
-        fits.append(_fit_law(law, data, start))
+        fits.append(_fit_law(law, data, start, START))
         if max(fits[-1].size, fits[-1].flat_size) < SMALL and fits[-1].misfit < 1.5:
             break  # a law that fits almost by itself leaves another nothing to do better
     # The evidence of a fit that did not arrive is what its last linearisation promises, not what its curve does.
     return max(fits, key=lambda fit: (fit.misfit < BAD, fit.evidence))
 
 
+def _hyper(fit: Fit) -> FloatArray:
+    return np.asarray(np.log([fit.size, fit.length, fit.inflation, fit.flat_size]))
+
+
 def refit(fit: Fit, data: FitData, turns: int = 3) -> Fit:
     """The same fit to other values of the same rows; what the evidence chose, and the covariances, are kept."""
-    hyper = np.log(np.array([fit.size, fit.length, fit.inflation, fit.flat_size]))
+    hyper = _hyper(fit)
     mean, prior = _priors(fit.model.law, data)
     noise = data.noise(fit.inductance_at_rows)
     z = fit.z
@@ -147,42 +160,49 @@ def _pilot(law: Law, data: FitData) -> tuple[FloatArray, float, Law]:
     grid = np.linspace(0.0, BEYOND, 501)
     mean, sigma = PRIOR_MEAN[: law.parameters], PRIOR_SIGMA[: law.parameters]
 
-    def misfit(parameters: FloatArray) -> FloatArray:
+    def misfit(whole: FloatArray) -> FloatArray:
+        parameters, shunt = whole[:-1], float(whole[-1])
         inductance = np.maximum(law.inductance(grid, parameters), 1e-6)
         integral = running_integral(inductance, float(grid[1]))
         beyond = grid[-1] + (flux - integral[-1]) / inductance[-1]
         found = np.where(flux > integral[-1], np.minimum(beyond, 3.0), np.interp(flux, integral, grid))
         # A floor below nothing leads to an inductance below nothing; the pilot keeps away from it.
         below = 1e3 * min(0.0, float(parameters[1]))
-        return np.concatenate([(current - found) * 1e3, (parameters - mean) / sigma, [below]])
+        slack = data.pilot_slack(partial(law.inductance, parameters=parameters))
+        rest = (current - shunt * slack - found) * 1e3
+        return np.concatenate([rest, (parameters - mean) / sigma, [below, shunt]])
 
     best: tuple[FloatArray, float, Law] | None = None
     for shape in law.starts or (1.0,):
-        start = np.array([0.0, 0.05, -0.3, np.log(shape)])[: law.parameters]
+        start = np.append(np.array([0.0, 0.05, -0.3, np.log(shape)])[: law.parameters], 0.0)
         found = least_squares(misfit, start, x_scale=0.5, max_nfev=40)
         if best is None or found.cost < best[1]:
-            best = found.x, float(found.cost), law
+            best = found.x[:-1], float(found.cost), law
     assert best is not None
     return best
 
 
-def _fit_law(law: Law, data: FitData, start: FloatArray) -> Fit:
+def _fit_law(law: Law, data: FitData, start: FloatArray, hyper: FloatArray) -> Fit:
     model = CurveModel.around(law, start)
     z = np.concatenate([start, np.zeros(KNOTS + len(data.common.sigmas))])
     mean, prior = _priors(law, data)
-    hyper, value = np.array([-4.0, -1.2, 0.3, -6.0]), np.inf
+    value = np.inf
     noise: Noise | None = None
     by_law, near, last, begun = True, False, np.inf, 0
     for turn in range(TURNS):
-        inductance = data.linearise(model, model.plain_shape(z[: model.parameters]), z)[2]
+        inductance = data.inductance_at_rows(model, model.plain_shape(z[: model.parameters]), z)
         if turn in REFRESH:
             noise = data.noise(inductance)
         assert noise is not None
         way: Way = data.linearise if near else partial(data.approach, held=inductance)
         problem, *_ = _problem_at(model, data, z, noise, mean, prior, way=way)
         away = 0.5 * float(np.log(problem.misfit))
-        if by_law and (away < FAR or turn >= LAW_TURNS or (turn > 1 and away > last - 0.1)):
+        if by_law and (away < FAR or turn >= LAW_TURNS or (turn > 2 and away > last - 0.05)):
             by_law, begun = False, turn
+            # From here on the deviation does the work: law and deviation moving far in opposite directions would be a
+            # long way round to the same curve.
+            mean[: law.parameters] = z[: law.parameters]
+            prior[: law.parameters] = np.maximum(prior[: law.parameters], HELD**-2.0)
         last = away
         damped = away > FAR and turn < DAMPED_TURNS
         if by_law:

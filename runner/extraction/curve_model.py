@@ -15,7 +15,7 @@ from runner.extraction.deviation import KNOTS, arc_length, fallen, knot_matrix
 from runner.extraction.laws import Law
 
 GRID = 801
-BEYOND = 1.02  # the grid reaches a little further than the data, so that noise does not fall off its end
+BEYOND = 1.05  # the grid reaches a little further than the data, so that noise does not fall off its end
 
 
 @dataclass(frozen=True, slots=True)
@@ -71,15 +71,14 @@ class CurveModel:
         return Shape(inductance, running_integral(inductance, float(self.current[1])), none, none)
 
     def at_current(self, shape: Shape, current: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
-        """λ and L_d at ``current`` [n], and dλ/dz [n, p]; currents beyond the grid count as its ends."""
+        """λ and L_d at ``current`` [n], and dλ/dz [n, p]; straight on beyond the grid."""
         step = float(self.current[1])
-        place = np.clip(current, 0.0, self.current[-1]) / step
-        cell = np.minimum(place.astype(np.int64), GRID - 2)
-        f = place - cell
+        cell = np.clip((current / step).astype(np.int64), 0, GRID - 2)
+        f = current / step - cell
         low, high = shape.inductance[cell], shape.inductance[cell + 1]
         flux = shape.flux[cell] + step * f * (low + 0.5 * f * (high - low))
         slopes = shape.flux_slopes[cell] * (1 - f)[:, None] + shape.flux_slopes[cell + 1] * f[:, None]
-        return flux, low + f * (high - low), slopes
+        return flux, np.maximum(low + f * (high - low), 0.1 * low), slopes
 
     def log_slopes(self, shape: Shape, current: FloatArray) -> FloatArray:
         """d(log L_d)/dz [n, p] at ``current`` [n]."""

@@ -1,8 +1,8 @@
 """The linearised fit as a Bayesian problem: how large, how long and how noisy, by marginal likelihood.
 
 At a curve z the rows obey r = J·(z' − z) + noise. Law and common parameters have fixed normal priors, the deviation a
-Gaussian process of a size and length that are to be found, the noise a factor by which it may be larger than said.
-Everything but a 40 × 40 matrix is done once, so that trying sizes, lengths and factors costs next to nothing.
+Gaussian process of sizes and a length that are to be found, the noise a factor by which it may be larger than said.
+Everything but a matrix of some 40 rows is done once, so that trying sizes, lengths and factors costs next to nothing.
 With flat priors of the law this is restricted maximum likelihood (REML; Patterson & Thompson, Biometrika 58 (1971) 545).
 """
 
@@ -17,16 +17,16 @@ from scipy.optimize import minimize
 from runner.arrays import FloatArray
 from runner.extraction.deviation import KNOTS, correlation
 
-SMALLEST_SIZE = 1e-5
+SMALLEST_SIZE = 3e-6
 LENGTH_STEP = (
     0.05  # lengths are tried on a grid of their logarithm, so that what belongs to one is computed once
 )
 # What is thought of the deviation before the data speak: mean and standard deviation of log size, log length (in
 # units of the arc), log noise factor, log size where the core is not yet saturated. Where the noise is not known
 # beforehand its factor is nearly free.
-HYPER_MEAN = np.array([-6.0, -1.2, 0.0, -7.0])
-HYPER_SIGMA = np.array([3.0, 0.7, 0.3, 1.5])
-HYPER_SIGMA_FREE = np.array([3.0, 0.7, 3.0, 1.5])
+HYPER_MEAN = np.array([-9.0, -1.2, 0.0, -9.0])
+HYPER_SIGMA = np.array([4.0, 0.7, 0.3, 2.0])
+HYPER_SIGMA_FREE = np.array([4.0, 0.7, 3.0, 2.0])
 HYPER_HIGH = np.array([0.7, 1.0, 12.0, 0.0])
 SPREAD = np.array([2.0, 0.5, 0.3, 1.0])
 
@@ -132,9 +132,15 @@ class Problem:
         right[inside] = shape.T @ right[inside]
         h[np.diag_indices(len(right))] += self.unit_prior
         # LAPACK by name: a thousand of these are done a fit, and the general routines' checks cost more than the work.
-        root, info = dpotrf(h, lower=1, clean=1, overwrite_a=1)
-        if info != 0:
-            raise np.linalg.LinAlgError("the linearised fit is singular")
+        root, info = dpotrf(h, lower=1, clean=1)
+        if (
+            info != 0
+        ):  # rows so quiet that rounding makes it indefinite: a part in 1e10 of each diagonal is no loss
+            h[np.diag_indices(len(right))] *= 1.0 + 1e-10
+            h += np.diag(np.full(len(right), 1e-10 * float(np.diag(h).max())))
+            root, info = dpotrf(h, lower=1, clean=1)
+            if info != 0:
+                raise np.linalg.LinAlgError("the linearised fit is singular")
         return np.asarray(root), right - self.unit_prior * self.away, weight
 
     def _bounded(self, hyper: FloatArray, least: float) -> FloatArray:

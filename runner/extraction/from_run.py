@@ -194,6 +194,7 @@ def _pulse_legs(
                 temperature_degC=at,
                 resistance=resistance.ohm,
                 resistance_uncertainty=resistance.uncertainty,
+                like=method.legs[-1] if method.legs else None,
             )
         )
         method.resistances.append(resistance)
@@ -345,6 +346,7 @@ def _bias_legs(
             Readings(current[climbing], inductance[climbing], _body(points, rows, calibration)[climbing]),
             calibration,
             temperature_degC=at,
+            like=method.legs[-1] if method.legs else None,
         )
         if leg is None:
             doubts.append(

@@ -24,6 +24,11 @@ def propagate(sensitivities: FloatArray, covariance: FloatArray) -> FloatArray:
     return np.asarray(sensitivities @ covariance @ sensitivities.T)
 
 
+def variances(sensitivities: FloatArray, covariance: FloatArray) -> FloatArray:
+    """Variances [k] of outputs alone, without their covariances; never below zero."""
+    return np.asarray(np.maximum(np.sum((sensitivities @ covariance) * sensitivities, axis=1), 0.0))
+
+
 def sensitivities(
     function: Callable[[FloatArray], FloatArray], values: FloatArray, uncertainties: FloatArray
 ) -> FloatArray:

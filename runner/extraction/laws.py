@@ -4,10 +4,10 @@ Each law says how the differential inductance falls with current, L(i) = L0·(φ
 is believed: the fit takes the one that explains the data best and puts a smooth deviation on top whose size the data
 decide (`curve.py`). A law that happens to be right makes the answer sharper; one that is wrong costs width, not truth.
 
-Sources: 1/(1 + x^a) is the form in which powder cores' permeability against bias is usually catalogued (a = 2 is the
-arctangent law); (1 + x^a)^(−1−1/a) is the slope of x/(1 + x^a)^(1/a), a limiter of adjustable sharpness (a = 1 is
-Frölich's law); sech² is the slope of tanh; 3(1/x² − 1/sinh² x) that of Langevin's function; the logistic fall is
-the common description of a ground-gap ferrite's knee.
+Of one parameter less: the slopes of arctan (1/(1 + x²)), of Frölich's x/(1 + x) ((1 + x)⁻²), of tanh (sech²) and of
+Langevin's function (3(1/x² − 1/sinh² x)). Adjustable: 1/(1 + x^a), the form in which powder cores' permeability against
+bias is usually catalogued; (1 + x^a)^(−1−1/a), the slope of a limiter x/(1 + x^a)^(1/a) of any sharpness; and the
+logistic fall, a common description of a ground-gap ferrite's knee.
 """
 
 from collections.abc import Callable
@@ -28,6 +28,14 @@ def _catalogue(x: FloatArray, a: float) -> FloatArray:
 
 def _limiter(x: FloatArray, a: float) -> FloatArray:
     return np.asarray(np.exp(-(1.0 + 1.0 / a) * np.log1p(_power(x, a))))
+
+
+def _arctangent(x: FloatArray, _: float) -> FloatArray:
+    return np.asarray(1.0 / (1.0 + x * x))
+
+
+def _froelich(x: FloatArray, _: float) -> FloatArray:
+    return np.asarray((1.0 + x) ** -2.0)
 
 
 def _hyperbolic(x: FloatArray, _: float) -> FloatArray:
@@ -86,6 +94,8 @@ LAWS = (
     Law("limiter", _limiter, (1.5, 5.0)),
     Law("catalogue", _catalogue, (2.0, 6.0)),
     Law("logistic", _logistic, (3.0, 10.0)),
+    Law("arctangent", _arctangent),
+    Law("Frölich", _froelich),
     Law("hyperbolic", _hyperbolic),
     Law("langevin", _langevin),
 )

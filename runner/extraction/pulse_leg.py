@@ -19,6 +19,7 @@ def pulse_leg(
     temperature_degC: float,
     resistance: float,
     resistance_uncertainty: float,
+    like: LegCurve | None = None,
 ) -> LegCurve:
     """Fit one leg.
 
@@ -27,6 +28,7 @@ def pulse_leg(
         calibration: of the bench.
         temperature_degC: of the part; the curve's coordinate.
         resistance, resistance_uncertainty: of the winding at that temperature [ohm].
+        like: the same part at another temperature, to start from.
     """
     data = lay_out(
         ramps,
@@ -34,7 +36,7 @@ def pulse_leg(
         skew=calibration.skew.uncertainty,
         shunt_time=calibration.shunt_inductance.uncertainty / calibration.shunt_now,
     )
-    fit = fit_curve(data)
+    fit = fit_curve(data, like=None if like is None else like.fit)
     shifts = constant_shifts(fit, data, calibration, resistance_uncertainty)
     return leg_curve(
         fit, Scale(data.scales.current, data.scales.flux), temperature_degC=temperature_degC, shifts=shifts

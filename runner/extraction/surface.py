@@ -7,7 +7,7 @@ data (`along_temperature.py`). Outside the measured region the answer is NaN: be
 (between two legs the smaller of theirs, in units of the knee), and beyond the coldest and hottest leg.
 """
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -18,8 +18,9 @@ from runner.arrays import FloatArray
 from runner.extraction.along_temperature import Smoother, best_smoother
 from runner.extraction.curve import LegCurve
 from runner.extraction.curve_model import running_integral
-from runner.extraction.gum import combine
+from runner.extraction.gum import combine, variances
 
+ANSWERS = ("inductance", "flux", "energy")
 POINTS = 400  # of the scaled current
 EDGE = 0.75  # K beyond the outermost legs that still count as there: a set-point is not met to the last tenth
 DROPS = (0.5, 0.4, 0.3, 0.2, 0.1, 0.05)
@@ -27,15 +28,21 @@ DROPS = (0.5, 0.4, 0.3, 0.2, 0.1, 0.05)
 
 @dataclass(frozen=True, slots=True)
 class Slice:
-    """The curve at one temperature: ``current`` [n] A, L_d, λ, energy [n] with standard uncertainties."""
+    """The curve at one temperature: ``current`` [n] A, L_d, λ, energy [n]."""
 
     current: FloatArray
     inductance: FloatArray
-    inductance_uncertainty: FloatArray
     flux: FloatArray
-    flux_uncertainty: FloatArray
     energy: FloatArray
-    energy_uncertainty: FloatArray
+
+
+@dataclass(frozen=True, slots=True)
+class _Place:
+    """Where a slice lies: scaled currents, weights of the legs, what temperature leaves open there (relative)."""
+
+    scaled: FloatArray
+    weights: FloatArray
+    between: FloatArray
 
 
 class Surface:
@@ -71,7 +78,15 @@ class Surface:
 
     def uncertainty(self, current: ArrayLike, temperature_degC: ArrayLike) -> FloatArray:
         """Standard uncertainty [H] of L_d, shape as called; NaN outside."""
-        return self._ask(current, temperature_degC, "inductance_uncertainty")
+        return self._ask(current, temperature_degC, "inductance", share=self._relative)
+
+    def flux_uncertainty(self, current: ArrayLike, temperature_degC: ArrayLike) -> FloatArray:
+        """Standard uncertainty [Wb] of λ, shape as called; NaN outside."""
+        return self._ask(current, temperature_degC, "flux", share=self._relative)
+
+    def energy_uncertainty(self, current: ArrayLike, temperature_degC: ArrayLike) -> FloatArray:
+        """Standard uncertainty [J] of the energy, shape as called; NaN outside."""
+        return self._ask(current, temperature_degC, "energy", share=self._relative)
 
     def flux_linkage(self, current: ArrayLike, temperature_degC: ArrayLike) -> FloatArray:
         """λ [Wb], shape as called; NaN outside."""
@@ -94,6 +109,10 @@ class Surface:
 
     def at(self, temperature_degC: float) -> Slice | None:
         """The curve at one temperature, None outside."""
+        found = self._locate(temperature_degC)
+        return None if found is None else found[0]
+
+    def _locate(self, temperature_degC: float) -> tuple[Slice, _Place] | None:
         low, high = self.temperature_degC[0] - EDGE, self.temperature_degC[-1] + EDGE
         if not low <= temperature_degC <= high:
             return None
@@ -112,7 +131,11 @@ class Surface:
         between = np.sqrt(
             open_initial[0] ** 2 + (steep * open_knee[0]) ** 2 + (open_shape / np.maximum(shape, 1e-3)) ** 2
         )
-        return self._slice(x, current, inductance, w_initial[0], between)
+        fine = np.linspace(0.0, current[-1], 2 * POINTS)
+        curve = np.interp(fine, current, inductance)
+        flux = np.interp(current, fine, running_integral(curve, float(fine[1])))
+        energy = np.interp(current, fine, running_integral(curve * fine, float(fine[1])))
+        return Slice(current, inductance, flux, energy), _Place(x, w_initial[0], between)
 
     def _reach_at(self, t: float) -> float:
         """The largest scaled current: a leg's own at its temperature, the smaller of both neighbours' between legs."""
@@ -164,61 +187,50 @@ class Surface:
             },
         )
 
-    def _slice(
-        self,
-        x: FloatArray,
-        current: FloatArray,
-        inductance: FloatArray,
-        weights: FloatArray,
-        between: FloatArray,
-    ) -> Slice:
-        """Adds flux, energy and uncertainties: those of each leg at the same scaled current, weighted (own ones
-        independent, shared ones with their signs), and what temperature between the legs leaves open."""
-        names = {name for leg in self.legs for name in leg.shifts}
-        own = [np.zeros(len(x)) for _ in range(3)]
-        shared = {name: [np.zeros(len(x)) for _ in range(3)] for name in names}
-        for leg, knee, weight in zip(self.legs, self._knee, weights, strict=True):
+    def _relative(self, place: _Place, which: int) -> FloatArray:
+        """Relative standard uncertainty [n] of L_d (0), λ (1) or energy (2): that of each leg at the same scaled
+        current, weighted (own ones independent, shared ones with their signs), and what temperature leaves open."""
+        x = place.scaled
+        own = np.zeros(len(x))
+        shared: dict[str, FloatArray] = {}
+        for leg, knee, weight in zip(self.legs, self._knee, place.weights, strict=True):
             if abs(weight) < 1e-9:
                 continue
             at = np.clip(x * knee, 0.0, leg.top)
-            for k, (value, slopes) in enumerate(_answers(leg)):
-                there = np.maximum(np.abs(np.interp(at, leg.current, value)), 1e-30)
-                variance = np.einsum("ij,jk,ik->i", slopes, leg.covariance, slopes)
-                own[k] += (
-                    weight * np.interp(at, leg.current, np.sqrt(np.maximum(variance, 0.0))) / there
-                ) ** 2
-                for name, shift in leg.shifts.items():
-                    shared[name][k] += weight * np.interp(at, leg.current, slopes @ shift) / there
-        relative = [
-            np.sqrt(own[k] + between**2 + sum(moves[k] ** 2 for moves in shared.values())) for k in range(3)
-        ]
-        fine = np.linspace(0.0, current[-1], 2 * POINTS)
-        curve = np.interp(fine, current, inductance)
-        flux = np.interp(current, fine, running_integral(curve, float(fine[1])))
-        energy = np.interp(current, fine, running_integral(curve * fine, float(fine[1])))
-        for k in (1, 2):  # at zero current flux and energy are zero and known
-            relative[k][0] = 0.0
-        return Slice(
-            current,
-            inductance,
-            relative[0] * inductance,
-            flux,
-            relative[1] * flux,
-            energy,
-            relative[2] * energy,
-        )
+            value, slopes = _answer(leg, which)
+            there = np.maximum(np.abs(np.interp(at, leg.current, value)), 1e-30)
+            u = np.sqrt(variances(slopes, leg.covariance))
+            own += (weight * np.interp(at, leg.current, u) / there) ** 2
+            for name, shift in leg.shifts.items():
+                move = weight * np.interp(at, leg.current, slopes @ shift) / there
+                shared[name] = shared.get(name, 0.0) + move
+        relative = np.sqrt(own + place.between**2 + sum(move**2 for move in shared.values()))
+        if which:  # at zero current flux and energy are zero and known
+            relative[0] = 0.0
+        return np.asarray(relative)
 
-    def _ask(self, current: ArrayLike, temperature_degC: ArrayLike, what: str) -> FloatArray:
+    def _ask(
+        self,
+        current: ArrayLike,
+        temperature_degC: ArrayLike,
+        what: str,
+        *,
+        share: Callable[[_Place, int], FloatArray] | None = None,
+    ) -> FloatArray:
         i, t = np.broadcast_arrays(
             np.asarray(current, dtype=np.float64), np.asarray(temperature_degC, dtype=np.float64)
         )
         out = np.full(i.shape, np.nan)
         for value in np.unique(t[np.isfinite(t)]):
-            found = self.at(float(value))
+            found = self._locate(float(value))
             if found is None:
                 continue
-            here = (t == value) & (i >= 0) & (i <= found.current[-1] * (1 + 1e-12))
-            out[here] = np.interp(i[here], found.current, getattr(found, what))
+            curve, place = found
+            here = (t == value) & (i >= 0) & (i <= curve.current[-1] * (1 + 1e-12))
+            values = getattr(curve, what)
+            if share is not None:
+                values = values * share(place, ANSWERS.index(what))
+            out[here] = np.interp(i[here], curve.current, values)
         return out
 
 
@@ -238,16 +250,16 @@ def left_out_error(surface: Surface) -> Mapping[str, float] | None:
     return {"rms": float(np.sqrt(np.mean(every**2))), "largest": float(np.abs(every).max())}
 
 
-def _answers(leg: LegCurve) -> tuple[tuple[FloatArray, FloatArray], ...]:
-    """L_d, λ and energy on the leg's grid with their slopes."""
+def _answer(leg: LegCurve, which: int) -> tuple[FloatArray, FloatArray]:
+    """L_d, λ or energy on the leg's grid with its slopes."""
+    if which == 0:
+        return leg.inductance, leg.inductance_slopes
+    if which == 1:
+        return leg.flux, leg.flux_slopes
     step = float(leg.current[1])
     return (
-        (leg.inductance, leg.inductance_slopes),
-        (leg.flux, leg.flux_slopes),
-        (
-            running_integral(leg.current * leg.inductance, step),
-            running_integral(leg.current[:, None] * leg.inductance_slopes, step),
-        ),
+        running_integral(leg.current * leg.inductance, step),
+        running_integral(leg.current[:, None] * leg.inductance_slopes, step),
     )
 
 

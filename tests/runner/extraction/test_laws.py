@@ -20,7 +20,9 @@ def drop_at(law, shape, drop):
     ("name", "shape", "x"),
     [
         ("hyperbolic", 1.0, (0.3274502, 0.4812118, 0.6151220)),
+        ("Frölich", 1.0, (0.0540926, 0.1180340, 0.1952286)),
         ("limiter", 1.0, (0.0540926, 0.1180340, 0.1952286)),  # sharpness 1 is Frölich's law
+        ("arctangent", 1.0, (0.3333333, 0.5000000, 0.6546537)),
         ("catalogue", 2.0, (0.3333333, 0.5000000, 0.6546537)),  # exponent 2 is the arctangent law
         ("langevin", 1.0, (0.7372694, 1.0924232, 1.4105035)),
     ],
