@@ -10,13 +10,14 @@ What a reader must believe:
   a restart.
 """
 
+import contextlib
 import re
 import time
 from collections.abc import Sequence
 
 from drivers.blocks import NotABlock, bytes_per_sample, decode_samples, take_block
 from drivers.dialect import TERMINATORS, Dialect, Message
-from drivers.errors import Garbled, NoReply, Refused, Restarted
+from drivers.errors import Garbled, InstrumentError, NoReply, Refused, Restarted
 from drivers.lines import Line, Question, plan_lines
 from drivers.readings import read_reply
 from drivers.replies import Values, parse_number, split_units
@@ -70,6 +71,17 @@ class Conversation:
     def say(self, messages: Sequence[Message]) -> None:
         """Sends messages that stand outside the intents and take no values."""
         self._send(tuple(plan_lines(self.dialect, messages, {})), None)
+
+    def tell(self, messages: Sequence[Message]) -> None:
+        """Sends what is no question and reads no reply: for an instrument that may still listen though it says
+        nothing. Whether it obeyed stays unknown. Never raises for an instrument."""
+        with contextlib.suppress(InstrumentError):
+            self.reopen()
+        for message in messages:
+            if message.ask is None:
+                self._in_step = False
+                with contextlib.suppress(InstrumentError):
+                    self.session.write(message.text.encode("ascii") + self._end)
 
     def errors(self) -> tuple[str, ...]:
         """Empties the error queue; oldest first, and none where the dialect has no way to ask."""

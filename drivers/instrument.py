@@ -63,7 +63,7 @@ class Instrument:
         """Makes it harmless, whatever its state and whatever went wrong before.
 
         Tries the whole, then message by message, so that one refused message does not keep the others from
-        being sent.
+        being sent. One that does not answer any more, or only with rubbish, is told all the same.
 
         Raises:
             InstrumentError: something of it may still be on.
@@ -79,6 +79,9 @@ class Instrument:
                     pass  # a restarted instrument took this message as well
                 except Refused as why:
                     failure = why
+                except InstrumentError:
+                    self._talk.tell(self.dialect.safe)
+                    raise
             if failure is not None:
                 raise failure from None
 

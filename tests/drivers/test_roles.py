@@ -122,10 +122,21 @@ def test_safe_does_not_mind_a_restart(role) -> None:
     supply.safe()
 
 
-def test_safe_says_when_nobody_hears_it(role) -> None:
-    supply = role("supply", (SAFE, SILENCE), ("SYST:ERR?", SILENCE))
+BLIND = [("OUTP 0", SILENCE), ("SOUR:VOLT 0", SILENCE), ("SOUR:CURR 0", SILENCE)]
+
+
+def test_safe_is_told_to_one_that_answers_nothing_and_said_to_be_unconfirmed(role) -> None:
+    supply = role("supply", (SAFE, SILENCE), ("SYST:ERR?", SILENCE), *BLIND)
     with pytest.raises(NoReply):
         supply.safe()
+    assert role.session.is_finished
+
+
+def test_safe_is_told_to_one_that_answers_rubbish_only(role) -> None:
+    supply = role("supply", (SAFE, "rubbish;0"), ("OUTP 0" + TAIL, "rubbish;0"), *BLIND)
+    with pytest.raises(Garbled):
+        supply.safe()
+    assert role.session.is_finished
 
 
 def test_reset_waits_until_it_is_done(role) -> None:
