@@ -219,14 +219,15 @@ def undithered(step: float, noise: float) -> float:
     """Standard uncertainty of a mean of rounded readings that averaging does not take away.
 
     Rounding a value with normal noise σ to steps q has a mean error (q/π)·exp(−2π²σ²/q²)·sin(2πx/q) (first harmonic;
-    Widrow's quantisation theorem), so q/(π√2)·exp(−2π²σ²/q²), and never more than q/√12. ``noise`` includes what the
-    rounding itself adds.
+    Widrow's quantisation theorem) and, without noise, q/√12 in all: what the first harmonic is short of that fades at
+    least as fast as the second, exp(−8π²σ²/q²). ``noise`` includes what the rounding itself adds.
     """
     if step <= 0.0:
         return 0.0
     before_rounding = max(0.0, (noise / step) ** 2 - 1.0 / 12.0)
-    quiet = step / (np.pi * np.sqrt(2.0)) * np.exp(-2 * np.pi**2 * before_rounding)
-    return float(min(step / np.sqrt(12.0), quiet))
+    first = np.exp(-4 * np.pi**2 * before_rounding) / (2 * np.pi**2)
+    rest = np.exp(-16 * np.pi**2 * before_rounding) * (1 / 12 - 1 / (2 * np.pi**2))
+    return float(step * np.sqrt(first + rest))
 
 
 def _step(step: float) -> float:
