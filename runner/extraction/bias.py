@@ -23,11 +23,21 @@ ROWS = slice(None)
 
 @dataclass(frozen=True, slots=True)
 class Readings:
-    """Corrected readings of one branch: ``current`` [n] A, ``inductance`` [n] H, the part's temperature [n] degC."""
+    """Corrected readings, in the order they were taken: ``current`` [n] A, ``inductance`` [n] H, the part's temperature
+    [n] degC and what of it is uncertain from heating alone [n] K (see `bias_heat.py`)."""
 
     current: FloatArray
     inductance: FloatArray
     temperature_degC: FloatArray
+    heat_uncertainty: FloatArray
+
+    def part(self, rows: slice) -> "Readings":
+        return Readings(
+            self.current[rows],
+            self.inductance[rows],
+            self.temperature_degC[rows],
+            self.heat_uncertainty[rows],
+        )
 
 
 def correct(columns: Mapping[str, FloatArray], calibration: Calibration) -> tuple[FloatArray, FloatArray]:
@@ -56,11 +66,13 @@ def correct(columns: Mapping[str, FloatArray], calibration: Calibration) -> tupl
 
 @dataclass(frozen=True, slots=True)
 class ReadingData:
-    """Readings for the fit, scaled by the largest current and the first inductance."""
+    """Readings for the fit, scaled by the largest current and the first inductance;
+    ``heat_uncertainty`` as in `Readings`."""
 
     current: FloatArray
     inductance: FloatArray
     temperatures: FloatArray
+    heat_uncertainty: FloatArray
     current_scale: float
     inductance_scale: float
 
@@ -123,7 +135,14 @@ def bias_leg(
     top, first = float(current[-1]), float(inductance[0])
     if not first > 0:
         return None
-    data = ReadingData(current / top, inductance / first, readings.temperature_degC[order], top, first)
+    data = ReadingData(
+        current / top,
+        inductance / first,
+        readings.temperature_degC[order],
+        readings.heat_uncertainty[order],
+        top,
+        first,
+    )
     fit = fit_curve(data, like=None if like is None else like.fit)
     return leg_curve(
         fit,

@@ -7,7 +7,7 @@ uncertainty of a calibration constant). Linear propagation, GUM 5.1.2; causes ar
 """
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -97,6 +97,10 @@ class LegCurve:
     def with_fit(self, fit: Fit) -> "LegCurve":
         """The same leg with another fit of the same rows."""
         return leg_curve(fit, self.scale, temperature_degC=self.temperature_degC, shifts=self.shifts)
+
+    def with_cause(self, name: str, shift: FloatArray) -> "LegCurve":
+        """The same leg with one more cause of uncertainty: change of its parameters [p] per standard uncertainty."""
+        return replace(self, shifts={**self.shifts, name: shift})
 
     def initial_inductance(self) -> Quantity:
         """L_d at zero current [H]."""

@@ -25,16 +25,23 @@ def at_one_temperature(legs: Sequence[LegCurve], *, kind: str) -> list[LegCurve]
     if len(legs) < 2:
         return list(legs)
     surface = Surface(legs, kind=kind)
-    return [_corrected(leg, surface) for leg in legs]
+    return [brought_by(surface, leg) for leg in legs]
 
 
-def _corrected(leg: LegCurve, surface: Surface) -> LegCurve:
+def brought_by(surface: Surface, leg: LegCurve) -> LegCurve:
+    """A leg with its rows brought to its temperature, from what ``surface`` says about the part in temperature.
+
+    How warm direct current made the part is known only so well (`bias_heat.py`); what that leaves open becomes a cause
+    of its own.
+    """
     away = leg.fit.data.temperatures - leg.temperature_degC
-    if not np.any(np.abs(away) > WORTH):
+    unsure = getattr(leg.fit.data, "heat_uncertainty", np.zeros(1))
+    if not np.any(np.abs(away) > WORTH) and not np.any(unsure > WORTH):
         return leg
-    move = _row_slopes(leg, surface) * away
-    fit = leg.fit
-    z = fit.z - fit.gain @ move
+    slopes, fit = _row_slopes(leg, surface), leg.fit
+    z = fit.z - fit.gain @ (slopes * away)
+    if np.any(unsure > WORTH):
+        leg = leg.with_cause("self-heating", (fit.gain @ (slopes * unsure))[: fit.model.parameters])
     return leg.with_fit(replace(fit, z=z, shape=fit.model.shape(z[: fit.model.parameters])))
 
 

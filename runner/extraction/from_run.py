@@ -16,6 +16,8 @@ from threadpoolctl import threadpool_limits  # type: ignore[import-untyped]  # i
 from runner.arrays import FloatArray, IntArray
 from runner.extraction.bench_constants import from_bench, from_captures_file
 from runner.extraction.bias import Readings, bias_leg, correct
+from runner.extraction.bias_branches import split
+from runner.extraction.bias_heat import Heat, follow_heat
 from runner.extraction.calibration import Calibration
 from runner.extraction.cross_check import compare, verdict
 from runner.extraction.flags import Doubt, capture_doubts
@@ -335,29 +337,38 @@ def _bias_legs(
     points = run.points
     method = MethodLegs("bias")
     for at, rows in _by_leg(points, mine, calibration):
-        columns = ("bias_current", "inductance", "ac_resistance", "test_frequency")
-        current, inductance = correct(
-            {name: np.asarray(points[name][rows], dtype=np.float64) for name in columns}, calibration
-        )
-        good = np.isfinite(current) & np.isfinite(inductance)
-        top = int(np.argmax(np.where(good, current, -1.0)))
-        climbing = good & (np.arange(len(rows)) <= top)
-        leg = bias_leg(
-            Readings(current[climbing], inductance[climbing], _body(points, rows, calibration)[climbing]),
-            calibration,
-            temperature_degC=at,
-            like=method.legs[-1] if method.legs else None,
-        )
+        readings, heat = _readings(points, rows, calibration, facts)
+        up, down = split(readings)
+        leg = bias_leg(up, calibration, temperature_degC=at, like=method.legs[-1] if method.legs else None)
         if leg is None:
             doubts.append(
                 Doubt(-1, "too_few_readings", f"bias at {at:.1f} °C: too few readings for a curve.")
             )
             continue
+        method.down.append(
+            None if down is None else bias_leg(down, calibration, temperature_degC=at, like=leg)
+        )
+        method.heats.append(heat)
         method.legs.append(leg)
-        cold = rows[np.abs(points["bias_current_setpoint"][rows]) <= 0.05 * np.nanmax(current)]
+        cold = rows[np.abs(points["bias_current_setpoint"][rows]) <= 0.05 * leg.top]
         method.resistances.append(_resistance(points, cold if cold.size else rows, calibration, facts, at))
-        method.peaks.append(current[good])
+        method.peaks.append(readings.current)
     return method
+
+
+def _readings(
+    points: dict[str, Any], rows: IntArray, calibration: Calibration, facts: PartFacts
+) -> tuple[Readings, Heat]:
+    """The readings of one leg that are numbers, corrected, and how warm the current made the part."""
+    columns = {
+        name: np.asarray(points[name][rows], dtype=np.float64)
+        for name in ("bias_current", "inductance", "ac_resistance", "test_frequency", "resistance")
+    }
+    current, inductance = correct(columns, calibration)
+    good = np.isfinite(current) & np.isfinite(inductance)
+    sensor = _body(points, rows, calibration)[good]
+    heat = follow_heat(current[good], columns["resistance"][good], sensor, rated=facts.rated_current)
+    return Readings(current[good], inductance[good], sensor + heat.rise, heat.rise_uncertainty), heat
 
 
 def _surface_table(part: int, name: str, method: MethodLegs) -> SurfaceTable:

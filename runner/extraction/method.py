@@ -7,11 +7,13 @@ from typing import Any
 import numpy as np
 
 from runner.arrays import FloatArray
+from runner.extraction.bias_branches import Branches, compare_branches, say_difference
+from runner.extraction.bias_heat import Heat
 from runner.extraction.calibration import Calibration
 from runner.extraction.core_view import at_knees
 from runner.extraction.curve import LegCurve
 from runner.extraction.derating import derating, margins, temperature_coefficients
-from runner.extraction.drift import at_one_temperature
+from runner.extraction.drift import at_one_temperature, brought_by
 from runner.extraction.flags import Doubt
 from runner.extraction.part_result import Knees, Settings, find_knees, method_result
 from runner.extraction.resistance import Resistance
@@ -35,7 +37,8 @@ class PartFacts:
 
 @dataclass(slots=True)
 class MethodLegs:
-    """Curves from cold to hot, and what belongs to each: resistance, and the currents of its points [A].
+    """Curves from cold to hot, and what belongs to each: resistance, the currents of its points [A]; by the bias method
+    also the way down, and what the winding tells of its heat.
 
     ``surface`` and ``knees`` are there once `finish_method` has been through it.
     """
@@ -45,6 +48,7 @@ class MethodLegs:
     resistances: list[Resistance] = field(default_factory=list)
     peaks: list[FloatArray] = field(default_factory=list)
     down: list[LegCurve | None] = field(default_factory=list)
+    heats: list[Heat] = field(default_factory=list)
     knees: Knees | None = None
     surface: Surface | None = None
 
@@ -62,6 +66,7 @@ def finish_method(
         nominal=facts.inductance,
         temperature_uncertainty=calibration.body_offset.uncertainty,
     )
+    branches = _branches(method)
     doubts += _doubts(method.name, method.legs, method.knees, method.resistances, settings)
     entry = method_result(method.legs, method.knees, method.resistances, settings, kind)
     entry["margin"] = margins(method.legs, method.knees, settings, rated=facts.rated_current)
@@ -69,6 +74,14 @@ def finish_method(
     entry["temperature_coefficient"] = temperature_coefficients(method.legs, method.knees, settings)
     if (left_out := left_out_error(method.surface)) is not None:
         entry["left_out_error"] = [{"fraction": left_out["rms"], "largest": left_out["largest"]}]
+    if branches:
+        entry["branches"] = [b.as_row(settings.factor) for b in branches]
+        if (said := say_difference(branches)) is not None:
+            doubts.append(Doubt(-1, "branches_differ", said))
+    if any(np.any(heat.rise > 0) for heat in method.heats):
+        entry["self_heating"] = [
+            _heat_row(leg, heat, settings.factor) for leg, heat in zip(method.legs, method.heats, strict=True)
+        ]
     if facts.core is not None and method.name == "pulse":
         entry["core_view"] = at_knees(
             method.legs,
@@ -78,6 +91,28 @@ def finish_method(
             path=facts.core.path,
         )
     return entry
+
+
+def _branches(method: MethodLegs) -> list[Branches]:
+    """The way down against the way up, both brought to the leg's temperature, where there is a way down."""
+    assert method.surface is not None
+    found = []
+    for up, down in zip(method.legs, method.down, strict=False):
+        if down is not None:
+            there = down if len(method.legs) < 2 else brought_by(method.surface, down)
+            found.append(compare_branches(up, there))
+    return found
+
+
+def _heat_row(leg: LegCurve, heat: Heat, factor: float) -> dict[str, Any]:
+    half = factor * heat.uncertainty
+    return {
+        "temperature_degC": leg.temperature_degC,
+        "winding_over_sensor_kelvin_per_watt": heat.kelvin_per_watt,
+        "low": heat.kelvin_per_watt - half,
+        "high": heat.kelvin_per_watt + half,
+        "largest_rise_of_the_part_kelvin": float(heat.rise.max()),
+    }
 
 
 def _doubts(

@@ -31,6 +31,8 @@ TITLES = {
     "core_view": "Seen from the core",
     "temperature_coefficient": "Temperature coefficient of the saturation current",
     "left_out_error": "Check: inductance at each temperature, predicted from the other temperatures (rms and largest error)",
+    "branches": "Way down against way up: largest difference of the inductance, as a share of its initial value",
+    "self_heating": "Winding against body sensor while direct current flows",
     "remanence": "Remanence study: first shot against conditioned shots",
     "remanence_offset": "Remanence study: what an offset field does to the conditioned knee",
     "remanence_polarity": "Remanence study: one polarity against the other",
@@ -55,6 +57,8 @@ _QUANTITIES = {
     "guard_band": ("Guard band", "%"),
     "drop": ("Drop", "%"),
     "fraction_per_kelvin": ("Change", "%/K"),
+    "kelvin_per_watt": ("Thermal resistance", "K/W"),
+    "kelvin": ("Temperature difference", "K"),
 }
 _COORDINATES = ("temperature_degC", "drop")
 _INTERVAL = ("low", "high")
@@ -216,8 +220,11 @@ def _quantity(key: str) -> tuple[str, str] | None:
     """Heading and unit of a key: a known one, or words before one (``first_shot_ampere``: First shot, in amperes)."""
     if key in _QUANTITIES:
         return _QUANTITIES[key]
-    words, _, last = key.rpartition("_")
-    return (_words(words), _QUANTITIES[last][1]) if words and last in _QUANTITIES else None
+    known = [name for name in _QUANTITIES if key.endswith(f"_{name}")]
+    if not known:
+        return None
+    name = max(known, key=len)
+    return _words(key.removesuffix(f"_{name}")), _QUANTITIES[name][1]
 
 
 def _unit_after(key: str) -> str:
