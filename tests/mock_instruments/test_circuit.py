@@ -29,7 +29,7 @@ def linear_loop(resistance: float, inductance: float):
     return loop, FluxLaw("linear", inductance, 1.0).at(25.0).still()
 
 
-# RL charging, i = V/R (1 - exp(-t R/L)); check values, section 5.1 (closed form), tolerances as given there.
+# RL charging, i = V/R (1 - exp(-t R/L)); closed form.
 @pytest.mark.parametrize(
     ("time", "ampere", "tolerance"),
     [(10e-6, 1.19700499, 1e-8), (100e-6, 11.70493812, 1e-8), (2e-3, 151.708934, 1e-6)],

@@ -1,4 +1,4 @@
-"""Flux laws against their closed forms (check values, section 5.3), each other and an independent ODE solution."""
+"""Flux laws against their closed forms, each other and an independent ODE solution."""
 
 import math
 
@@ -21,7 +21,7 @@ LAWS = {
 }
 
 
-# R(T)/R(20) with alpha = 0.00393 /K (IEC 60028), check values section 1.
+# R(T)/R(20) with alpha = 0.00393 /K (IEC 60028).
 @pytest.mark.parametrize(
     ("temperature_degC", "ratio"),
     [(-40, 0.764200), (25, 1.019650), (85, 1.255450), (100, 1.314400), (125, 1.412650)],
@@ -31,7 +31,7 @@ def test_copper_law(temperature_degC, ratio):
 
 
 def test_tanh_core_at_ten_ampere():
-    """L0 = 100 uH, Is = 10 A at 10 A: λ 761.59416 uWb, L_diff 41.997434 uH, L_app 76.159416 uH (section 5.3)."""
+    """L0 = 100 uH, Is = 10 A at 10 A: λ 761.59416 uWb, L_diff 41.997434 uH, L_app 76.159416 uH."""
     branch = LAWS["tanh"].at(25.0).still()
     ten = np.asarray(10.0)
     assert branch.flux(ten) == pytest.approx(761.59416e-6, rel=1e-8)
@@ -41,7 +41,7 @@ def test_tanh_core_at_ten_ampere():
     assert coenergy == pytest.approx(4.3378083e-3, rel=1e-8)  # L0 Is² ln cosh 1
 
 
-# x at which the differential inductance has fallen by 10/20/30 % (section 5.3, tolerance 1e-6).
+# x at which the differential inductance has fallen by 10/20/30 % (closed forms, tolerance 1e-6).
 @pytest.mark.parametrize(
     ("law", "fractions"),
     [

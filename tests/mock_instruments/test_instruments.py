@@ -15,7 +15,7 @@ NO_ERROR = '0,"No error"'
 
 @pytest.mark.parametrize("role", ROLES)
 def test_every_instrument_has_the_common_commands(client, role):
-    """Mandatory in IEEE 488.2, 10.x; SYSTem:VERSion? in SCPI-1999 21.21 (check values, 3.2)."""
+    """Mandatory in IEEE 488.2, 10.x; SYSTem:VERSion? in SCPI-1999 21.21."""
     assert client.ask(role, "*ESR?") == "128"  # power on, once
     assert client.ask(role, "*ESR?") == "0"
     assert re.fullmatch(r"Mock bench,[A-Z ]+,\d+,1\.0", client.ask(role, "*IDN?"))

@@ -1,5 +1,5 @@
 """Cutting and reading messages. Rules: IEEE 488.2-1992 chapter 7 and SCPI-1999 vol. 1 chapters 6 and 8, error numbers
-SCPI-1999 vol. 2 21.8, as collected in the project's check values, sections 3.1, 3.3 and 3.4."""
+SCPI-1999 vol. 2 21.8."""
 
 import itertools
 

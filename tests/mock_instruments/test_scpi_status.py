@@ -1,11 +1,11 @@
-"""Error queue and registers: SCPI-1999 vol. 2, 21.8; IEEE 488.2 chapter 11 (check values, 3.2 and 3.3)."""
+"""Error queue and registers: SCPI-1999 vol. 2, 21.8; IEEE 488.2 chapter 11."""
 
 import pytest
 
 from mock_instruments.scpi_errors import ERRORS, error_text, event_bit
 from mock_instruments.scpi_status import QUEUE_LENGTH, Register, Status
 
-# Numbers and texts as printed in 21.8, typed off the check values and not from the code.
+# Numbers and texts as printed in 21.8, of the standard (from memory), not taken from the code.
 PRINTED = {
     0: "No error", -100: "Command error", -101: "Invalid character", -102: "Syntax error", -103: "Invalid separator",
     -104: "Data type error", -108: "Parameter not allowed", -109: "Missing parameter", -110: "Command header error",

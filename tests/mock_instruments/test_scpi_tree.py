@@ -21,7 +21,7 @@ from mock_instruments.scpi_tree import (
 )
 
 
-# Section 3.4 of the check values: the first four letters, three if the fourth is a vowel.
+# SCPI-1999 vol. 1, 6.2.1 (from memory): the first four letters, three if the fourth is a vowel.
 @pytest.mark.parametrize(
     ("name", "short"),
     [
@@ -179,7 +179,7 @@ def test_numbers_as_answered(value, text):
 
 
 def test_blocks_as_answered():
-    """IEEE 488.2, 7.7.6: `#15hallo`, and 4000 32-bit numbers are `#516000` and 16000 bytes (check values, 3.1)."""
+    """IEEE 488.2, 7.7.6: `#15hallo`, and 4000 32-bit numbers are `#516000` and 16000 bytes."""
     assert block(b"hallo") == b"#15hallo"
     assert block(bytes(16)) == b"#216" + bytes(16)
     assert block(bytes(16000))[:7] == b"#516000"

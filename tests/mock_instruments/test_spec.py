@@ -103,7 +103,7 @@ def test_the_truth_is_json_and_falls_with_temperature():
 
 
 def test_truth_of_a_powder_part_is_the_arctan_law():
-    """x = sqrt(d/(1-d)) (check values, 5.3), here with what the floor leaves: d' = d/(1-floor)."""
+    """x = sqrt(d/(1-d)); the slope of arctan, here with what the floor leaves: d' = d/(1-floor)."""
     made = WorldSpec.from_mapping(
         {"parts": {"1": {"law": "powder", "inductance": 47e-6, "knee": 7.5, "floor": 0.03}}}
     )

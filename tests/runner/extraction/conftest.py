@@ -15,7 +15,7 @@ from runner.extraction.ramp import Ramp, make_ramp
 
 @dataclass(frozen=True)
 class TanhPart:
-    """λ = L0·Is·tanh(i/Is): the inductor of the worked figures (check-values 5.3)."""
+    """λ = L0·Is·tanh(i/Is): slope and saturation current are closed forms."""
 
     inductance: float = 100e-6
     knee: float = 10.0

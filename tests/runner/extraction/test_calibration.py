@@ -37,7 +37,7 @@ def test_winding_temperature_undoes_the_copper_law():
 
 
 def test_shunt_time_constant_and_temperature():
-    """10 nH on 0.1 Ω is 100 ns, 1 nH on 1 mΩ is 1 µs (check values, section 11)."""
+    """10 nH on 0.1 Ω is 100 ns, 1 nH on 1 mΩ is 1 µs: L/R."""
     assert Calibration(
         shunt=Constant(0.1), shunt_inductance=Constant(10e-9)
     ).shunt_time_constant == pytest.approx(100e-9)

@@ -1,6 +1,6 @@
 """The worked examples of the GUM through the functions that combine our own uncertainties.
 
-Sources: JCGM 100:2008 Annex H (inputs and published results; recomputed in the project's check values), its table
+Sources: JCGM 100:2008 Annex H (inputs and published results, from memory and recomputed), its table
 G.2, ISO 16269-6 for the tolerance factors.
 """
 

@@ -1,4 +1,4 @@
-"""Textbook saturation laws against their closed forms (check values, section 5.3)."""
+"""Textbook saturation laws against their closed forms."""
 
 import numpy as np
 import pytest
