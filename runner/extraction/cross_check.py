@@ -52,11 +52,12 @@ def compare(
         ]
         if not near:
             continue
-        k = near[0]
+        k = min(near, key=lambda k: abs(bias[0][k].temperature_degC - leg.temperature_degC))
         pairs = [("L_0", pulse[1].initial[j], bias[1].initial[k])]
         for drop in sorted(settings.drops, reverse=True):
             mine, other = pulse[1].found[drop][j], bias[1].found[drop][k]
-            if mine is not None and other is not None:
+            # A knee at zero current (the part lies below a reference that is not its own) has no quotient.
+            if mine is not None and other is not None and mine.value > 0 and other.value > 0:
                 pairs.append((f"Isat at {100 * drop:g} % drop", mine, other))
                 break
         found += [_difference(leg.temperature_degC, what, a, b, settings) for what, a, b in pairs]
@@ -69,8 +70,13 @@ def verdict(comparisons: Sequence[Comparison]) -> str | None:
     if not wide:
         return None
     worst = max(wide, key=lambda c: abs(c.difference))
-    initial = [c.difference for c in wide if c.what == "L_0"]
-    same = len(initial) >= 1 and np.ptp(initial) < 0.3 * abs(float(np.mean(initial)))
+    initial = [c for c in comparisons if c.what == "L_0"]
+    shares = [c.difference for c in initial]
+    same = (
+        len(initial) > 1
+        and not any(c.agrees for c in initial)
+        and np.ptp(shares) < 0.3 * abs(float(np.mean(shares)))
+    )
     cause = (
         "the same share at every temperature points to a scale: check the shunt's value and the channels' gains"
         if same
@@ -83,7 +89,7 @@ def verdict(comparisons: Sequence[Comparison]) -> str | None:
 
 
 def _difference(at: float, what: str, a: Quantity, b: Quantity, settings: Settings) -> Comparison:
-    ratio = a.value / b.value - 1 if b.value else float("nan")
+    ratio = a.value / b.value - 1
     # Temperature is common to both; everything else is another instrument.
     u2 = 0.0
     for quantity in (a, b):

@@ -57,8 +57,11 @@ def temperature_coefficients(
     """
     rows = []
     for drop in settings.drops:
+        # A knee at zero current (the part lies below a reference that is not its own) has no logarithm.
         found = [
-            (leg.temperature_degC, knee) for leg, knee in zip(legs, knees.found[drop], strict=True) if knee
+            (leg.temperature_degC, knee)
+            for leg, knee in zip(legs, knees.found[drop], strict=True)
+            if knee is not None and knee.value > 0
         ]
         if len(found) < 2:
             continue

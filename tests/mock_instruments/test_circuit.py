@@ -41,7 +41,7 @@ def test_a_plain_coil_charges_as_the_textbook_says(time, ampere, tolerance):
 
 
 def test_a_tanh_core_follows_its_closed_form():
-    """12 V on L0 = 100 uH, Is = 10 A without resistance: 10 ln 2 A after 50 us, 10 A after 63.466180 us (section 5.3)."""
+    """12 V on L0 = 100 uH, Is = 10 A without resistance: 10 ln 2 A after 50 us, 10 A after 63.466180 us."""
     branch = FluxLaw("tanh", 100e-6, 10.0, floor=0.0).at(25.0).still()
     at_50us = fire(STIFF_BANK, NO_DROP, LOSSLESS, voltage=12.0, width=50e-6, rising=branch)
     assert at_50us.peak == pytest.approx(6.9314718, abs=1e-7)  # digits given
@@ -73,7 +73,7 @@ def test_a_tenth_of_an_ohm_reads_722_millivolt_at_7_22_ampere():
 
 
 def test_a_bank_of_7_millifarad_droops_by_the_charge_taken():
-    """7.27 A triangular for 180 us takes 654.3 uC from 7 mF: 93.47 mV of 12 V (section 13)."""
+    """7.27 A triangular for 180 us takes 654.3 uC from 7 mF: 93.47 mV of 12 V: I·t/2 over C."""
     bank = Bank(capacitance=7e-3, resistance=0.0, bleeder=1e12)
     branch = FluxLaw("linear", 12.0 * 180e-6 / 7.27, 1.0).at(25.0).still()
     shot = fire(bank, NO_DROP, LOSSLESS, voltage=12.0, width=180e-6, rising=branch)
@@ -87,7 +87,7 @@ LOOP = Loop(shunt=10e-3, shunt_inductance=3e-9, winding=18e-3)
 
 
 def flux_by_hand(name: str, i: float, rise: float) -> float:
-    """The laws of `LAWS` written out again from section 5.3 and the p-norm form, as an independent check."""
+    """The laws of `LAWS` written out again from their closed forms, as an independent check."""
     if name == "gapped":
         l0, knee, p, floor = 22e-6 * (1 + 2e-4 * rise), 9.5 * (1 - 2.6e-3 * rise), 6.0, 0.06
         return l0 * (floor * i + (1 - floor) * i / (1 + abs(i / knee) ** p) ** (1 / p))

@@ -30,7 +30,7 @@ from runner.record import (
     write_extraction,
 )
 
-# The definition in record-layout.md, section 3, written out a second time.
+# The definition of the layout, written out a second time.
 INTEGERS = ("seq", "plan_index", "attempt", "session", "leg", "part", "method", "flags")
 FLOATS = (
     "temperature_setpoint", "body_temperature", "air_temperature", "pulse_width_setpoint", "rail_voltage_setpoint",

@@ -1,4 +1,4 @@
-"""What a point may cost: record-layout.md, section 4, invariant 9. The exact figures are in `make bench`."""
+"""What a point may cost. The exact figures are in `make bench`."""
 
 import json
 import subprocess

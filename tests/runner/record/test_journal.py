@@ -64,7 +64,7 @@ def test_measured_rows_can_be_neither_changed_nor_removed(make_run: Callable[...
                 with pytest.raises(sqlite3.IntegrityError, match=f"{table} is append-only"):
                     anybody.execute(statement)
             assert anybody.execute(f"SELECT count(*) FROM {table}").fetchone()[0] > 0
-    assert set(APPEND_ONLY) >= {"point", "capture", "chamber", "event"}  # record-layout.md, section 2, rule 2
+    assert set(APPEND_ONLY) >= {"point", "capture", "chamber", "event"}  # what was measured is never changed
 
 
 def test_a_point_comes_back_bit_for_bit(
