@@ -278,7 +278,7 @@ class Run:
     @cached_property
     @_from_the_file
     def all_points(self) -> Columns:
-        """Every attempt at every point, in the order of recording; one array a column, see record-layout."""
+        """Every attempt at every point, in the order of recording; one array a column."""
         points = self._entry["points"]
         return {
             name: points[name][:].astype(np.int64 if name in INTEGERS else np.float64)

@@ -9,7 +9,7 @@ from runner.record import CalibrationRow, InstrumentRow
 
 NexusClass = Literal["NXsensor", "NXactuator", "NXenvironment"]
 
-# How a role is called in the record, and what it is there (see record-layout.md).
+# How a role is called in the record, and what it is there.
 _NAMES: dict[str, tuple[str, NexusClass]] = {
     "supply": ("supply", "NXactuator"),
     "pulser": ("pulser", "NXactuator"),

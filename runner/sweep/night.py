@@ -25,7 +25,7 @@ from runner.sweep.requests import StopRequests
 from runner.sweep.resume import Behind
 from runner.sweep.retry import Action
 
-_REBUILD_EVERY = 600.0  # s of wall time: the record is never older than this (see record-layout.md)
+_REBUILD_EVERY = 600.0  # s of wall time: the record is never older than this
 _HEAT_MARGIN = 2.0  # times the last rise that must fit below the limit on body temperature
 
 

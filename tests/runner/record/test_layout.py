@@ -1,4 +1,4 @@
-"""The record as NeXus, as netCDF and as what an engineer opens; see record-layout.md, sections 3 and 4."""
+"""The record as NeXus, as netCDF and as what an engineer opens."""
 
 import re
 import shutil
