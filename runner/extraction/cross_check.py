@@ -47,21 +47,37 @@ def compare(
     """L_0 and the largest drop that both reached, at each temperature both have."""
     found = []
     for j, leg in enumerate(pulse[0]):
-        near = [
-            k for k, other in enumerate(bias[0]) if abs(other.temperature_degC - leg.temperature_degC) <= NEAR
-        ]
+        at = leg.temperature_degC
+        near = [k for k, other in enumerate(bias[0]) if abs(other.temperature_degC - at) <= NEAR]
         if not near:
             continue
-        k = min(near, key=lambda k: abs(bias[0][k].temperature_degC - leg.temperature_degC))
-        pairs = [("L_0", pulse[1].initial[j], bias[1].initial[k])]
+        k = min(near, key=lambda k: abs(bias[0][k].temperature_degC - at))
+        initial = _brought(bias[0], bias[1].initial, k, at)
+        assert initial is not None
+        pairs = [("L_0", pulse[1].initial[j], initial)]
         for drop in sorted(settings.drops, reverse=True):
-            mine, other = pulse[1].found[drop][j], bias[1].found[drop][k]
+            mine, other = pulse[1].found[drop][j], _brought(bias[0], bias[1].found[drop], k, at)
             # A knee at zero current (the part lies below a reference that is not its own) has no quotient.
             if mine is not None and other is not None and mine.value > 0 and other.value > 0:
                 pairs.append((f"Isat at {100 * drop:g} % drop", mine, other))
                 break
-        found += [_difference(leg.temperature_degC, what, a, b, settings) for what, a, b in pairs]
+        found += [_difference(at, what, a, b, settings) for what, a, b in pairs]
     return found
+
+
+def _brought(
+    legs: Sequence[LegCurve], quantities: Sequence[Quantity | None], k: int, temperature_degC: float
+) -> Quantity | None:
+    """The quantity of leg ``k`` at a temperature near its own, by its slope along the legs; as it is where there is but
+    one. A fraction of a kelvin matters: a ferrite's knee moves by some 0.3 %/K."""
+    mine = quantities[k]
+    known = [n for n, q in enumerate(quantities) if q is not None]
+    if mine is None or len(known) < 2 or mine.value <= 0:
+        return mine
+    at = np.array([legs[n].temperature_degC for n in known])
+    slopes = np.gradient(np.array([q.value for q in quantities if q is not None]), at)
+    away = temperature_degC - legs[k].temperature_degC
+    return mine.scaled(1.0 + float(slopes[known.index(k)]) * away / mine.value)
 
 
 def verdict(comparisons: Sequence[Comparison]) -> str | None:
