@@ -13,6 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 import xarray as xr
 from numpy.typing import ArrayLike
+from scipy.interpolate import CubicHermiteSpline
 
 from runner.arrays import FloatArray
 from runner.extraction.along_temperature import Smoother, best_smoother
@@ -34,6 +35,14 @@ class Slice:
     inductance: FloatArray
     flux: FloatArray
     energy: FloatArray
+
+    def answer(self, what: str, current: FloatArray) -> FloatArray:
+        """One of `ANSWERS` at currents [k] inside: integrals by the cubic through values and slopes, since near zero
+        current a straight line between two points would be a large share too high."""
+        if what == "inductance":
+            return np.interp(current, self.current, self.inductance)
+        slope = self.inductance if what == "flux" else self.inductance * self.current
+        return np.asarray(CubicHermiteSpline(self.current, getattr(self, what), slope)(current))
 
 
 @dataclass(frozen=True, slots=True)
@@ -133,8 +142,8 @@ class Surface:
         )
         fine = np.linspace(0.0, current[-1], 2 * POINTS)
         curve = np.interp(fine, current, inductance)
-        flux = np.interp(current, fine, running_integral(curve, float(fine[1])))
-        energy = np.interp(current, fine, running_integral(curve * fine, float(fine[1])))
+        flux = _integral(fine, curve, current)
+        energy = _integral(fine, curve * fine, current)
         return Slice(current, inductance, flux, energy), _Place(x, w_initial[0], between)
 
     def _reach_at(self, t: float) -> float:
@@ -205,8 +214,8 @@ class Surface:
                 move = weight * np.interp(at, leg.current, slopes @ shift) / there
                 shared[name] = shared.get(name, 0.0) + move
         relative = np.sqrt(own + place.between**2 + sum(move**2 for move in shared.values()))
-        if which:  # at zero current flux and energy are zero and known
-            relative[0] = 0.0
+        if which:  # flux and energy are zero at zero current, where nothing can be said in proportion
+            relative[0] = relative[1]
         return np.asarray(relative)
 
     def _ask(
@@ -227,10 +236,10 @@ class Surface:
                 continue
             curve, place = found
             here = (t == value) & (i >= 0) & (i <= curve.current[-1] * (1 + 1e-12))
-            values = getattr(curve, what)
+            values = curve.answer(what, i[here])
             if share is not None:
-                values = values * share(place, ANSWERS.index(what))
-            out[here] = np.interp(i[here], curve.current, values)
+                values = values * np.interp(i[here], curve.current, share(place, ANSWERS.index(what)))
+            out[here] = values
         return out
 
 
@@ -248,6 +257,11 @@ def left_out_error(surface: Surface) -> Mapping[str, float] | None:
     every = np.concatenate(errors)
     every = every[np.isfinite(every)]
     return {"rms": float(np.sqrt(np.mean(every**2))), "largest": float(np.abs(every).max())}
+
+
+def _integral(grid: FloatArray, values: FloatArray, at: FloatArray) -> FloatArray:
+    """∫ values from zero on a uniform grid [n], at any places [k] inside it."""
+    return np.asarray(CubicHermiteSpline(grid, running_integral(values, float(grid[1])), values)(at))
 
 
 def _answer(leg: LegCurve, which: int) -> tuple[FloatArray, FloatArray]:
