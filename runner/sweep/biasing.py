@@ -2,6 +2,9 @@
 
 Currents climb and, where the plan says so, come back down. They are set, not predicted: the plan's check has held them
 against the limits, the source carries the limit as its protection, and what flows is read back and watched.
+
+A part that the current has warmed out of the soak's band rests at zero current before the next larger one. On the way
+down it does not: in a core with memory a rest at zero would be the end of that way.
 """
 
 import math
@@ -20,6 +23,8 @@ from runner.sweep.retry import Kind, Phase
 from runner.sweep.seek import Next, SeekRule, Sought, next_point
 
 _TELLS_RESISTANCE = 0.2  # of the rated current: below it the source's voltmeter says little about the winding
+_COOLED = 0.5  # of the soak's band: how near the part must be to where its soak ended before it goes on
+_LOOK_AGAIN = 20.0  # s between two looks at a part that cools
 _READ_BACK = 0.1  # of the current set, and ...
 _READ_BACK_FLOOR = 0.05  # ... A, that the source's own reading may differ
 
@@ -69,6 +74,7 @@ class _Series:
         self.plan, self.spec = plan.bias, plan.parts[part]
         self.resistance = resistance
         self.body_degC = math.nan
+        self.last_current = 0.0
         self.last_number = -1
         self.last_reading: tuple[float, LcrReading] | None = None
         self.history = [
@@ -116,8 +122,30 @@ class _Series:
                 )
                 return proposal.why
             current, seeking = proposal.x, proposal.why
+        if current > self.last_current:
+            self._let_cool()
+        self.last_current = current
         reading = self.night.recovery.carry_out(Phase.BIAS, lambda: self._read(current))
         return self._record(point, current, reading, seeking)
+
+    def _let_cool(self) -> None:
+        """Rest at zero current while the part is warmer than its soak's band allows; as long as a soak may last."""
+        night, bench, soak = self.night, self.night.bench, self.night.loaded.plan.temperatures.soak
+        settled = self.settled.body_degC.get(self.part, math.nan)
+        if bench.state is not State.BIASED or not self.body_degC - settled > soak.within:
+            return
+        night.log.event(
+            "rest",
+            f"{night.label(self.part)}: {self.body_degC - settled:.1f} K warmer than its soak left it; "
+            "no current until it has cooled",
+            point=self.last_number,
+        )
+        night.recovery.carry_out(Phase.BIAS, lambda: bench.bias(0.0))
+        until = night.clock.now() + soak.give_up
+        while self.body_degC - settled > _COOLED * soak.within and night.clock.now() < until:
+            night.check(night.clock.now())
+            night.clock.sleep(_LOOK_AGAIN)
+            self.body_degC = night.recovery.carry_out(Phase.BIAS, lambda: bench.body(self.spec.channel))
 
     def _read(self, current: float) -> _Reading:
         """Ramp, settle, read.

@@ -18,6 +18,7 @@ KINDS = (
     "climb",  # scouting, halts, stops
     "climb_end",  # last point of a climb or of a bias series that is complete; resume goes by it
     "part_end",  # a part that opened or shorted; resume goes by it
+    "rest",  # no current until a part has cooled
     "seek",  # why a sought point lies where it does
     "fault",  # an instrument failed, and what is done about it
     "flag",  # why a point is flagged

@@ -329,3 +329,34 @@ def test_the_current_is_predicted_before_a_width_is_fired(make_trial: MakeTrial)
     assert site.bench.ledger()["largest"]["current"] <= 5.0
     assert indices(trial) == [0, 1]
     assert "5 A" in events(trial, "climb_end")[0]
+
+
+WARM = "bias: {current: {at: [0 A, 2 A, 8 A, 9 A], both_ways: true}, settle: 20 s, signal: {frequency: 100 kHz, level: 50 mV}}"
+
+
+def test_a_part_that_its_bias_has_warmed_rests_before_more_but_not_on_the_way_down(
+    make_trial: MakeTrial,
+) -> None:
+    """8 A in 18 mohm are over 1 W, at 10 K/W and time constants of 15 and 60 s a few kelvin in the 20 s of a point."""
+
+    def hot(text: str) -> str:
+        return text.replace("{law: gapped,", "{law: gapped, thermal_resistance: 10 K/W,")
+
+    def patient(text: str) -> str:
+        return text.replace("duration: 14 h", "duration: 14 h, mean_power: 5 W")
+
+    trial = make_trial(methods=(WARM,), bench=hot, plan=patient)
+    site = trial.site()
+    assert trial.run(site).status == "finished"
+    assert_safe(site)
+    rests = events(trial, "rest")
+    assert len(rests) == 1  # after 8 A on the way up; after 9 A and 8 A the way leads down
+    assert "K warmer than its soak left it" in rests[0]
+    with open_run(trial.folder) as run:
+        points = run.points
+        began, ended, body = (points[name] for name in ("start_time", "end_time", "body_temperature"))
+        assert points["bias_current_setpoint"].tolist() == [0, 2, 8, 9, 8, 2, 0]
+        assert body[2] - body[1] > 1.0  # it warmed out of its band of 1 K
+        assert began[3] - ended[2] > 20.0
+        assert body[3] - body[2] < 2.0  # and 9 A began cooler than 8 A left it
+        assert began[4] - ended[3] < 10.0
