@@ -331,7 +331,12 @@ def test_the_current_is_predicted_before_a_width_is_fired(make_trial: MakeTrial)
     assert "5 A" in events(trial, "climb_end")[0]
 
 
-WARM = "bias: {current: {at: [0 A, 2 A, 8 A, 9 A], both_ways: true}, settle: 20 s, signal: {frequency: 100 kHz, level: 50 mV}}"
+WARM = """
+bias:
+  current: {at: [0 A, 2 A, 8 A, 9 A], both_ways: true}
+  settle: 20 s
+  signal: {frequency: 100 kHz, level: 50 mV}
+"""
 
 
 def test_a_part_that_its_bias_has_warmed_rests_before_more_but_not_on_the_way_down(
@@ -358,5 +363,5 @@ def test_a_part_that_its_bias_has_warmed_rests_before_more_but_not_on_the_way_do
         assert points["bias_current_setpoint"].tolist() == [0, 2, 8, 9, 8, 2, 0]
         assert body[2] - body[1] > 1.0  # it warmed out of its band of 1 K
         assert began[3] - ended[2] > 20.0
-        assert body[3] - body[2] < 2.0  # and 9 A began cooler than 8 A left it
+        assert body[3] - body[2] < 4.0  # 9 A alone warm it by 8 K: it began cooler than 8 A had left it
         assert began[4] - ended[3] < 10.0
