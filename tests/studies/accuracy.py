@@ -1,7 +1,9 @@
 """How good the numbers are: a few hundred drawn benches against their own truth, and against the physical limit.
 
     make accuracy                                   the whole study, into build/accuracy/
-    python tests/studies/accuracy.py --benches 12   a short form (the test suite runs it so)
+    python tests/studies/accuracy.py --benches 12   a short form (test_accuracy.py runs one in the suite)
+
+What it finds is written as a page to read (report.md, with its figure) and as data (accuracy.json).
 
 Each bench is drawn at random: part (laws that the fit knows, and laws that it does not), rail, bits, noise, offsets,
 gains, shunt, skew, sag of the bank, drift of the part during a leg, thermometer. Its captures come from the simulated
@@ -36,7 +38,9 @@ import numpy as np
 from scipy.optimize import brentq
 
 ROOT = Path(__file__).resolve().parents[2]
-sys.path.insert(0, str(ROOT))
+sys.path[:0] = [str(ROOT), str(Path(__file__).resolve().parent)]
+
+from accuracy_report import FIGURE, Bars, draw_report
 
 from mock_instruments.circuit import Bank, Loop, Switch, fire
 from mock_instruments.flux import FluxCurve, FluxLaw, copper_resistance
@@ -56,6 +60,13 @@ PLACES = ("cold", "room", "hot")
 DROPS = (0.1, 0.2, 0.3)
 RANGES = {"voltage": (5.0, 10.0, 20.0, 50.0), "shunt": (0.02, 0.05, 0.1, 0.2, 0.5, 1.0)}
 INTERVALS = (5e-9, 1e-8, 2e-8, 5e-8, 1e-7, 2e-7, 5e-7, 1e-6)
+BARS = Bars(
+    error={"12 bit": (0.002, 0.006), "8 bit": (0.005, 0.015)},
+    coverage=(0.92, 0.98),
+    claimed=Settings(drops=DROPS).coverage,
+    efficiency=2.0,
+    factor=Settings(drops=DROPS).factor,
+)
 
 
 # ------------------------------------------------------------------ laws the fit has never heard of
@@ -484,20 +495,27 @@ def main() -> int:
     if given.trials:
         with ProcessPoolExecutor(given.workers) as pool:
             result["efficiency"] = list(pool.map(efficiency, ("gapped", "powder"), [given.trials] * 2))
-    given.into.mkdir(parents=True, exist_ok=True)
-    (given.into / "accuracy.json").write_text(
-        json.dumps({**result, "benches": twelve + coarse + harsh}, indent=1)
-    )
-    print(json.dumps(result, indent=1))
     bad = judge(result)
+    write(given.into, {**result, "benches": twelve + coarse + harsh}, bad)
     print("\n".join(bad) if bad else "every bar is kept")
+    print(f"the figures: {given.into / 'report.md'}")
     return 1 if bad else 0
+
+
+def write(into: Path, result: dict[str, Any], bad: Sequence[str]) -> None:
+    """What was found, as data and as a page."""
+    into.mkdir(parents=True, exist_ok=True)
+    (into / "accuracy.json").write_text(json.dumps(result, indent=1), encoding="utf-8")
+    page, figure = draw_report(result, BARS, bad)
+    (into / "report.md").write_text(page, encoding="utf-8")
+    figure.savefig(into / FIGURE, dpi=120)
 
 
 def judge(result: dict[str, Any]) -> list[str]:
     """Bars that are not kept, in words."""
     bad = []
-    for kind, median, p95 in (("12 bit", 0.002, 0.006), ("8 bit", 0.005, 0.015)):
+    low, high = BARS.coverage
+    for kind, (median, p95) in BARS.error.items():
         if kind not in result:
             continue
         entry, count = result[kind]["30"], result[kind]["benches"]
@@ -508,10 +526,12 @@ def judge(result: dict[str, Any]) -> list[str]:
         # With few benches chance alone moves the coverage: two binomial standard deviations on either side.
         slack = 2 * np.sqrt(0.95 * 0.05 / count) if count < 200 else 0.0
         for place in PLACES:
-            if not 0.92 - slack <= entry[f"coverage {place}"] <= 0.98 + slack:
+            if not low - slack <= entry[f"coverage {place}"] <= high + slack:
                 bad.append(f"{kind}: coverage {entry[f'coverage {place}']:.1%} {place}")
     bad += [
-        f"efficiency {e['part']}: {e['ratio']:.2f}" for e in result.get("efficiency", []) if e["ratio"] > 2.0
+        f"efficiency {e['part']}: {e['ratio']:.2f}"
+        for e in result.get("efficiency", [])
+        if e["ratio"] > BARS.efficiency
     ]
     return bad
 
