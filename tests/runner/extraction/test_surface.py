@@ -96,10 +96,12 @@ def test_at_a_leg_the_surface_is_that_leg(temperatures, tolerance):
 def test_energy_and_flux_at_a_small_share_of_the_range(share):
     """½ L_0 I² and L_0 I, also between the first points of the grid, which lie 1/400 of the range apart."""
     i = share * REACH * knee(25.0)
-    assert surface((25.0,)).energy(i, 25.0) == pytest.approx(initial(25.0) * i**2 / 2, rel=1e-3)
-    assert surface((25.0,)).flux_linkage(i, 25.0) == pytest.approx(initial(25.0) * i, rel=1e-3)
+    assert surface((25.0,)).energy(i, 25.0) == pytest.approx(initial(25.0) * i**2 / 2, rel=1e-3, abs=0.0)
+    assert surface((25.0,)).flux_linkage(i, 25.0) == pytest.approx(initial(25.0) * i, rel=1e-3, abs=0.0)
     found = surface((25.0,), own=3e-3)
-    assert found.energy_uncertainty(i, 25.0) == pytest.approx(3e-3 * initial(25.0) * i**2 / 2, rel=0.01)
+    assert found.energy_uncertainty(i, 25.0) == pytest.approx(
+        3e-3 * initial(25.0) * i**2 / 2, rel=0.01, abs=0.0
+    )
 
 
 def test_secant_inductance_at_no_current_is_the_initial_one():
