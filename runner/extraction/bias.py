@@ -5,7 +5,7 @@ core with hysteresis: the two are never merged. Readings on the way up and on th
 """
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -119,6 +119,10 @@ class ReadingData:
     def inductance_at_rows(self, model: CurveModel, shape: Shape, z: FloatArray) -> FloatArray:
         return self.linearise(model, shape, z)[2]
 
+    def moved(self, by: FloatArray) -> "ReadingData":
+        """The same readings with their inductances smaller by ``by`` [n] (scaled)."""
+        return replace(self, inductance=self.inductance - by)
+
     def noise(self, inductance: FloatArray) -> Noise:
         """Independent noise in proportion to the reading; its size is for the fit to find (starting at 1e-4)."""
         return Noise((np.diag(1e-4 * np.maximum(inductance, 0.01)),), (ROWS,))
@@ -143,13 +147,14 @@ def bias_leg(
         top,
         first,
     )
-    fit = fit_curve(data, like=None if like is None else like.fit)
-    return leg_curve(
-        fit,
-        Scale(top, first * top),
-        temperature_degC=temperature_degC,
-        shifts=_shifts(fit, data, calibration),
-    )
+    scale = Scale(top, first * top)
+
+    def fit(rows: ReadingData, like: Fit | None = None) -> LegCurve:
+        found = fit_curve(rows, like=like)
+        shifts = _shifts(found, rows, calibration)
+        return leg_curve(found, scale, temperature_degC=temperature_degC, shifts=shifts, again=fit)
+
+    return fit(data, None if like is None else like.fit)
 
 
 def _shifts(fit: Fit, data: ReadingData, calibration: Calibration) -> Mapping[str, FloatArray]:

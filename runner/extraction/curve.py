@@ -1,13 +1,16 @@
 """One leg's curve in SI, with everything its uncertainty is made of.
 
 `LegCurve` answers L_d, L_s, λ and energy at currents inside what was measured, and `knee` the saturation current.
-A quantity's uncertainty has two kinds of parts: what this leg's own noise and model leave open (a covariance of the
-parameters), and named causes common to all legs (a vector of shifts of the parameters, one for each standard
-uncertainty of a calibration constant). Linear propagation, GUM 5.1.2; causes are independent of each other.
+The curve is the mean over the laws that were tried, each with the weight of its evidence (`curve_fit.py`); how far a law
+lies from the mean counts as one more parameter, whose variance is that weight, so that all that follows from the curve
+knows that the law is not. A quantity's uncertainty has two kinds of parts: what this leg's own noise and model leave open
+(a covariance of the parameters), and named causes common to all legs (a vector of shifts of the parameters, one for each
+standard uncertainty of a calibration constant). Linear propagation, GUM 5.1.2; causes are independent of each other.
 """
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 
@@ -72,8 +75,8 @@ class LegCurve:
     """The curve of one part at one temperature.
 
     ``current`` [n] A from 0 to the largest measured, ``inductance`` [n] H (differential), ``flux`` [n] Wb; slopes
-    [n, p] are derivatives with respect to the fit's parameters; ``covariance`` (own, total), ``noise`` and
-    ``delay`` split it; ``shifts``: parameters' change per cause.
+    [n, p] are derivatives with respect to the fit's parameters, then to each law's share; ``covariance`` (own, total),
+    ``noise`` and ``delay`` split it; ``shifts``: parameters' change per cause; ``again``: the same leg from other rows.
     """
 
     temperature_degC: float
@@ -88,6 +91,7 @@ class LegCurve:
     shifts: Mapping[str, FloatArray]
     fit: Fit
     scale: Scale
+    again: Callable[[Any, Fit | None], "LegCurve"] | None = None
 
     @property
     def top(self) -> float:
@@ -96,22 +100,27 @@ class LegCurve:
 
     def with_fit(self, fit: Fit) -> "LegCurve":
         """The same leg with another fit of the same rows."""
-        return leg_curve(fit, self.scale, temperature_degC=self.temperature_degC, shifts=self.shifts)
+        return leg_curve(
+            fit, self.scale, temperature_degC=self.temperature_degC, shifts=self.shifts, again=self.again
+        )
 
     def with_cause(self, name: str, shift: FloatArray) -> "LegCurve":
         """The same leg with one more cause of uncertainty: change of its parameters [p] per standard uncertainty."""
-        return replace(self, shifts={**self.shifts, name: shift})
+        return replace(self, shifts={**self.shifts, name: _padded(shift, len(self.covariance))})
 
     def initial_inductance(self) -> Quantity:
         """L_d at zero current [H]."""
         return self._quantity(float(self.inductance[0]), self.inductance_slopes[0])
 
-    def knee(self, drop: float, reference: Quantity | None = None) -> Quantity | None:
+    def knee(self, drop: float, reference: Quantity | None = None, *, share: float = 0.0) -> Quantity | None:
         """Current [A] at which L_d has fallen by ``drop`` from ``reference`` [H] (this leg's own L_0 when None).
+
+        ``share``: of the reference that is this leg's own L_0, whose uncertainties ``reference`` then leaves out.
 
         None where that was not reached inside the measured currents: never extrapolated.
         """
         ref = float(self.inductance[0]) if reference is None else reference.value
+        share = 1.0 if reference is None else share
         below = self.inductance - (1 - drop) * ref
         if below[0] <= 0:
             return Quantity(0.0, {}, {}) if reference is not None else None
@@ -124,16 +133,16 @@ class LegCurve:
         steepness = float(self.inductance[k] - self.inductance[k - 1]) / step
         slopes = self.inductance_slopes[k - 1] * (1 - f) + self.inductance_slopes[k] * f
         value = float(self.current[k - 1] + f * step)
+        own = self._quantity(value, -(slopes - (1 - drop) * share * self.inductance_slopes[0]) / steepness)
         if reference is None:
-            return self._quantity(value, -(slopes - (1 - drop) * self.inductance_slopes[0]) / steepness)
-        own = self._quantity(value, -slopes / steepness)
+            return own
         factor = (1 - drop) / steepness
         shared = {
             name: own.shared.get(name, 0.0) + factor * reference.shared.get(name, 0.0)
             for name in {**own.shared, **reference.shared}
         }
         mine = dict(own.own)
-        other = float(np.sqrt(sum(u * u for u in reference.own.values())))
+        other = combine(tuple(reference.own.values()))
         if other:
             mine["reference inductance"] = abs(factor) * other
         return Quantity(value, mine, shared)
@@ -187,23 +196,51 @@ class LegCurve:
 
 
 def leg_curve(
-    fit: Fit, scale: Scale, *, temperature_degC: float, shifts: Mapping[str, FloatArray]
+    fit: Fit,
+    scale: Scale,
+    *,
+    temperature_degC: float,
+    shifts: Mapping[str, FloatArray],
+    again: Callable[[Any, Fit | None], LegCurve] | None = None,
 ) -> LegCurve:
-    """Bring a fit into SI; ``shifts`` are the parameters' changes for one standard uncertainty of each cause."""
+    """Bring a fit into SI; ``shifts`` are the parameters' changes for one standard uncertainty of each cause, ``again``
+    makes the curve of this leg from other values of its rows."""
     inside = fit.model.current <= 1.0 + 1e-12
+    step = float(fit.model.current[1])
+    weights = np.array([rival.weight for rival in fit.rivals])
+    ratios = np.array([rival.ratio for rival in fit.rivals]).reshape(len(weights), len(inside))
+    mean = weights @ ratios if len(weights) else np.ones(len(inside))
+    others = ((ratios - mean) * fit.shape.inductance).T
+    inductance = fit.shape.inductance * mean
+    slopes = np.hstack([fit.shape.inductance_slopes * mean[:, None], others])
     own = fit.model.parameters
-    covariance = fit.covariance[:own, :own]
+    size = own + len(weights)
+
+    def padded(covariance: FloatArray) -> FloatArray:
+        out = np.zeros((size, size))
+        out[:own, :own] = covariance[:own, :own]
+        return out
+
+    covariance, noise = padded(fit.covariance), padded(fit.noise_covariance)
+    delay = covariance - padded(fit.covariance_without_delay)
+    covariance[range(own, size), range(own, size)] = weights
     return LegCurve(
         temperature_degC=temperature_degC,
         current=fit.model.current[inside] * scale.current,
-        inductance=fit.shape.inductance[inside] * scale.inductance,
-        flux=fit.shape.flux[inside] * scale.flux,
-        inductance_slopes=fit.shape.inductance_slopes[inside] * scale.inductance,
-        flux_slopes=fit.shape.flux_slopes[inside] * scale.flux,
+        inductance=inductance[inside] * scale.inductance,
+        flux=running_integral(inductance, step)[inside] * scale.flux,
+        inductance_slopes=slopes[inside] * scale.inductance,
+        flux_slopes=running_integral(slopes, step)[inside] * scale.flux,
         covariance=covariance,
-        noise=fit.noise_covariance[:own, :own],
-        delay=covariance - fit.covariance_without_delay[:own, :own],
-        shifts=shifts,
+        noise=noise,
+        delay=delay,
+        shifts={name: _padded(shift, size) for name, shift in shifts.items()},
         fit=fit,
         scale=scale,
+        again=again,
     )
+
+
+def _padded(shift: FloatArray, size: int) -> FloatArray:
+    """Causes of the bench move the parameters, not what is thought of the laws."""
+    return np.concatenate([shift, np.zeros(size - len(shift))]) if len(shift) < size else shift

@@ -24,6 +24,7 @@ from runner.extraction.ramp import Ramp
 class FitData(Protocol):
     """What `curve_fit` needs: n rows, their residuals about a curve, and their noise.
 
+    ``moved``: the same rows, what is compared with the curve being smaller by so much [n].
     ``noise_known``: False lets the fit find the noise's size freely, True only lets it grow a little.
     ``common``: what the rows share. ``temperatures`` [n] degC of the part at each row.
     """
@@ -46,6 +47,7 @@ class FitData(Protocol):
     ) -> tuple[FloatArray, FloatArray, FloatArray]: ...
     def inductance_at_rows(self, model: CurveModel, shape: Shape, z: FloatArray) -> FloatArray: ...
     def noise(self, inductance: FloatArray) -> "Noise": ...
+    def moved(self, by: FloatArray) -> "FitData": ...
 
 
 @dataclass(frozen=True, slots=True)
@@ -113,6 +115,10 @@ class CurveData:
     def with_rows(self, current: FloatArray, flux: FloatArray) -> "CurveData":
         """The same bins with other values (scaled)."""
         return replace(self, current=current, flux=flux)
+
+    def moved(self, by: FloatArray) -> "CurveData":
+        """The same bins with their currents smaller by ``by`` [n] (scaled)."""
+        return replace(self, current=self.current - by)
 
     def pilot(self) -> tuple[FloatArray, FloatArray]:
         """A few of the rows, evenly along the flux, for the first look at the laws: current and flux [k]."""

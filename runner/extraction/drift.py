@@ -2,7 +2,8 @@
 
 The legs themselves say how the curve moves with temperature, so a first pass over all legs gives the correction of
 each row: at the row's flux for the pulse method (its current moves), at its current for the bias method (its
-inductance moves). It is small, so the fit is not repeated: its parameters move linearly with the rows.
+inductance moves). Where that is more than the rows' noise the curve is fitted again: rows of different temperatures may
+have been taken for another law. Where it is less, the parameters move linearly with the rows.
 """
 
 from collections.abc import Sequence
@@ -17,15 +18,24 @@ from runner.extraction.curve_data import CurveData
 from runner.extraction.surface import Surface
 
 WORTH = 0.01  # K: smaller departures are left alone
+SEEN = 4.0  # change of the residuals' sum of squares, in units of the noise, that a fit would see
+ALIKE = 1.3  # misfit up to which the laws found without a correction are worth a try with it
+FAR = 2.0  # K within one leg
 HALF_STEP = 3.0  # K for the slope in temperature
 
 
 def at_one_temperature(legs: Sequence[LegCurve], *, kind: str) -> list[LegCurve]:
     """The legs with every row brought to its leg's temperature; unchanged where there is one leg only."""
+    brought = list(legs)
     if len(legs) < 2:
-        return list(legs)
-    surface = Surface(legs, kind=kind)
-    return [brought_by(surface, leg) for leg in legs]
+        return brought
+    far = max(float(np.ptp(leg.fit.data.temperatures)) for leg in legs)
+    for _ in range(
+        1 if far < FAR else 2
+    ):  # legs far from one temperature do not quite say how the curve moves with it
+        surface = Surface(brought, kind=kind)
+        brought = [brought_by(surface, leg) for leg in legs]
+    return brought
 
 
 def brought_by(surface: Surface, leg: LegCurve) -> LegCurve:
@@ -39,10 +49,18 @@ def brought_by(surface: Surface, leg: LegCurve) -> LegCurve:
     if not np.any(np.abs(away) > WORTH) and not np.any(unsure > WORTH):
         return leg
     slopes, fit = _row_slopes(leg, surface), leg.fit
-    z = fit.z - fit.gain @ (slopes * away)
+    move = slopes * away
+    if (
+        leg.again is not None
+        and float(np.sum(fit.data.noise(fit.inductance_at_rows).whiten(move) ** 2)) > SEEN
+    ):
+        leg = leg.again(fit.data.moved(move), fit if fit.misfit < ALIKE else None)
+    else:
+        z = fit.z - fit.gain @ move
+        leg = leg.with_fit(replace(fit, z=z, shape=fit.model.shape(z[: fit.model.parameters])))
     if np.any(unsure > WORTH):
-        leg = leg.with_cause("self-heating", (fit.gain @ (slopes * unsure))[: fit.model.parameters])
-    return leg.with_fit(replace(fit, z=z, shape=fit.model.shape(z[: fit.model.parameters])))
+        leg = leg.with_cause("self-heating", (leg.fit.gain @ (slopes * unsure))[: leg.fit.model.parameters])
+    return leg
 
 
 def _row_slopes(leg: LegCurve, surface: Surface) -> FloatArray:

@@ -58,6 +58,16 @@ def capture_doubts(point: int, mean: MeanCapture, ramp: Ramp | None) -> list[Dou
                 "too few clean samples of the rising current; sample faster or widen the pulse.",
             )
         )
+    if ramp is not None and ramp.is_coarse:
+        top = float(ramp.current[-1])
+        doubts.append(
+            Doubt(
+                point,
+                "coarse",
+                f"above {top:.3g} A the current runs away between two samples: the knee is sharper than the sampling "
+                "shows. What follows was left out; sample faster or lower the rail.",
+            )
+        )
     if mean.odd:
         which = ", ".join(str(k) for k in mean.odd)
         doubts.append(Doubt(point, "odd_repeat", f"repeat {which} differs from the others and was left out."))
@@ -70,7 +80,7 @@ def capture_doubts(point: int, mean: MeanCapture, ramp: Ramp | None) -> list[Dou
                 " mains pickup or drift; check the shunt's leads and ground.",
             )
         )
-    if mean.pretrigger < 8:
+    if mean.has_pulse and mean.pretrigger < 8:
         doubts.append(
             Doubt(
                 point,

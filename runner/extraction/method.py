@@ -15,12 +15,13 @@ from runner.extraction.curve import LegCurve
 from runner.extraction.derating import derating, margins, temperature_coefficients
 from runner.extraction.drift import at_one_temperature, brought_by
 from runner.extraction.flags import Doubt
-from runner.extraction.part_result import Knees, Settings, find_knees, method_result
+from runner.extraction.part_result import Knees, Settings, find_knees, method_result, reference_weights
 from runner.extraction.resistance import Resistance
 from runner.extraction.shape_test import judge_shape
 from runner.extraction.surface import Surface, left_out_error
 
 KINDS = {"pulse": "differential", "bias": "incremental"}
+LONG_LAG = 0.1  # of the longest pulse, that the shunt's L/R may be (common practice, no source)
 MUCH_NOISE = 1.5  # residuals this many times the noise that the captures themselves show
 
 
@@ -93,6 +94,21 @@ def finish_method(
     return entry
 
 
+def _lag_doubts(at: str, leg: LegCurve) -> list[Doubt]:
+    """A shunt whose inductance shapes the whole reading."""
+    ramps = getattr(leg.fit.data, "ramps", ())
+    if not ramps:
+        return []
+    time, longest = max(ramp.shunt_time for ramp in ramps), max(ramp.width for ramp in ramps)
+    if time <= LONG_LAG * longest:
+        return []
+    return [
+        Doubt(-1, "shunt_inductance", f"{at}: the shunt's L/R of {1e6 * time:.2g} µs is {100 * time / longest:.0f} % of the "
+              "longest pulse, and the current hangs on how well it is known; take a shunt of less inductance or a "
+              "lower rail.")
+    ]  # fmt: skip
+
+
 def _branches(method: MethodLegs) -> list[Branches]:
     """The way down against the way up, both brought to the leg's temperature, where there is a way down."""
     assert method.surface is not None
@@ -119,15 +135,29 @@ def _doubts(
     name: str, legs: Sequence[LegCurve], knees: Knees, resistances: Sequence[Resistance], settings: Settings
 ) -> list[Doubt]:
     found = []
+    is_unknown = settings.reference == "25 degC" and reference_weights(legs, settings.reference) is None
+    if is_unknown:
+        found.append(
+            Doubt(-1, "no_reference", f"{name}: 25 °C lies outside the temperatures that were measured; no drop from "
+                  "the inductance there can be told; add a leg near 25 °C or ask for another reference.")
+        )  # fmt: skip
     for k, (leg, resistance) in enumerate(zip(legs, resistances, strict=True)):
         at = f"{name} at {leg.temperature_degC:.0f} °C"
         missed = [drop for drop in settings.drops if knees.found[drop][k] is None]
-        if missed:
+        if missed and not is_unknown:
             drops = ", ".join(f"{100 * drop:g} %" for drop in missed)
             found.append(
                 Doubt(-1, "not_reached", f"{at}: the inductance did not fall by {drops} up to {leg.top:.3g} A; "
                       f"{'widen the pulses' if name == 'pulse' else 'raise the bias'} if the limits allow.")
             )  # fmt: skip
+        below = [d for d in settings.drops if (q := knees.found[d][k]) is not None and q.value == 0.0]
+        if below:
+            drops = ", ".join(f"{100 * drop:g} %" for drop in below)
+            found.append(
+                Doubt(-1, "below_reference", f"{at}: even without current the inductance lies {drops} below its reference "
+                      f"({settings.reference}); the saturation current is 0 A by that count.")
+            )  # fmt: skip
+        found += _lag_doubts(at, leg)
         shape = judge_shape(leg)
         if not shape.has_one_knee:
             places = " and ".join(f"{knee:.3g} A" for knee in shape.knees)

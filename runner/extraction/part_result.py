@@ -14,6 +14,7 @@ from scipy.special import ndtri
 
 from runner.arrays import FloatArray
 from runner.extraction.curve import LegCurve, Quantity
+from runner.extraction.gum import combine
 from runner.extraction.resistance import Resistance
 
 REFERENCE_DEGC = 25.0
@@ -54,47 +55,49 @@ def find_knees(
         temperature_uncertainty: of the measured temperature, common to all legs [K].
     """
     bare = tuple(leg.initial_inductance() for leg in legs)
-    reference = _reference(legs, bare, settings.reference, nominal)
+    weights = reference_weights(legs, settings.reference)
     found: dict[float, tuple[Quantity | None, ...]] = {}
     for drop in settings.drops:
-        if settings.reference != "same temperature" and reference is None:
-            found[drop] = (None,) * len(legs)
-            continue
-        knees = [leg.knee(drop, reference) for leg in legs]
+        knees = [
+            _knee(leg, k, drop, settings.reference, nominal, bare, weights) for k, leg in enumerate(legs)
+        ]
         found[drop] = _with_temperature(knees, legs, temperature_uncertainty)
     initial = tuple(q for q in _with_temperature(bare, legs, temperature_uncertainty) if q is not None)
     return Knees(initial, found)
 
 
-def _reference(
-    legs: Sequence[LegCurve], initial: Sequence[Quantity], reference: str, nominal: float
+def _knee(
+    leg: LegCurve,
+    k: int,
+    drop: float,
+    reference: str,
+    nominal: float,
+    initial: Sequence[Quantity],
+    weights: FloatArray | None,
 ) -> Quantity | None:
-    """The inductance a drop is counted from; None for the leg's own, and where 25 degC was not measured."""
+    if reference == "same temperature":
+        return leg.knee(drop)
     if reference == "nominal":
-        return Quantity(nominal, {}, {})
-    if reference != "25 degC":
+        return leg.knee(drop, Quantity(nominal, {}, {}))
+    if weights is None:
         return None
-    at = np.array([leg.temperature_degC for leg in legs])
-    if not (at[0] - NEAR_REFERENCE <= REFERENCE_DEGC <= at[-1] + NEAR_REFERENCE):
-        return None
-    if len(legs) == 1:
-        return initial[0]
-    weights = _line_weights(at, REFERENCE_DEGC)
+    others = np.where(np.arange(len(initial)) == k, 0.0, weights)
+    value = float(sum(w * q.value for w, q in zip(weights, initial, strict=True)))
+    own = [w * u for w, q in zip(others, initial, strict=True) for u in q.own.values()]
     names = {name for q in initial for name in q.shared}
-    return Quantity(
-        float(sum(w * q.value for w, q in zip(weights, initial, strict=True))),
-        {
-            "reference inductance": float(
-                np.sqrt(
-                    sum((w * u) ** 2 for w, q in zip(weights, initial, strict=True) for u in q.own.values())
-                )
-            )
-        },
-        {
-            n: float(sum(w * q.shared.get(n, 0.0) for w, q in zip(weights, initial, strict=True)))
-            for n in names
-        },
-    )
+    shared = {
+        n: float(sum(w * q.shared.get(n, 0.0) for w, q in zip(others, initial, strict=True))) for n in names
+    }
+    rest = Quantity(value, {"reference inductance": combine(own)}, shared)
+    return leg.knee(drop, rest, share=float(weights[k]))
+
+
+def reference_weights(legs: Sequence[LegCurve], reference: str) -> FloatArray | None:
+    """Of each leg's L_0 [m] in the inductance at 25 degC; None where that is not asked for or was not measured."""
+    at = np.array([leg.temperature_degC for leg in legs])
+    if reference != "25 degC" or not (at[0] - NEAR_REFERENCE <= REFERENCE_DEGC <= at[-1] + NEAR_REFERENCE):
+        return None
+    return np.ones(1) if len(legs) == 1 else _line_weights(at, REFERENCE_DEGC)
 
 
 def _line_weights(at: FloatArray, x: float) -> FloatArray:

@@ -36,11 +36,14 @@ def pulse_leg(
         skew=calibration.skew.uncertainty,
         shunt_time=calibration.shunt_inductance.uncertainty / calibration.shunt_now,
     )
-    fit = fit_curve(data, like=None if like is None else like.fit)
-    shifts = constant_shifts(fit, data, calibration, resistance_uncertainty)
-    return leg_curve(
-        fit, Scale(data.scales.current, data.scales.flux), temperature_degC=temperature_degC, shifts=shifts
-    )
+    scale = Scale(data.scales.current, data.scales.flux)
+
+    def fit(rows: CurveData, like: Fit | None = None) -> LegCurve:
+        found = fit_curve(rows, like=like)
+        shifts = constant_shifts(found, rows, calibration, resistance_uncertainty)
+        return leg_curve(found, scale, temperature_degC=temperature_degC, shifts=shifts, again=fit)
+
+    return fit(data, None if like is None else like.fit)
 
 
 def constant_shifts(

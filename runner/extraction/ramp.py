@@ -18,6 +18,10 @@ from runner.extraction.mean_capture import FEWEST_PRETRIGGER, MeanCapture
 
 BINS = 96
 FEWEST_SAMPLES = 12
+COARSE = (
+    1.5  # growth of di/dt from one sample to the next beyond which the sampling does not show how it grew
+)
+CERTAIN = 6.0  # standard deviations of the noise by which it must have grown
 JITTER = (
     0.1  # of the sampling interval, between captures; where the pulse begins on average is the fit's to find
 )
@@ -37,7 +41,8 @@ class Ramp:
     ``interval`` [s] between samples. ``quantum``: step of the current's
     codes [A]; ``dither``: rms noise in steps.
 
-    ``width`` [s] and ``peak`` [A] of the pulse; ``is_cut``: clipped samples ended it early.
+    ``width`` [s] and ``peak`` [A] of the pulse; ``is_cut``: clipped samples ended it early; ``is_coarse``: so did a current
+    that ran away between two samples.
     """
 
     point: int
@@ -63,6 +68,7 @@ class Ramp:
     width: float
     peak: float
     is_cut: bool
+    is_coarse: bool
 
     def flux(self, winding_resistance: float) -> FloatArray:
         """Flux linkage [Wb] at the bins: ∫(v − R i) dt."""
@@ -96,7 +102,13 @@ def make_ramp(
     count = end - begin
     if count < FEWEST_SAMPLES:
         return None
+    i_noise = mean.current_noise * to_ampere
     edges = begin + bin_edges(current[begin:end])
+    resolved = resolved_bins(current, edges, i_noise / np.sqrt(mean.repeats))
+    is_coarse = resolved < len(edges) - 1
+    if is_coarse:
+        edges = edges[: resolved + 1]
+        end = int(edges[-1])
     sizes = np.diff(edges)
 
     def binned(values: FloatArray) -> FloatArray:
@@ -106,7 +118,6 @@ def make_ramp(
     spread = np.add.reduceat((volt_seconds[begin:end] - middle) ** 2, edges[:-1] - begin) / sizes
     repeats, before = mean.repeats, mean.pretrigger
     v_noise = mean.voltage_noise / calibration.voltage_gain.value
-    i_noise = mean.current_noise * to_ampere
     v_step, i_step = _step(mean.setting.v_step), _step(mean.setting.i_step) * to_ampere
     behind_offset = max(before, 1) * repeats if before >= FEWEST_PRETRIGGER else 1
     slope_u = np.hypot(v_noise / np.sqrt(behind_offset), undithered(v_step, v_noise))
@@ -138,7 +149,24 @@ def make_ramp(
         width=(stop - start) * step,
         peak=float(current[begin:end].max()),
         is_cut=is_cut,
+        is_coarse=is_coarse,
     )
+
+
+def resolved_bins(current: FloatArray, edges: IntArray, noise: float) -> int:
+    """How many of the bins come before the current runs away between two samples.
+
+    At a knee sharper than the sampling the last few samples jump to any current, and what they say about the inductance
+    there is what the sampling made of it. ``noise``: standard deviation of a sample of ``current`` [A].
+    """
+    sizes = np.diff(edges)
+    level = np.add.reduceat(current[: edges[-1]], edges[:-1]) / sizes
+    middle = 0.5 * (edges[1:] + edges[:-1])
+    rate = np.diff(level) / np.diff(middle)
+    sure = CERTAIN * noise * np.sqrt(6.0 / np.minimum(sizes[1:-1], sizes[2:])) / np.diff(middle)[1:]
+    grown = rate[1:] > np.maximum(COARSE * rate[:-1], rate[:-1] + sure)
+    ran = np.flatnonzero(grown & (sizes[2:] <= 2) & (sizes[1:-1] <= 2))
+    return int(ran[0]) + 2 if ran.size else len(sizes)
 
 
 def bin_edges(current: FloatArray) -> IntArray:

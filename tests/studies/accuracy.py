@@ -311,7 +311,12 @@ def study_bench(seed: int, bits: int | None = None, harsh: bool = False) -> dict
         u = float(np.hypot(5e-4 * reading, 2e-5))
         legs.append(
             pulse_leg(
-                ramps, bench.stated, temperature_degC=measured, resistance=reading, resistance_uncertainty=u
+                ramps,
+                bench.stated,
+                temperature_degC=measured,
+                resistance=reading,
+                resistance_uncertainty=u,
+                like=legs[-1] if legs else None,
             )
         )
         # The interval is about the part at the temperature that is stated: the measured one.

@@ -149,6 +149,14 @@ def test_own_uncertainty_of_the_leg_at_25_degrees_reaches_the_others():
     assert hot.uncertainty == pytest.approx(knee(125.0) * 0.02 / (2 * np.tanh(x)), rel=1e-3)
 
 
+@pytest.mark.parametrize("temperatures", [(25.0,), (25.0, 125.0), (-40.0, 25.0)])
+def test_the_leg_that_is_the_reference_counts_its_initial_inductance_once(temperatures):
+    """L_0's 2 % drop out where the reference is the leg's own, as they do at the same temperature."""
+    legs = [leg(t, own=(0.02, 0.01)) for t in temperatures]
+    found = knees_of(legs, "25 degC").found[DROP][temperatures.index(25.0)]
+    assert found.uncertainty == pytest.approx(0.01 * X_30 * 10, rel=1e-3)
+
+
 def test_temperature_enters_by_the_slope_along_the_legs():
     """Isat falls by 2.6e-3·10 A·x a kelvin; 0.15 K of the thermometer move it by 0.15 of that, every leg alike."""
     found = knees_of([leg(t) for t in TEMPERATURES], temperature=0.15)
