@@ -24,9 +24,10 @@ is noted in step 1 and added to either side. Without it (*instruments at once*) 
 computes than a loop that computes nothing, which no bench ever sees; both are printed.
 
 Wall time is what a night takes: CPU time does not see the wait for fsync, which is what the journal's promise costs, nor
-the wait for an instrument. On a machine that computes other things at the same time the wall time of both sides grows; a median of pairs taken in turn stands that, a single pair does not. CPU time (of
-the runner's process; the watchdog and the rebuilds join it when they end, in the closing) stands beside it and is blurred
-less: where the two disagree, it is the disk, or a crowd.
+the wait for an instrument. On a machine that computes other things at the same time the wall time of both sides grows; a
+median of pairs taken in turn stands that, a single pair does not. CPU time (of the runner's process; the watchdog and the
+rebuilds join it when they end, in the closing) stands beside it and is blurred less: where the two disagree, it is the
+disk, or a crowd.
 
 Left out on purpose, each of which makes the ratio larger than a night would see it: no wire between bench and computer,
 and rests take no time; the bare loop is told how long each reply is; of a point it keeps nothing but its captures, in one
