@@ -57,14 +57,18 @@ class Extraction:
     tables: ExtractionTables
     methods: dict[tuple[int, str], MethodLegs]
 
-    def surface(self, part: int = 0, method: str = "pulse") -> Surface:
-        """L(I,T) of one part by one method.
+    def surface(self, part: int | str = 0, method: str = "pulse") -> Surface:
+        """L(I,T) of one part, by its label or its place in the plan, by one method.
 
         Raises:
-            KeyError: the run has nothing of that part and method.
+            KeyError: the run has no curves of that part and method; says which there are.
         """
-        found = self.methods[part, method]
-        assert found.surface is not None
+        labels = [row["label"] for row in self.result["parts"]]
+        index = labels.index(part) if part in labels else part
+        found = self.methods.get((index, method)) if isinstance(index, int) else None
+        if found is None or found.surface is None:
+            known = ", ".join(f"{labels[k]} by {name}" for k, name in self.methods)
+            raise KeyError(f"no curves of {part} by {method}; there are: {known or 'none'}")
         return found.surface
 
 
