@@ -1,7 +1,7 @@
 """Pictures of one part and one method: L(I) by temperature, and the surface L(I, T)."""
 
 import math
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from itertools import pairwise
 from typing import Any
@@ -58,6 +58,7 @@ def draw_curves(facts: Facts, part: PartFacts, method: MethodFacts) -> Picture |
         )
         lines += axes.plot(current, inductance, color=colour, linestyle=LINE_STYLES[row % len(LINE_STYLES)],
                            marker=_marker(method.name, seen.size), markersize=3, label=names[row])  # fmt: skip
+    _draw_ways_down(axes, family, method, colours, currents, inductances)
     axes.set_ylim(bottom=0)
     axes.set_xlim(
         0, float(currents.of(family.current[np.isfinite(family.inductance).any(axis=0)][-1])) * 1.02
@@ -218,6 +219,21 @@ def _mark_knees(
                       markerfacecolor="white", markeredgecolor=colours[row], markeredgewidth=1.1, zorder=4)  # fmt: skip
 
 
+def _ways_down(method: MethodFacts) -> list[Mapping[str, Any]]:
+    """Of a bias series that came back by another way: the record of each temperature where it did."""
+    return [row for row in method.extras.get("branches", ()) if row.get("branches_differ")]
+
+
+def _draw_ways_down(
+    axes: Axes, family: Family, method: MethodFacts, colours: list[Any], currents: Scale, inductances: Scale
+) -> None:
+    for way in _ways_down(method):
+        row = int(np.argmin(np.abs(family.temperature_degC - way["temperature_degC"])))
+        curve = way["curves"]
+        axes.plot(currents.of(np.array(curve["ampere"])), inductances.of(np.array(curve["down_henry"])),
+                  color=colours[row], linestyle=(0, (1, 1.5)), linewidth=1.1)  # fmt: skip
+
+
 def _mark_rated(axes: Axes, part: PartFacts, currents: Scale) -> None:
     rated = currents.of(part.rated_current)
     if math.isfinite(rated) and rated < axes.get_xlim()[1]:
@@ -242,6 +258,7 @@ def _curves_caption(facts: Facts, part: PartFacts, method: MethodFacts) -> str:
         f"{INDUCTANCE[method.name].capitalize()} of {part.label} against current, {_range(method.family)}. "
         f"Band: {percent(facts.coverage)} interval, often narrower than the line."
         + (f" Marks on the lines: {', '.join(marks)}." if marks else "")
+        + (" Dotted: on the way down, where that is another curve." if _ways_down(method) else "")
     )
 
 

@@ -6,9 +6,11 @@ import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
+from matplotlib.figure import Figure
 
-from runner.report.curves import _mesh
-from runner.report.facts import Family
+from runner.report.curves import _draw_ways_down, _mesh
+from runner.report.digits import Scale
+from runner.report.facts import Family, MethodFacts
 
 NAN = np.nan
 
@@ -73,3 +75,17 @@ def test_no_triangle_is_turned_over_whatever_the_rows_reach(lengths):
     expected = sum((a + b) / 2 for a, b in pairwise(lengths))
     assert np.all(areas(mesh) > 0)
     assert areas(mesh).sum() == pytest.approx(expected)
+
+
+def test_a_way_down_is_drawn_where_it_is_another_curve_and_in_its_own_temperatures_colour():
+    def way(temperature, differs):
+        curves = {"ampere": [0.0, 1.0], "up_henry": [2e-6, 1e-6], "down_henry": [2e-6, 0.9e-6]}
+        return {"temperature_degC": temperature, "branches_differ": differs, "curves": curves}
+
+    net = family([0, 30], [[2e-6, 1e-6]] * 2)
+    method = MethodFacts("bias", net, (), (), (), {"branches": [way(0.4, False), way(29.6, True)]})
+    axes = Figure().subplots()
+    _draw_ways_down(axes, net, method, ["tab:blue", "tab:red"], Scale(1.0, "A"), Scale(1e-6, "µH"))
+    (line,) = axes.get_lines()
+    assert line.get_color() == "tab:red"
+    assert line.get_ydata() == pytest.approx([2.0, 0.9])
