@@ -14,8 +14,9 @@ from runner.extraction.calibration import Calibration
 from runner.extraction.common_effects import CommonEffects, no_effects
 from runner.extraction.curve import LegCurve, Scale, leg_curve
 from runner.extraction.curve_data import Noise
-from runner.extraction.curve_fit import Fit, fit_curve
+from runner.extraction.curve_fit import fit_curve
 from runner.extraction.curve_model import CurveModel, Shape
+from runner.extraction.fitted import Fit
 
 FEWEST_READINGS = 5
 ROWS = slice(None)

@@ -15,8 +15,8 @@ from typing import Any
 import numpy as np
 
 from runner.arrays import FloatArray
-from runner.extraction.curve_fit import Fit
 from runner.extraction.curve_model import running_integral
+from runner.extraction.fitted import Fit
 from runner.extraction.gum import combine, variances
 
 NEGLIGIBLE = 1e-3  # of the combined uncertainty

@@ -8,7 +8,8 @@ from runner.arrays import FloatArray
 from runner.extraction.calibration import Calibration
 from runner.extraction.curve import LegCurve, Scale, leg_curve
 from runner.extraction.curve_data import CurveData, lay_out
-from runner.extraction.curve_fit import Fit, fit_curve
+from runner.extraction.curve_fit import fit_curve
+from runner.extraction.fitted import Fit
 from runner.extraction.ramp import Ramp
 
 
