@@ -15,6 +15,10 @@ from runner.extraction.laws import PRIOR_MEAN, PRIOR_SIGMA, Law
 # Residuals, their slopes and L at the rows, of a curve at z: `FitData.linearise` or `FitData.approach`.
 Way = Callable[[CurveModel, Shape, FloatArray], tuple[FloatArray, FloatArray, FloatArray]]
 
+LEAST_FLOOR = 1e-6  # of L_0: even air has inductance, and a curve that turns down is none
+NEAR_END = 1e-2
+FIXED = 1e10  # inverse variance of a parameter that stands at its end
+
 
 @dataclass(frozen=True, slots=True)
 class Rival:
@@ -98,6 +102,27 @@ def problem_at(
     return made, shape, residual, inductance
 
 
+def problem_inside(
+    model: CurveModel,
+    data: FitData,
+    z: FloatArray,
+    noise: Noise,
+    mean: FloatArray,
+    prior: FloatArray,
+    hyper: FloatArray,
+) -> tuple[Problem, Shape, FloatArray, FloatArray]:
+    """`problem_at` the best z, with the law's floor held where it would go beyond its end.
+
+    Else evidence and covariance would be those of a curve that nobody may choose.
+    """
+    made = problem_at(model, data, z, noise, mean, prior, way=data.linearise)
+    if z[1] > NEAR_END or made[0].solution(hyper)[1] >= LEAST_FLOOR:
+        return made
+    mean, prior = mean.copy(), prior.copy()
+    mean[1], prior[1] = z[1], FIXED
+    return problem_at(model, data, z, noise, mean, prior, way=data.linearise)
+
+
 def finish_at(
     model: CurveModel,
     data: FitData,
@@ -110,7 +135,7 @@ def finish_at(
     """The fit at z, where somebody has found the best; ``noise`` is worked out there when None."""
     if noise is None:
         noise = data.noise(data.inductance_at_rows(model, model.plain_shape(z[: model.parameters]), z))
-    problem, shape, residual, inductance = problem_at(model, data, z, noise, mean, prior, way=data.linearise)
+    problem, shape, residual, inductance = problem_inside(model, data, z, noise, mean, prior, hyper)
     return _finish(problem, model, data, noise, shape, hyper, inductance, residual)
 
 

@@ -17,7 +17,7 @@ from runner.extraction.curve_model import BEYOND, CurveModel, running_integral
 from runner.extraction.descent import descend
 from runner.extraction.deviation import KNOTS
 from runner.extraction.evidence import Problem
-from runner.extraction.fitted import Fit, Way, finish_at, priors, problem_at
+from runner.extraction.fitted import LEAST_FLOOR, Fit, Way, finish_at, priors, problem_at, problem_inside
 from runner.extraction.laws import LAWS, PRIOR_MEAN, PRIOR_SIGMA, Law
 
 ALONE = np.array([-9.0, -1.2, 0.0, -9.0])  # hyperparameters of a law without a deviation
@@ -36,7 +36,6 @@ FAR = 4.0  # residuals this many times the noise: the law alone does not describ
 TURNS, STEPS = 8, 40
 REFRESHED = 2  # turns at which the noise of λ, which reaches the current through 1/L, is worked out anew
 HELD = 0.2  # standard deviation about the best parameters of the law alone, once the deviation has joined
-LEAST_FLOOR = 1e-6  # of L_0: even air has inductance, and a curve that turns down is none
 
 
 def pilots(data: FitData) -> list[tuple[Law, FloatArray]]:
@@ -126,7 +125,7 @@ def deviate(alone: Fit) -> Fit:
         )
         x = _settle(model, data.linearise, noise, x, to_z, mean, unit, inflation, STEPS)
         z = to_z @ x
-        problem, *_ = problem_at(model, data, z, noise, mean, prior, way=data.linearise)
+        problem, *_ = problem_inside(model, data, z, noise, mean, prior, hyper)
         other = _anywhere(problem, hyper, 0.0)
         if problem.evidence(other) > problem.evidence(hyper) - 0.5 and turn >= REFRESHED - 1:
             break
