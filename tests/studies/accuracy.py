@@ -10,10 +10,11 @@ gains, shunt, skew, sag of the bank, drift of the part during a leg, thermometer
 circuit and digitizer; extraction is told only what a bench file would state. Captures go straight from the simulation to
 the extraction's pure core, without sockets and files, which other tests cover: what counts here is numbers.
 
-What is drawn is what somebody who knows the trade would set up: a rail at which the longest pulse lasts 8 to 80 us, and
-a shunt whose L/R is at most a tenth of that (common practice, no source). A second family, *harsh*, is not: shunts of L/R
-up to half the longest pulse, known to 20 %, few and short pulses, noise, a part that warms. No bar is set for it; what
-is asked there is whether the intervals and flags still tell the truth.
+What is drawn is what somebody who knows the trade would set up: a rail of 5 to 40 V at which the longest pulse lasts 8 to
+80 us (less, down to 2 us, where 5 V are too much for that), and a shunt whose L/R is at most a tenth of it (common
+practice, no source). A second family, *harsh*, is not: shunts of L/R up to half the longest pulse, known to 20 %, few and
+short pulses, noise, a part that warms. No bar is set for it; what is asked there is whether the intervals and flags still
+tell the truth.
 
 Efficiency is the root-mean-square error of Isat over the Cramér-Rao bound of the true law with its parameters unknown,
 white current noise only: bound = sqrt(q'·F⁻¹·q), F = Σ (∂i/∂θ)(∂i/∂θ)'/σ², q = ∂Isat/∂θ, with ∂i/∂θ = −(∂λ/∂θ)/L at
