@@ -21,6 +21,7 @@ WORTH = 0.01  # K: smaller departures are left alone
 SEEN = 4.0  # change of the residuals' sum of squares, in units of the noise, that a fit would see
 ALIKE = 1.3  # misfit up to which the laws found without a correction are worth a try with it
 FAR = 2.0  # K within one leg
+SLACK = 0.1  # of the correction: how well a few legs tell how the curve moves with temperature (seen on simulated parts)
 HALF_STEP = 3.0  # K for the slope in temperature
 
 
@@ -41,8 +42,8 @@ def at_one_temperature(legs: Sequence[LegCurve], *, kind: str) -> list[LegCurve]
 def brought_by(surface: Surface, leg: LegCurve) -> LegCurve:
     """A leg with its rows brought to its temperature, from what ``surface`` says about the part in temperature.
 
-    How warm direct current made the part is known only so well (`bias_heat.py`); what that leaves open becomes a cause
-    of its own.
+    How the curve moves is known only so well, and so is how warm direct current made the part (`bias_heat.py`); what either
+    leaves open becomes a cause of its own.
     """
     away = leg.fit.data.temperatures - leg.temperature_degC
     unsure = getattr(leg.fit.data, "heat_uncertainty", np.zeros(1))
@@ -50,14 +51,14 @@ def brought_by(surface: Surface, leg: LegCurve) -> LegCurve:
         return leg
     slopes, fit = _row_slopes(leg, surface), leg.fit
     move = slopes * away
-    if (
-        leg.again is not None
-        and float(np.sum(fit.data.noise(fit.inductance_at_rows).whiten(move) ** 2)) > SEEN
-    ):
+    is_seen = float(np.sum(fit.data.noise(fit.inductance_at_rows).whiten(move) ** 2)) > SEEN
+    if is_seen and leg.again is not None:
         leg = leg.again(fit.data.moved(move), fit if fit.misfit < ALIKE else None)
     else:
         z = fit.z - fit.gain @ move
         leg = leg.with_fit(replace(fit, z=z, shape=fit.model.shape(z[: fit.model.parameters])))
+    if is_seen:
+        leg = leg.with_cause("drift", (leg.fit.gain @ (SLACK * move))[: leg.fit.model.parameters])
     if np.any(unsure > WORTH):
         leg = leg.with_cause("self-heating", (leg.fit.gain @ (slopes * unsure))[: leg.fit.model.parameters])
     return leg

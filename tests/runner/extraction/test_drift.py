@@ -116,12 +116,15 @@ def test_one_leg_says_nothing_about_temperature(drifting):
     assert at_one_temperature(drifting[:1], kind="differential") == drifting[:1]
 
 
-def test_the_temperature_stays_the_legs_own_and_the_interval_shrinks(drifting):
-    """Rows of different temperatures disagree and widen everything; rows brought together no longer do."""
+def test_the_temperature_stays_the_legs_own_and_rows_brought_together_agree(drifting):
+    """Rows of different temperatures disagree and widen everything; once brought together they no longer do, and how well
+    that was done is a cause with a name."""
     for before, after in zip(drifting, at_one_temperature(drifting, kind="differential"), strict=True):
         assert after.temperature_degC == before.temperature_degC
         assert after.fit.misfit < 1.2 < before.fit.misfit
-        assert after.knee(0.3).uncertainty < before.knee(0.3).uncertainty
+        assert after.knee(0.3).own["noise"] < before.knee(0.3).own["noise"]
+        assert "drift" not in before.knee(0.3).shared
+        assert abs(after.knee(0.3).shared["drift"]) > 0
 
 
 # ------------------------------------------------------------------------------------ readings of a meter
