@@ -14,7 +14,7 @@ from runner.extraction.calibration import Calibration
 from runner.extraction.common_effects import CommonEffects, no_effects
 from runner.extraction.curve import LegCurve, Scale, leg_curve
 from runner.extraction.curve_data import Noise
-from runner.extraction.curve_fit import fit_curve
+from runner.extraction.curve_fit import fit_again, fit_curve
 from runner.extraction.curve_model import CurveModel, Shape
 from runner.extraction.fitted import Fit
 
@@ -150,12 +150,14 @@ def bias_leg(
     )
     scale = Scale(top, first * top)
 
-    def fit(rows: ReadingData, like: Fit | None = None) -> LegCurve:
-        found = fit_curve(rows, like=like)
-        shifts = _shifts(found, rows, calibration)
-        return leg_curve(found, scale, temperature_degC=temperature_degC, shifts=shifts, again=fit)
+    def curve(fit: Fit, rows: ReadingData) -> LegCurve:
+        shifts = _shifts(fit, rows, calibration)
+        return leg_curve(fit, scale, temperature_degC=temperature_degC, shifts=shifts, again=again)
 
-    return fit(data, None if like is None else like.fit)
+    def again(rows: ReadingData, fit: Fit | None) -> LegCurve:
+        return curve(fit_curve(rows) if fit is None else fit_again(rows, fit), rows)
+
+    return curve(fit_curve(data, like=None if like is None else like.fit), data)
 
 
 def _shifts(fit: Fit, data: ReadingData, calibration: Calibration) -> Mapping[str, FloatArray]:

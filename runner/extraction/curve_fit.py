@@ -15,7 +15,8 @@ from runner.extraction.curve_data import FitData, Noise
 from runner.extraction.curve_model import CurveModel
 from runner.extraction.evidence import Problem
 from runner.extraction.fitted import Fit, Rival, Way, hyper_of, left_over, priors, problem_at
-from runner.extraction.law_fit import deviate, law_alone, pilots
+from runner.extraction.law_fit import deviate, go_on, law_alone, pilots
+from runner.extraction.laws import LAWS
 
 BAD = 1.5  # what is left over, as a multiple of the best fit's, that is no fit
 MOST = 5  # laws that are given a deviation: those that come nearest by themselves
@@ -31,12 +32,12 @@ def fit_curve(data: FitData, *, like: Fit | None = None) -> Fit:
         data: ramps or readings of one part at one temperature.
         like: fit of the same part at another temperature; laws that were out of the question there are not tried.
     """
-    known = [] if like is None else [rival for rival in like.rivals if rival.weight > WORTH]
-    starts = [(rival.law, rival.parameters) for rival in known] or pilots(data)
+    known = () if like is None else tuple(rival.law for rival in like.rivals if rival.weight > WORTH)
+    starts = pilots(data, known or LAWS)
     alone = sorted((law_alone(law, data, start) for law, start in starts), key=lambda fit: -fit.evidence)
     fits: list[Fit] = []
     for fit in alone[:MOST]:
-        if fits and _best(fits).evidence - fit.evidence > OUT and _needs_little(_best(fits), alone[0]):
+        if fits and _is_right(_best(fits), alone[0]) and _best(fits).evidence - fit.evidence > OUT:
             break  # a law that is right leaves nothing to do better to one that is far from it by itself
         fits.append(_best([fit, deviate(fit)]))
     best = _best(fits)
@@ -45,8 +46,17 @@ def fit_curve(data: FitData, *, like: Fit | None = None) -> Fit:
     return replace(best, rivals=tuple(_rivals(fits, best)))
 
 
-def _needs_little(best: Fit, alone: Fit) -> bool:
-    return best.evidence - alone.evidence < LITTLE
+def fit_again(data: FitData, fit: Fit) -> Fit:
+    """The fit of rows that differ little from those of ``fit``: the same law, and what was thought of the others."""
+    found = go_on(fit, data)
+    if left_over(found) > BAD * max(1.0, left_over(fit)):
+        return fit_curve(data)
+    return replace(found, rivals=fit.rivals)
+
+
+def _is_right(best: Fit, alone: Fit) -> bool:
+    """A law that describes the rows and gains next to nothing by a deviation."""
+    return left_over(best) < BAD and best.evidence - alone.evidence < LITTLE
 
 
 def _best(fits: Sequence[Fit]) -> Fit:
@@ -60,7 +70,7 @@ def _rivals(fits: Sequence[Fit], best: Fit) -> Iterator[Rival]:
     odds = np.exp([fit.evidence - best.evidence for fit in arrived])
     for fit, weight in zip(arrived, odds / odds.sum(), strict=True):
         ratio = fit.shape.inductance / best.shape.inductance
-        yield Rival(fit.model.law, float(weight), ratio, fit.z[: fit.model.law.parameters])
+        yield Rival(fit.model.law, float(weight), ratio)
 
 
 def refit(fit: Fit, data: FitData, turns: int = 3) -> Fit:

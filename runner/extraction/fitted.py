@@ -22,12 +22,11 @@ FIXED = 1e10  # inverse variance of a parameter that stands at its end
 
 @dataclass(frozen=True, slots=True)
 class Rival:
-    """A law that was tried: its ``weight`` among all, ``ratio`` [GRID] of its L(i) to the best law's, and its parameters."""
+    """A law that was tried: its ``weight`` among all, and the ``ratio`` [GRID] of its L(i) to the best law's."""
 
     law: Law
     weight: float
     ratio: FloatArray
-    parameters: FloatArray
 
 
 @dataclass(frozen=True, slots=True)

@@ -5,7 +5,7 @@ problem linearised about the present curve (`evidence.py`), looking in many plac
 to explain what is left over; (2) descend to the best curve for these.
 """
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from functools import partial
 
 import numpy as np
@@ -17,8 +17,17 @@ from runner.extraction.curve_model import BEYOND, CurveModel, running_integral
 from runner.extraction.descent import descend
 from runner.extraction.deviation import KNOTS
 from runner.extraction.evidence import Problem
-from runner.extraction.fitted import LEAST_FLOOR, Fit, Way, finish_at, priors, problem_at, problem_inside
-from runner.extraction.laws import LAWS, PRIOR_MEAN, PRIOR_SIGMA, Law
+from runner.extraction.fitted import (
+    LEAST_FLOOR,
+    Fit,
+    Way,
+    finish_at,
+    hyper_of,
+    priors,
+    problem_at,
+    problem_inside,
+)
+from runner.extraction.laws import PRIOR_MEAN, PRIOR_SIGMA, Law
 
 ALONE = np.array([-9.0, -1.2, 0.0, -9.0])  # hyperparameters of a law without a deviation
 # Where the evidence is looked for first.
@@ -38,9 +47,9 @@ REFRESHED = 2  # turns at which the noise of λ, which reaches the current throu
 HELD = 0.2  # standard deviation about the best parameters of the law alone, once the deviation has joined
 
 
-def pilots(data: FitData) -> list[tuple[Law, FloatArray]]:
-    """Laws that come near some of the rows by themselves, and with which parameters."""
-    looks = [(law, *_pilot(law, data)) for law in LAWS]
+def pilots(data: FitData, laws: Sequence[Law]) -> list[tuple[Law, FloatArray]]:
+    """Those of the laws that come near some of the rows by themselves, and with which parameters."""
+    looks = [(law, *_pilot(law, data)) for law in laws]
     nearest = min(cost for _, _, cost in looks)
     return [(law, parameters) for law, parameters, cost in looks if cost < NEAR * nearest]
 
@@ -105,13 +114,23 @@ def law_alone(law: Law, data: FitData, start: FloatArray) -> Fit:
 
 def deviate(alone: Fit) -> Fit:
     """From the law alone on to the best curve with a deviation."""
-    law, data, model, z = alone.model.law, alone.data, alone.model, alone.z
+    data = alone.data
+    noise = 0.0 if data.noise_known else float(np.log(alone.inflation))
+    return _evolve(alone, data, np.array([*GENERIC[:2], noise, GENERIC[3]]))
+
+
+def go_on(fit: Fit, data: FitData) -> Fit:
+    """From a fit to that of rows that differ little from its own."""
+    return _evolve(fit, data, hyper_of(fit))
+
+
+def _evolve(fit: Fit, data: FitData, hyper: FloatArray) -> Fit:
+    law, model, z = fit.model.law, fit.model, fit.z
     split = law.parameters
     mean, prior = priors(law, data)
     # Law and deviation moving far in opposite directions would be a long way round to the same curve.
     mean[:split] = z[:split]
     prior[:split] = np.maximum(prior[:split], HELD**-2.0)
-    hyper = GENERIC if data.noise_known else np.array([*GENERIC[:2], np.log(alone.inflation), GENERIC[3]])
     for turn in range(TURNS):
         if turn < REFRESHED:
             noise = data.noise(data.inductance_at_rows(model, model.plain_shape(z[: model.parameters]), z))

@@ -8,7 +8,7 @@ from runner.arrays import FloatArray
 from runner.extraction.calibration import Calibration
 from runner.extraction.curve import LegCurve, Scale, leg_curve
 from runner.extraction.curve_data import CurveData, lay_out
-from runner.extraction.curve_fit import fit_curve
+from runner.extraction.curve_fit import fit_again, fit_curve
 from runner.extraction.fitted import Fit
 from runner.extraction.ramp import Ramp
 
@@ -39,12 +39,14 @@ def pulse_leg(
     )
     scale = Scale(data.scales.current, data.scales.flux)
 
-    def fit(rows: CurveData, like: Fit | None = None) -> LegCurve:
-        found = fit_curve(rows, like=like)
-        shifts = constant_shifts(found, rows, calibration, resistance_uncertainty)
-        return leg_curve(found, scale, temperature_degC=temperature_degC, shifts=shifts, again=fit)
+    def curve(fit: Fit, rows: CurveData) -> LegCurve:
+        shifts = constant_shifts(fit, rows, calibration, resistance_uncertainty)
+        return leg_curve(fit, scale, temperature_degC=temperature_degC, shifts=shifts, again=again)
 
-    return fit(data, None if like is None else like.fit)
+    def again(rows: CurveData, fit: Fit | None) -> LegCurve:
+        return curve(fit_curve(rows) if fit is None else fit_again(rows, fit), rows)
+
+    return curve(fit_curve(data, like=None if like is None else like.fit), data)
 
 
 def constant_shifts(
