@@ -31,9 +31,8 @@ def at_one_temperature(legs: Sequence[LegCurve], *, kind: str) -> list[LegCurve]
     if len(legs) < 2:
         return brought
     far = max(float(np.ptp(leg.fit.data.temperatures)) for leg in legs)
-    for _ in range(
-        1 if far < FAR else 2
-    ):  # legs far from one temperature do not quite say how the curve moves with it
+    # Legs far from one temperature do not quite say how the curve moves with it: those once brought say it better.
+    for _ in range(1 if far < FAR else 2):
         surface = Surface(brought, kind=kind)
         brought = [brought_by(surface, leg) for leg in legs]
     return brought

@@ -133,9 +133,8 @@ class Problem:
         h[np.diag_indices(len(right))] += self.unit_prior
         # LAPACK by name: a thousand of these are done a fit, and the general routines' checks cost more than the work.
         root, info = dpotrf(h, lower=1, clean=1)
-        if (
-            info != 0
-        ):  # rows so quiet that rounding makes it indefinite: a part in 1e10 of each diagonal is no loss
+        if info != 0:
+            # Rows so quiet that rounding makes it indefinite: a part in 1e10 of each diagonal is no loss.
             h[np.diag_indices(len(right))] *= 1.0 + 1e-10
             h += np.diag(np.full(len(right), 1e-10 * float(np.diag(h).max())))
             root, info = dpotrf(h, lower=1, clean=1)
