@@ -83,9 +83,9 @@ class Branches:
         }
 
 
-def compare_branches(up: LegCurve, down: LegCurve, *, lowest: float = 0.0) -> Branches:
-    """Over the currents from ``lowest`` [A] to the largest that both have."""
-    current = np.linspace(lowest, min(up.top, down.top), POINTS)
+def compare_branches(up: LegCurve, down: LegCurve) -> Branches:
+    """Over the currents from zero to the largest that both have."""
+    current = np.linspace(0.0, min(up.top, down.top), POINTS)
     values, variance = [], np.zeros(POINTS)
     for leg in (up, down):
         values.append(np.interp(current, leg.current, leg.inductance))

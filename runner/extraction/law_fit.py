@@ -39,6 +39,7 @@ PLACES = np.array(
     ]
 )
 GENERIC = np.array([-1.5, -1.2, 0.0, -5.0])  # where a deviation starts from
+LEAST_NOISE = 0.0  # log of the noise's factor: rows are not quieter than they are said to be
 NEAR = 300.0  # of what the nearest law leaves over: laws beyond that are not tried
 LAW_TURNS, LAW_STEPS = 3, 30
 FAR = 4.0  # residuals this many times the noise: the law alone does not describe the part
@@ -145,7 +146,7 @@ def _evolve(fit: Fit, data: FitData, hyper: FloatArray) -> Fit:
         x = _settle(model, data.linearise, noise, x, to_z, mean, unit, inflation, STEPS)
         z = to_z @ x
         problem, *_ = problem_inside(model, data, z, noise, mean, prior, hyper)
-        other = _anywhere(problem, hyper, 0.0)
+        other = _anywhere(problem, hyper)
         if problem.evidence(other) > problem.evidence(hyper) - 0.5 and turn >= REFRESHED - 1:
             break
         hyper = other
@@ -203,11 +204,11 @@ def _settle(
     return descend(rows, slopes, x, low=low, steps=steps)
 
 
-def _anywhere(problem: Problem, hyper: FloatArray, least: float) -> FloatArray:
+def _anywhere(problem: Problem, hyper: FloatArray) -> FloatArray:
     """The hyperparameters of largest evidence, looked for from the best of `PLACES` and the present ones."""
     places = np.vstack([hyper, PLACES])
-    places[:, 2] = np.maximum(hyper[2], least)
+    places[:, 2] = np.maximum(hyper[2], LEAST_NOISE)
     if not problem.noise_known:
         places = np.vstack([places + factor * np.eye(4)[2] for factor in (0.0, -2.0, -4.0, 2.0)])
     best = min(places, key=problem.evidence)
-    return problem.best_hyper(best, 0.5, least=least, most=80)
+    return problem.best_hyper(best, 0.5, least=LEAST_NOISE, most=80)
